@@ -1,0 +1,159 @@
+"""Cycles, conservation laws and the affinity of emergent cycles, by exact integer elimination.
+
+A cycle is a combination of reactions that changes nothing; energies must sum to zero along each (the first law). Null
+vectors that appear only when held species lose their rows are emergent cycles: the drive (Polettini & Esposito,
+J. Chem. Phys. 141:024117, 2014).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from math import gcd
+
+import numpy as np
+from numpy.typing import NDArray
+
+Vector = NDArray[np.int64]
+CLOSURE_TOLERANCE = 1e-6  # kJ/mol; energies that sum to less along a cycle close it
+
+
+def dependencies(rows: NDArray[np.int64]) -> Vector:
+    """Every linear dependency among integer rows: an exact basis of the left null space.
+
+    rows : int64, shape=(n, m). Returns int64, shape=(k, n), smallest whole numbers; each dependency expresses one row
+    by independent rows before it, so the basis is unique for an order of rows.
+    """
+    n = rows.shape[0]
+    pivots: dict[int, tuple[dict[int, int], dict[int, int]]] = {}
+    found: list[dict[int, int]] = []
+    for i in range(n):
+        row = {int(j): int(rows[i, j]) for j in np.flatnonzero(rows[i])}
+        mix = {i: 1}
+        while row:
+            column = min(row)
+            if column not in pivots:
+                pivots[column] = (row, mix)
+                break
+            pivot, pivot_mix = pivots[column]
+            a, b = pivot[column], row[column]
+            row, mix = _combine(row, a, pivot, -b), _combine(mix, a, pivot_mix, -b)
+            divisor = gcd(*row.values(), *mix.values())
+            if divisor > 1:
+                row = {k: v // divisor for k, v in row.items()}
+                mix = {k: v // divisor for k, v in mix.items()}
+        else:
+            divisor = gcd(*mix.values()) * (1 if mix[i] > 0 else -1)
+            found.append({k: v // divisor for k, v in mix.items()})
+    basis = np.zeros((len(found), n), dtype=np.int64)
+    for k, mix in enumerate(found):
+        for i, value in mix.items():
+            basis[k, i] = value
+    return basis
+
+
+def _combine(x: dict[int, int], a: int, y: dict[int, int], b: int) -> dict[int, int]:
+    out = {k: a * v for k, v in x.items()}
+    for k, v in y.items():
+        value = out.get(k, 0) + b * v
+        if value:
+            out[k] = value
+        else:
+            out.pop(k, None)
+    return out
+
+
+def cycles(stoichiometry: NDArray[np.int64]) -> Vector:
+    """Basis of the combinations of reactions that change no species.
+
+    stoichiometry : int64, shape=(species, reactions). Returns int64, shape=(cycles, reactions).
+    """
+    return dependencies(np.ascontiguousarray(stoichiometry.T))
+
+
+def conservation_laws(stoichiometry: NDArray[np.int64]) -> Vector:
+    """Basis of the conserved sums of counts, with non-negative weights where adding laws achieves it.
+
+    stoichiometry : int64, shape=(species, reactions). Returns int64, shape=(laws, species).
+    """
+    laws = [law if law.sum() >= 0 else -law for law in dependencies(stoichiometry)]
+    for _ in range(len(laws)):
+        for k, law in enumerate(laws):
+            if (law < 0).any():
+                laws[k] = _lift(law, [other for j, other in enumerate(laws) if j != k])
+    return np.array(laws, dtype=np.int64).reshape(len(laws), stoichiometry.shape[0])
+
+
+def _lift(law: Vector, others: list[Vector]) -> Vector:
+    """`law` plus whatever multiples of other laws rid it of negative weights, if any of them does."""
+    candidates = [law, -law]
+    for sign in (law, -law):
+        for other in others:
+            if (other < 0).any():
+                continue
+            negative = sign < 0
+            if not (other[negative] > 0).all():
+                continue
+            times = int(np.max(-(sign[negative] // other[negative]))) if negative.any() else 0
+            candidates.append(sign + times * other)
+    best = min(candidates, key=lambda v: (int((v < 0).sum()), int(np.abs(v).sum())))
+    divisor = gcd(*(int(v) for v in best)) or 1
+    return best // divisor
+
+
+@dataclass(frozen=True)
+class OpenCycle:
+    """A cycle whose energies do not sum to zero.
+
+    Attributes: reactions : int64, shape=(reactions,), how often each is run; excess : kJ/mol, the sum found.
+    """
+
+    reactions: Vector
+    excess: float
+
+
+def unclosed_cycles(stoichiometry: NDArray[np.int64], dG0: NDArray[np.float64]) -> list[OpenCycle]:
+    """The cycles along which dG0' does not sum to zero within CLOSURE_TOLERANCE.
+
+    stoichiometry : shape=(species, reactions), held species included, water left out; dG0 : kJ/mol.
+    """
+    found = []
+    for vector in cycles(stoichiometry):
+        excess = float(vector @ dG0)
+        if abs(excess) > CLOSURE_TOLERANCE * max(1, int(np.abs(vector).sum())):
+            found.append(OpenCycle(vector, excess))
+    return found
+
+
+def emergent_cycles(stoichiometry: NDArray[np.int64], held: NDArray[np.bool_]) -> Vector:
+    """Cycles over the free species that turn over held ones: a basis that completes the ordinary cycles.
+
+    stoichiometry : shape=(species, reactions); held : shape=(species,). Returns shape=(emergent, reactions).
+    """
+    closed = cycles(stoichiometry)
+    rank = len(closed)
+    kept: list[Vector] = []
+    for vector in cycles(stoichiometry[~held]):
+        trial = np.vstack([closed, *[k[None] for k in kept], vector[None]])
+        if trial.shape[0] - len(dependencies(trial)) > rank:
+            kept.append(vector)
+            rank += 1
+    return np.array(kept, dtype=np.int64).reshape(len(kept), stoichiometry.shape[1])
+
+
+def reconciled(
+    stoichiometry: NDArray[np.int64], dG0: NDArray[np.float64], sd: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Energies nearest to `dG0` that close every cycle: weighted least squares on the closure constraints.
+
+    dG0, sd : kJ/mol, shape=(reactions,); an energy with a small sd moves little, one with sd = 0 not at all.
+    Raises ValueError when the energies with sd = 0 alone leave a cycle open.
+    """
+    basis = cycles(stoichiometry).astype(float)
+    if not len(basis):
+        return dG0.copy()
+    weighted = basis * sd**2
+    multipliers, *_ = np.linalg.lstsq(weighted @ basis.T, basis @ dG0, rcond=None)
+    moved = dG0 - weighted.T @ multipliers
+    if np.max(np.abs(basis @ moved)) > CLOSURE_TOLERANCE:
+        raise ValueError("the energies that may not move leave a cycle open")
+    return np.asarray(moved)

@@ -1,0 +1,275 @@
+"""From the text of a system file to a System: every problem is collected, then raised as one InputError."""
+
+from __future__ import annotations
+
+import math
+import tomllib
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.special import ndtr
+
+from driblet.energetics.cycles import OpenCycle, unclosed_cycles
+from driblet.errors import InputError, Problem, one_problem
+from driblet.quantities import QuantityError, copies_per_molar
+from driblet.system.equation import NAME, RESERVED, EquationError, read_equation
+from driblet.system.expressions import ExpressionError, read_expression
+from driblet.system.model import Compartment, Conditions, Reaction, Readout, RunSettings, Species, System
+from driblet.system.reactions import ReactionReader
+from driblet.system.tables import (
+    SECTIONS,
+    CompartmentTable,
+    ConditionsTable,
+    EnergiesTable,
+    RunTable,
+    SpeciesTable,
+    SpreadTable,
+    read_table,
+    unknown_key,
+)
+
+LARGEST_COUNT = 2.0**53
+SMALLEST_INNER_SHARE = 1e-6
+HDF5_MAGIC = b"\x89HDF\r\n\x1a\n"
+
+
+def load(path: str | Path) -> System:
+    """Read and validate a system file. Raises InputError with every problem found."""
+    source = str(path)
+    try:
+        data = Path(path).read_bytes()
+    except OSError as error:
+        raise one_problem(source, "", f"cannot be read: {(error.strerror or str(error)).lower()}") from error
+    if data.startswith(HDF5_MAGIC):
+        raise one_problem(source, "", f"is an HDF5 file, not a system file: look at it with `driblet show {source}`")
+    try:
+        text = data.decode("utf-8")
+    except UnicodeDecodeError as error:
+        raise one_problem(source, "", "is not text in UTF-8, so it is no system file") from error
+    return loads(text, source)
+
+
+def loads(text: str, source: str = "system file") -> System:
+    """Read and validate the text of a system file. Raises InputError with every problem found."""
+    if not text.strip():
+        raise one_problem(source, "", "is empty; `driblet new` writes a commented starter file")
+    try:
+        raw = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        reason = str(error)
+        if "overwrite" in reason or "declare" in reason or "twice" in reason:
+            reason += "; each name may be given once"
+        raise one_problem(source, "", f"is not valid TOML: {reason[0].lower()}{reason[1:]}") from error
+    builder = _Builder(raw, text, source)
+    system = builder.build()
+    if builder.problems or system is None:
+        raise InputError(source, builder.problems)
+    return system
+
+
+class _Builder:
+    def __init__(self, raw: Mapping[str, Any], text: str, source: str) -> None:
+        self.raw, self.text, self.source = raw, text, source
+        self.problems: list[Problem] = []
+
+    def problem(self, key: str, text: str) -> None:
+        self.problems.append(Problem(key, text))
+
+    def build(self) -> System | None:
+        for key in self.raw:
+            if key not in SECTIONS:
+                self.problem(key, unknown_key(key, list(SECTIONS)))
+        title = self.raw.get("title", Path(self.source).stem)
+        if not isinstance(title, str) or not title.strip():
+            self.problem("title", "a text in quotes is needed")
+        conditions = self.conditions()
+        compartment = self.compartment()
+        run = read_table(RunTable, self.raw.get("run", {}), "run", self.problems)
+        species = self.species(run.loading if run else "nearest", compartment)
+        reactions = self.reactions(conditions)
+        readouts = self.readouts()
+        settings = self.settings(run)
+        if self.problems or not (conditions and compartment and settings):
+            return None
+        self.check_closure(species, reactions)
+        return System(
+            title.strip(), conditions, compartment, tuple(species), tuple(reactions), tuple(readouts), settings,
+            self.text, self.source,
+        )  # fmt: skip
+
+    def section(self, name: str, required: bool) -> Mapping[str, Any]:
+        """The named tables of a section whose keys are the user's own names."""
+        value = self.raw.get(name, {})
+        if not isinstance(value, Mapping):
+            self.problem(name, f"a table of named entries is needed, not {value!r}")
+            return {}
+        if required and not value:
+            self.problem(name, "is missing or empty; at least one entry is needed")
+        for entry in value:
+            if not NAME.fullmatch(entry) or not entry.isascii():
+                self.problem(
+                    f'{name}."{entry}"', "is not a name: a letter, then letters, digits or underscores "
+                    '(label = "..." sets what figures show)',
+                )  # fmt: skip
+        return value
+
+    def conditions(self) -> Conditions | None:
+        table = read_table(ConditionsTable, self.raw.get("conditions", {}), "conditions", self.problems)
+        return table and Conditions(table.temperature, table.pH, table.pMg, table.ionic_strength)
+
+    def compartment(self) -> Compartment | None:
+        section = self.section("compartments", required=True)
+        if len(section) > 1:
+            self.problem("compartments", f"{len(section)} are given; this version simulates exactly one")
+        if not section:
+            return None
+        name, value = next(iter(section.items()))
+        path = f"compartments.{name}"
+        table = read_table(CompartmentTable, value, path, self.problems)
+        if table is None:
+            return None
+        if (table.volume is None) == (table.diameter is None):
+            self.problem(path, 'exactly one of diameter ("200 nm") and volume ("4.2 aL") is needed')
+            return None
+        if table.volume is not None:
+            if table.wall is not None:
+                self.problem(f"{path}.wall", "a wall goes with a diameter; a volume is already the inner one")
+            volume = self.measure(table.volume, "volume", f"{path}.volume")
+            return Compartment(name, volume, table.volume.cv) if volume else None
+        assert table.diameter is not None
+        diameter = self.measure(table.diameter, "length", f"{path}.diameter")
+        if not diameter:
+            return None
+        wall = table.wall or 0.0
+        if diameter <= 2 * wall:
+            self.problem(f"{path}.wall", "two walls leave no room inside this diameter")
+            return None
+        sigma = math.sqrt(math.log1p(table.diameter.cv**2))
+        if sigma and wall and ndtr(math.log(2 * wall / diameter) / sigma) > SMALLEST_INNER_SHARE:
+            self.problem(f"{path}.diameter.cv", "is so wide that some compartments would be all wall")
+            return None
+        volume = math.pi / 6 * (diameter - 2 * wall) ** 3 * 1000.0
+        return Compartment(name, volume, table.diameter.cv, diameter, wall)
+
+    def measure(self, spread: SpreadTable, kind: str, path: str) -> float | None:
+        try:
+            value = spread.median.to(kind)
+        except QuantityError as error:
+            self.problem(path, str(error))
+            return None
+        if value <= 0:
+            self.problem(path, f'"{spread.median}" leaves no room; it must be above zero')
+            return None
+        if kind == "volume" and copies_per_molar(value) < 1e-6:
+            self.problem(path, f'"{spread.median}" is smaller than any molecule')
+            return None
+        return value
+
+    def species(self, default_loading: str, compartment: Compartment | None) -> list[Species]:
+        species = []
+        for name, value in self.section("species", required=True).items():
+            path = f"species.{name}"
+            if name in RESERVED:
+                hint = "water is the solvent: write H2O in equations only" if name == "H2O" else "is a reserved word"
+                self.problem(path, hint)
+                continue
+            short = not isinstance(value, Mapping)
+            faults: list[Problem] = []
+            table = read_table(SpeciesTable, {"amount": value} if short else value, path, faults)
+            self.problems += [Problem(path if short else p.key, p.text) for p in faults]
+            if table is None:
+                continue
+            loading = table.loading or default_loading
+            copies = table.amount.to("copies") if table.amount.kind == "copies" else None
+            concentration = None if copies is not None else table.amount.to("concentration")
+            if table.held and copies is not None:
+                self.problem(path, "a held species has a fixed concentration: give one, not copies")
+            if table.held and concentration == 0:
+                self.problem(path, "a species held at zero would stop its reactions one way; leave it out")
+            if copies is not None and loading == "nearest" and copies != round(copies):
+                self.problem(path, f'"{table.amount}" is fractional: only loading = "poisson" takes it as a mean')
+            omega = compartment.omega if compartment else 1.0
+            if not table.held and (copies if copies is not None else concentration * omega) > LARGEST_COUNT:  # type: ignore[operator]
+                self.problem(path, f'"{table.amount}" is more than 2^53 copies, too many to count')
+            species.append(Species(name, table.label or name, concentration, copies, table.held, loading))
+        return species
+
+    def reactions(self, conditions: Conditions | None) -> list[Reaction]:
+        energies = read_table(EnergiesTable, self.raw.get("energies", {}), "energies", self.problems)
+        species = self.raw.get("species", {})
+        held = {n for n, v in species.items() if isinstance(v, Mapping) and v.get("held") is True} if isinstance(
+            species, Mapping) else set()  # fmt: skip
+        reader = ReactionReader(set(species) if isinstance(species, Mapping) else set(), held, conditions, self.problems)
+        if energies is not None:
+            reader.read_energies(energies)
+        found = (reader.read(name, value) for name, value in self.section("reactions", required=True).items())
+        return [reaction for reaction in found if reaction is not None]
+
+    def readouts(self) -> list[Readout]:
+        readouts = []
+        species, reactions = self.raw.get("species", {}), self.raw.get("reactions", {})
+        one_way = set()
+        for name, value in reactions.items() if isinstance(reactions, Mapping) else ():
+            try:
+                if isinstance(value, Mapping) and not read_equation(str(value.get("equation"))).reversible:
+                    one_way.add(name)
+            except EquationError:
+                continue
+        for name, value in self.section("readouts", required=False).items():
+            path = f"readouts.{name}"
+            if not isinstance(value, str):
+                self.problem(path, f"an expression in quotes is needed, not {value!r}")
+                continue
+            try:
+                expression = read_expression(value, list(species), [r for r in reactions if r not in one_way])
+                readouts.append(Readout(name, expression))
+            except ExpressionError as error:
+                self.problem(path, str(error))
+        return readouts
+
+    def settings(self, run: RunTable | None) -> RunSettings | None:
+        if run is None:
+            return None
+        duration = run.duration or 0.0
+        sample_every = run.sample_every or 0.0
+        if duration and sample_every > duration:
+            self.problem("run.sample_every", "is longer than the run")
+        return RunSettings(run.engine, run.replicates, duration, sample_every, run.seed)
+
+    def check_closure(self, species: list[Species], reactions: list[Reaction]) -> None:
+        reversible = [r for r in reactions if r.dG0_kJ_per_mol is not None]
+        matrix = stoichiometric_matrix([s.name for s in species], reversible)
+        for cycle in unclosed_cycles(matrix, np.array([r.dG0_kJ_per_mol for r in reversible], dtype=float)):
+            self.problem("reactions", describe_open_cycle(cycle, [r.name for r in reversible], self.source))
+
+
+def stoichiometric_matrix(species: list[str], reactions: list[Reaction]) -> NDArray[np.int64]:
+    """Net stoichiometric numbers, int64, shape=(species, reactions); water has no row."""
+    row = {name: i for i, name in enumerate(species)}
+    matrix = np.zeros((len(species), len(reactions)), dtype=np.int64)
+    for j, reaction in enumerate(reactions):
+        for name, number in reaction.equation.change.items():
+            matrix[row[name], j] = number
+    return matrix
+
+
+def describe_cycle(weights: NDArray[np.int64], names: list[str]) -> str:
+    """A cycle as text: "relay + leak - 2 shunt"."""
+    text = ""
+    for weight, name in zip(weights, names, strict=True):
+        if weight:
+            number = f"{abs(weight)} " if abs(weight) > 1 else ""
+            sign = (" - " if weight < 0 else " + ") if text else ("-" if weight < 0 else "")
+            text += f"{sign}{number}{name}"
+    return text
+
+
+def describe_open_cycle(cycle: OpenCycle, names: list[str], source: str) -> str:
+    """The message for a cycle whose energies do not sum to zero."""
+    return (
+        f"the energies along the cycle {describe_cycle(cycle.reactions, names)} sum to {cycle.excess:+.6g} kJ/mol "
+        f"where they must sum to zero; `driblet reconcile {source}` shows the nearest energies that do"
+    )

@@ -1,0 +1,154 @@
+"""A system as plain frozen values: what `load` returns and everything downstream reads. Units are in the names."""
+
+from __future__ import annotations
+
+import html
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+from driblet.quantities import copies_per_molar, thermal_energy
+from driblet.system.equation import Equation
+from driblet.system.expressions import Expression
+
+
+@dataclass(frozen=True)
+class Conditions:
+    """Conditions at which the stated energies hold; only the temperature enters a calculation."""
+
+    temperature_K: float
+    pH: float | None = None
+    pMg: float | None = None
+    ionic_strength_M: float | None = None
+
+    @property
+    def RT_kJ_per_mol(self) -> float:
+        """Thermal energy, kJ/mol."""
+        return thermal_energy(self.temperature_K)
+
+
+@dataclass(frozen=True)
+class Compartment:
+    """A compartment whose size may differ between replicates (lognormal).
+
+    Attributes: volume_L : of the median compartment, wall taken off; cv : coefficient of variation of the diameter
+    (`by_diameter`) or of the volume; diameter_m, wall_m : outer diameter of the median compartment and wall thickness.
+    """
+
+    name: str
+    volume_L: float
+    cv: float = 0.0
+    diameter_m: float | None = None
+    wall_m: float = 0.0
+
+    @property
+    def by_diameter(self) -> bool:
+        """Whether the spread is one of diameters."""
+        return self.diameter_m is not None
+
+    @property
+    def omega(self) -> float:
+        """N_A V of the median compartment: copies per mol/L."""
+        return copies_per_molar(self.volume_L)
+
+
+@dataclass(frozen=True)
+class Species:
+    """A species and its load: a concentration in mol/L or a number of copies, exactly one; held: a concentration."""
+
+    name: str
+    label: str
+    concentration_M: float | None
+    copies: float | None
+    held: bool = False
+    loading: str = "nearest"
+
+    def mean_copies(self, omega: float) -> float:
+        """Mean copies in a compartment of `omega` copies per mol/L."""
+        return self.copies if self.copies is not None else (self.concentration_M or 0.0) * omega
+
+
+@dataclass(frozen=True)
+class Reaction:
+    """A reaction whose reverse rate its energy has fixed.
+
+    Attributes: dG0_kJ_per_mol : dG0', None for one way; K : exp(-dG0'/RT) relative to 1 mol/L; forward, backward : rate
+    constants in (mol/L)^(1-m)/s of v = k prod [A_i]^nu_i; energy_from : what in the file set dG0'; one_way : the reason.
+    """
+
+    name: str
+    label: str
+    equation: Equation
+    dG0_kJ_per_mol: float | None
+    K: float | None
+    forward: float
+    backward: float | None
+    energy_from: str
+    energy_sd_kJ_per_mol: float | None = None
+    one_way: str | None = None
+
+
+@dataclass(frozen=True)
+class Readout:
+    """A named expression of counts, concentrations or a reaction's momentary Gibbs energy."""
+
+    name: str
+    expression: Expression
+
+
+@dataclass(frozen=True)
+class RunSettings:
+    """How a system is run unless the caller says otherwise."""
+
+    engine: str = "exact"
+    replicates: int = 100
+    duration_s: float = 0.0
+    sample_every_s: float = 0.0
+    seed: int = 0
+
+
+@dataclass(frozen=True)
+class System:
+    """A validated, immutable description of one compartment and what happens in it.
+
+    Attributes: title, conditions, compartment, species, reactions, readouts, settings; text : the system file it was read
+    from, kept for provenance; source : its name for messages.
+    """
+
+    title: str
+    conditions: Conditions
+    compartment: Compartment
+    species: tuple[Species, ...]
+    reactions: tuple[Reaction, ...]
+    readouts: tuple[Readout, ...]
+    settings: RunSettings
+    text: str = field(default="", repr=False)
+    source: str = field(default="", repr=False)
+
+    @property
+    def free_species(self) -> tuple[Species, ...]:
+        """The species whose counts change, in the order of the file."""
+        return tuple(s for s in self.species if not s.held)
+
+    @property
+    def held_species(self) -> tuple[Species, ...]:
+        """The chemostatted species."""
+        return tuple(s for s in self.species if s.held)
+
+    def held_concentrations(self) -> Mapping[str, float]:
+        """Fixed concentration of each held species, mol/L."""
+        return {s.name: s.concentration_M or 0.0 for s in self.held_species}
+
+    def __repr__(self) -> str:
+        return f"<driblet System {self.title!r}: {len(self.species)} species, {len(self.reactions)} reactions>"
+
+    def _repr_html_(self) -> str:
+        rows = "".join(
+            f"<tr><td>{html.escape(r.name)}</td><td>{html.escape(str(r.equation))}</td>"
+            f"<td>{'one way' if r.dG0_kJ_per_mol is None else f'{r.dG0_kJ_per_mol:.2f} kJ/mol'}</td></tr>"
+            for r in self.reactions
+        )
+        return (
+            f"<b>{html.escape(self.title)}</b>: {len(self.species)} species in "
+            f"{self.compartment.volume_L * 1e15:.4g} fL<table><tr><th>reaction</th><th>equation</th>"
+            f"<th>ΔG°′</th></tr>{rows}</table>"
+        )

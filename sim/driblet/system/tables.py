@@ -1,0 +1,225 @@
+"""The tables of a system file as pydantic models, and pydantic's complaints as our one-line problems."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping
+from difflib import get_close_matches
+from typing import Annotated, Any, Literal, TypeVar
+
+from pydantic import BaseModel, BeforeValidator, ConfigDict, ValidationError
+from pydantic_core import PydanticCustomError
+
+from driblet.errors import Problem
+from driblet.quantities import Quantity, QuantityError, read_quantity
+
+ENGINES = ("exact",)
+LOADINGS = ("nearest", "poisson")
+
+
+def _complain(text: str) -> PydanticCustomError:
+    return PydanticCustomError("driblet", "{text}", {"text": text})
+
+
+def _of_kind(kind: str, allow_zero: bool = True, allow_negative: bool = False) -> Callable[[object], float]:
+    def read(value: object) -> float:
+        try:
+            number = read_quantity(value).to(kind)
+        except QuantityError as error:
+            raise _complain(str(error)) from error
+        if number < 0 and not allow_negative:
+            raise _complain(f'"{value}" is negative; {kind} cannot be')
+        if number == 0 and not allow_zero:
+            raise _complain(f'"{value}" is zero; a {kind} above zero is needed')
+        return number
+
+    return read
+
+
+def _quantity(value: object) -> Quantity:
+    try:
+        return read_quantity(value)
+    except QuantityError as error:
+        raise _complain(str(error)) from error
+
+
+def _constant(value: object) -> Quantity:
+    try:
+        return read_quantity(value, allow_plain=True)
+    except QuantityError as error:
+        raise _complain(str(error)) from error
+
+
+def _amount(value: object) -> Quantity:
+    quantity = _quantity(value)
+    if quantity.kind not in ("concentration", "copies"):
+        raise _complain(f'"{value}" is no amount: a concentration ("4 mM") or a number ("20 copies") is needed')
+    if quantity.value < 0:
+        raise _complain(f'"{value}" is negative; an amount cannot be')
+    return quantity
+
+
+def _plain(low: float, high: float, what: str) -> Callable[[object], float]:
+    def read(value: object) -> float:
+        if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
+            raise _complain(f"{value!r} is not {what}: a plain number from {low:g} to {high:g} is needed")
+        if not low <= value <= high:
+            raise _complain(f"{value!r} is not {what}: it lies between {low:g} and {high:g}")
+        return float(value)
+
+    return read
+
+
+def _whole(low: int, high: int) -> Callable[[object], int]:
+    def read(value: object) -> int:
+        if isinstance(value, bool) or not isinstance(value, int) or not low <= value <= high:
+            raise _complain(f"{value!r} will not do: a whole number from {low} to {high} is needed")
+        return value
+
+    return read
+
+
+def _text(value: object) -> str:
+    if not isinstance(value, str) or not value.strip():
+        raise _complain(f"{value!r} will not do: a text in quotes is needed")
+    return value
+
+
+def _one_of(choices: tuple[str, ...]) -> Callable[[object], object]:
+    def read(value: object) -> object:
+        if value not in choices:
+            raise _complain(f"{value!r} is not known here: {' or '.join(repr(c) for c in choices)}".replace("'", '"'))
+        return value
+
+    return read
+
+
+def _engine(value: object) -> object:
+    if value not in ENGINES:
+        raise _complain(f'{value!r} is not an engine of this version: "exact" is'.replace("'", '"'))
+    return value
+
+
+Text = Annotated[str, BeforeValidator(_text)]
+AnyQuantity = Annotated[Quantity, BeforeValidator(_quantity)]
+Constant = Annotated[Quantity, BeforeValidator(_constant)]
+Amount = Annotated[Quantity, BeforeValidator(_amount)]
+Temperature = Annotated[float, BeforeValidator(_of_kind("temperature", allow_zero=False))]
+Time = Annotated[float, BeforeValidator(_of_kind("time", allow_zero=False))]
+Length = Annotated[float, BeforeValidator(_of_kind("length"))]
+Concentration = Annotated[float, BeforeValidator(_of_kind("concentration"))]
+Loading = Annotated[Literal["nearest", "poisson"], BeforeValidator(_one_of(LOADINGS))]
+
+
+class Table(BaseModel):
+    """Base of all tables: unknown keys are errors."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True)
+
+
+class ConditionsTable(Table):
+    temperature: Temperature
+    pH: Annotated[float, BeforeValidator(_plain(0, 14, "a pH"))] | None = None
+    pMg: Annotated[float, BeforeValidator(_plain(-1, 14, "a pMg"))] | None = None
+    ionic_strength: Concentration | None = None
+
+
+class SpreadTable(Table):
+    median: AnyQuantity
+    cv: Annotated[float, BeforeValidator(_plain(0, 3, "a coefficient of variation"))] = 0.0
+
+
+def _as_table(key: str) -> BeforeValidator:
+    """Lets a bare value stand for a table with that one key."""
+    return BeforeValidator(lambda value: value if isinstance(value, dict) else {key: value})
+
+
+class CompartmentTable(Table):
+    volume: Annotated[SpreadTable, _as_table("median")] | None = None
+    diameter: Annotated[SpreadTable, _as_table("median")] | None = None
+    wall: Length | None = None
+
+
+class SpeciesTable(Table):
+    amount: Amount
+    held: Annotated[bool, BeforeValidator(_one_of((True, False)))] = False  # type: ignore[arg-type]
+    loading: Loading | None = None
+    label: Text | None = None
+
+
+class EnergyTable(Table):
+    value: AnyQuantity
+    sd: AnyQuantity | None = None
+
+
+class ReactionTable(Table):
+    equation: Text
+    energy: EnergyTable | Literal["formation", "hydrolysis"] | None = None
+    K: Constant | None = None
+    Kd: AnyQuantity | None = None
+    forward: AnyQuantity | None = None
+    backward: AnyQuantity | None = None
+    one_way: Text | None = None
+    label: Text | None = None
+
+
+class EnergiesTable(Table):
+    formation: dict[str, AnyQuantity] = {}
+    hydrolysis: dict[str, AnyQuantity] = {}
+
+
+class RunTable(Table):
+    engine: Annotated[str, BeforeValidator(_engine)] = "exact"
+    replicates: Annotated[int, BeforeValidator(_whole(1, 10_000_000))] = 100
+    duration: Time | None = None
+    sample_every: Time | None = None
+    loading: Loading = "nearest"
+    seed: Annotated[int, BeforeValidator(_whole(0, 2**63 - 1))] = 0
+
+
+SECTIONS = ("title", "conditions", "compartments", "species", "energies", "reactions", "readouts", "run")
+TableType = TypeVar("TableType", bound=Table)
+
+
+def read_table(model: type[TableType], value: object, path: str, problems: list[Problem]) -> TableType | None:
+    """Validate one table; on failure append a problem per fault and return None."""
+    if not isinstance(value, Mapping):
+        problems.append(Problem(path, f"a table of keys is needed, not {value!r}"))
+        return None
+    try:
+        return model.model_validate(value)
+    except ValidationError as error:
+        for fault in error.errors(include_url=False):
+            problems.append(_problem(model, value, path, fault))
+        return None
+
+
+def _problem(model: type[Table], value: Mapping[str, Any], path: str, fault: Any) -> Problem:
+    location = [str(part) for part in fault["loc"]]
+    if location[-1] == "median" and not isinstance(value.get(location[0]), Mapping):
+        location.pop()  # a bare value stood for the table
+    key = ".".join([path, *location])
+    kind = fault["type"]
+    if kind == "extra_forbidden":
+        return Problem(key, unknown_key(location[-1], _keys_at(model, location[:-1])))
+    if kind == "missing":
+        return Problem(key, "is missing and has no default")
+    if kind == "driblet":
+        return Problem(key, fault["ctx"]["text"])
+    return Problem(key, f"{fault['input']!r} will not do: {fault['msg'][0].lower()}{fault['msg'][1:]}")
+
+
+def _keys_at(model: type[Table], location: list[str]) -> list[str]:
+    for part in location:
+        annotation = model.model_fields[part].annotation if part in model.model_fields else None
+        nested = [t for t in (SpreadTable, EnergyTable) if t.__name__ in repr(annotation)]
+        if nested:
+            model = nested[0]
+    return list(model.model_fields)
+
+
+def unknown_key(key: str, known: list[str]) -> str:
+    """The text for a key that is not one of `known`."""
+    close = get_close_matches(key, known, 1)
+    hint = f'did you mean "{close[0]}"?' if close else f"known here: {', '.join(known)}"
+    return f'"{key}" is not a key here; {hint}'
