@@ -1,0 +1,291 @@
+"""Replicates x threads -> engine -> recorder: seeds, progress, interruption, resuming.
+
+A replicate's result depends on its seed and number alone: not on threads, packing, call size, recording or restarts.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+import platform
+import threading
+import time
+from collections.abc import Callable
+from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any, NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from driblet.errors import DribletError, InterruptedRunError, one_problem
+from driblet.loading import prepare
+from driblet.network import BACKWARD, FORWARD, Network
+from driblet.readouts import evaluate
+from driblet.results import Run
+from driblet.store import FORMAT, Block, Layout, RunWriter
+from driblet.system import RunSettings, System
+from driblet.version import __version__
+
+_BUDGET = 1 << 20  # events an engine fires before it looks up: some 30 ms
+_UNIT_BYTES = 8 << 20
+_POLL_SECONDS = 0.1
+DEFAULT_SAMPLES = 200
+MOST_SAMPLES = 1_000_000
+
+
+class Progress(NamedTuple):
+    """Where a run stands: fraction of the simulated time done, replicates finished and planned, events, seconds."""
+
+    fraction: float
+    finished: int
+    replicates: int
+    events: int
+    seconds: float
+
+
+def sample_times(settings: RunSettings) -> NDArray[np.float64]:
+    """The recording grid in s: every `sample_every` from zero, and the end.
+
+    Raises InputError when duration is missing or the grid is too fine.
+    """
+    duration = settings.duration_s
+    if not duration > 0:
+        raise one_problem("run", "duration", 'is missing: state it, such as duration = "20 min"')
+    every = settings.sample_every_s or duration / DEFAULT_SAMPLES
+    if every > duration:
+        raise one_problem("run", "sample_every", "is longer than the run")
+    if duration / every > MOST_SAMPLES:
+        raise one_problem("run", "sample_every", f"makes more than {MOST_SAMPLES} samples; choose a longer one")
+    times = every * np.arange(int(np.floor(duration / every * (1 + 1e-12))) + 1)
+    if duration - times[-1] > 1e-9 * duration:
+        times = np.append(times, duration)
+    times[-1] = duration
+    return times
+
+
+def run(
+    system: System,
+    output: str | Path | None = None,
+    *,
+    replicates: int | None = None,
+    duration: float | None = None,
+    sample_every: float | None = None,
+    seed: int | None = None,
+    engine: str | None = None,
+    threads: int | None = None,
+    resume: bool = False,
+    force: bool = False,
+    on_progress: Callable[[Progress], None] | None = None,
+) -> Run:
+    """Simulate an ensemble and return it as a Run, in memory or, with `output`, in a run file.
+
+    duration, sample_every : s. What is not given is taken from the system's [run]. With `resume`, finished replicates of an
+    interrupted run are kept; a complete run is returned as it is. Raises InputError for bad settings or an output that is
+    taken, InterruptedRunError after Ctrl-C.
+    """
+    changes = {
+        "replicates": replicates, "duration_s": duration, "sample_every_s": sample_every, "seed": seed, "engine": engine,
+    }  # fmt: skip
+    settings = replace(system.settings, **{k: v for k, v in changes.items() if v is not None})  # type: ignore[arg-type]
+    if settings.replicates < 1:
+        raise one_problem("run", "replicates", "at least 1 is needed")
+    if settings.engine != "exact":
+        raise one_problem("run", "engine", f'"{settings.engine}" is not an engine of this version: "exact" is')
+    times = sample_times(settings)
+    layout = _layout(system, settings, times)
+    path = Path(output) if output is not None else None
+    if path is not None and resume and path.is_file():
+        existing = Run(path)
+        if existing.identity == layout.identity:
+            return existing
+        existing.close()
+        raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
+    writer = RunWriter(path, layout, resume=resume, force=force)
+    file = _Ensemble(system, settings, layout, writer, threads or os.cpu_count() or 1, on_progress).run()
+    return Run(file) if path is None else Run(path)
+
+
+def _layout(system: System, settings: RunSettings, times: NDArray[np.float64]) -> Layout:
+    species, reactions = len(system.free_species), len(system.reactions)
+    row_bytes = 8 * len(times) * max(1, species + 4 * reactions + len(system.readouts))
+    unit = max(1, min(-(-settings.replicates // 64), _UNIT_BYTES // row_bytes))
+    facts = {
+        "engine": settings.engine,
+        "seed": settings.seed,
+        "replicates": settings.replicates,
+        "duration_s": settings.duration_s,
+        "sample_every_s": settings.sample_every_s or settings.duration_s / DEFAULT_SAMPLES,
+    }
+    identity = hashlib.sha256(json.dumps([FORMAT, system.text, facts], sort_keys=True).encode()).hexdigest()[:32]
+    import numba
+
+    provenance = {
+        **facts,
+        "driblet_version": __version__,
+        "numpy_version": np.__version__,
+        "numba_version": numba.__version__,
+        "python_version": platform.python_version(),
+        "source": system.source,
+        "started": time.strftime("%Y-%m-%dT%H:%M:%S%z"),
+        "host_cpu": _cpu_name(),
+    }
+    return Layout(
+        tuple(s.name for s in system.free_species),
+        tuple(r.name for r in system.reactions),
+        tuple(r.name for r in system.readouts),
+        tuple(r.expression.unit for r in system.readouts),
+        times,
+        settings.replicates,
+        unit,
+        identity,
+        system.text,
+        provenance,
+    )
+
+
+def _cpu_name() -> str:
+    try:
+        for line in Path("/proc/cpuinfo").read_text("utf-8").splitlines():
+            if line.startswith("model name"):
+                return line.split(":", 1)[1].strip()
+    except OSError:
+        pass
+    return platform.processor() or platform.machine()
+
+
+@dataclass
+class _Unit:
+    """One unit of replicates while it is simulated; the arrays are read by the main thread for progress only."""
+
+    next_sample: NDArray[np.int64] | None = None
+    events: int = 0
+
+
+class _Ensemble:
+    def __init__(
+        self,
+        system: System,
+        settings: RunSettings,
+        layout: Layout,
+        writer: RunWriter,
+        threads: int,
+        on_progress: Callable[[Progress], None] | None,
+    ) -> None:
+        self.system, self.settings, self.layout, self.writer = system, settings, layout, writer
+        self.threads, self.on_progress = threads, on_progress
+        self.network = Network.of(system)
+        self.stop = threading.Event()
+        self.running: dict[int, _Unit] = {}
+        self.events = 0
+        self.started = time.monotonic()
+
+    def run(self) -> Any:
+        """Simulate every unit that is not done yet; returns what the writer's finish returns."""
+        pending = [u for u in range(self.layout.units) if u not in self.writer.done]
+        finished = sum(len(self._rows(u)) for u in self.writer.done)
+        queue = iter(pending)
+        futures: set[Future[Block]] = set()
+        with ThreadPoolExecutor(max_workers=self.threads) as pool:
+            try:
+                while True:
+                    while len(futures) < self.threads + 1 and (unit := next(queue, None)) is not None:
+                        futures.add(pool.submit(self._simulate, unit))
+                    if not futures:
+                        break
+                    done, futures = wait(futures, timeout=_POLL_SECONDS, return_when=FIRST_COMPLETED)
+                    for future in done:
+                        block = future.result()
+                        self.writer.add(block)
+                        finished += len(block.replicate)
+                    self._report(finished)
+            except KeyboardInterrupt:
+                self._stop(futures)
+                raise InterruptedRunError(self._farewell()) from None
+            except BaseException:
+                self._stop(futures)
+                raise
+        self._report(finished)
+        seconds = time.monotonic() - self.started
+        return self.writer.finish({"wall_time_s": seconds, "threads": self.threads, "events_this_session": self.events})
+
+    def _stop(self, futures: set[Future[Block]]) -> None:
+        self.stop.set()
+        for future in futures:
+            future.cancel()
+        for future in wait(futures).done:
+            if not future.cancelled() and future.exception() is None:
+                self.writer.add(future.result())
+        self.writer.flush()
+
+    def _farewell(self) -> str:
+        path = self.writer.path
+        if path is None:
+            return "interrupted; a run in memory leaves nothing"
+        kept = sum(len(self._rows(u)) for u in self.writer.done)
+        if not kept:
+            return "interrupted before a replicate was finished; nothing was kept"
+        return (
+            f"interrupted: {kept} of {self.layout.replicates} replicates are kept in {path}.parts, "
+            "which every command reads; go on with --resume"
+        )
+
+    def _rows(self, unit: int) -> range:
+        start = unit * self.layout.unit
+        return range(start, min(start + self.layout.unit, self.layout.replicates))
+
+    def _report(self, finished: int) -> None:
+        if self.on_progress is None:
+            return
+        grid = len(self.layout.time_s)
+        units = list(self.running.values())
+        partial = sum(float(u.next_sample.sum()) / grid for u in units if u.next_sample is not None)
+        events = self.events + sum(u.events for u in units)
+        fraction = min(1.0, (finished + partial) / self.layout.replicates)
+        self.on_progress(
+            Progress(fraction, finished, self.layout.replicates, events, time.monotonic() - self.started)
+        )
+
+    def _simulate(self, unit: int) -> Block:
+        """One unit from start to end, in a worker thread."""
+        from driblet.engines.contract import COUNT_OVERFLOW, REASONS, RUNNING, new_samples, new_state
+        from driblet.engines.exact import advance
+
+        watched = self.running[unit] = _Unit()
+        rows = self._rows(unit)
+        start = prepare(self.system, self.settings.seed, rows)
+        rates = self.network.rates(start.omega)
+        state = new_state(start.counts, start.stream, len(self.network.channels))
+        samples = new_samples(self.layout.time_s, len(rows), len(self.network.species), len(self.network.channels))
+        watched.next_sample = state.next_sample
+        while (state.reason == RUNNING).any():
+            if self.stop.is_set():
+                raise InterruptedRunError("interrupted")
+            watched.events += int(advance(self.network.arrays, rates, state, samples, _BUDGET))
+        if (state.reason == COUNT_OVERFLOW).any():
+            r = int(np.flatnonzero(state.reason == COUNT_OVERFLOW)[0])
+            name = self.network.species[int(np.argmax(state.counts[r, :-1]))]
+            raise DribletError(f"replicate {rows[r]}: {REASONS[COUNT_OVERFLOW]} ({name}); the system grows without bound")
+        events = state.firings.sum(axis=1)
+        del self.running[unit]
+        self.events += int(events.sum())
+        return Block(
+            unit, np.array(rows, dtype=np.int64), start.volume_L, state.reason.copy(), events,
+            {
+                "counts": samples.counts,
+                "firings_forward": self._by_reaction(samples.firings, FORWARD),
+                "firings_backward": self._by_reaction(samples.firings, BACKWARD),
+                **{
+                    f"readout_{r.name}": evaluate(self.system, r.expression, samples.counts, start.omega[:, None])
+                    for r in self.system.readouts
+                },
+            },
+        )  # fmt: skip
+
+    def _by_reaction(self, firings: NDArray[np.int64], direction: int) -> NDArray[np.int64]:
+        index = self.network.channel_index(direction)
+        out = firings[..., index]
+        out[..., index < 0] = 0
+        return out

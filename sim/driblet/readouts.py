@@ -1,0 +1,76 @@
+"""Readouts of counts: expressions evaluated over whole arrays of states, the Gibbs energy of the next firing among them.
+
+gibbs(r) is the Gibbs energy of ONE forward transition n -> n + nu: w+(n)/w-(n + nu) = exp(-dG(n)/RT) exactly, so it is
+finite when a product is absent and +inf when a reactant is exhausted.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+from numpy.typing import NDArray
+
+from driblet.system.expressions import Expression, Node, Number, Operation, Reference
+from driblet.system.model import Reaction, System
+
+Array = NDArray[np.float64]
+_ARITHMETIC: dict[str, Callable[[Array, Array], Array]] = {
+    "+": np.add,
+    "-": np.subtract,
+    "*": np.multiply,
+    "/": np.divide,
+}
+
+
+def evaluate(system: System, expression: Expression, counts: NDArray[np.int64], omega: Array) -> Array:
+    """Value of an expression in each state; undefined ratios are NaN, exhausted reactants make gibbs() +inf.
+
+    counts : (..., free species), copies; omega : copies per mol/L, shape that broadcasts against counts[..., 0].
+    """
+    column = {s.name: i for i, s in enumerate(system.free_species)}
+    held = system.held_concentrations()
+
+    def value(node: Node) -> Array:
+        if isinstance(node, Number):
+            return np.asarray(node.value)
+        if isinstance(node, Operation):
+            return _ARITHMETIC[node.operator](value(node.left), value(node.right))
+        return referred(node)
+
+    def referred(node: Reference) -> Array:
+        if node.kind == "gibbs":
+            reaction = next(r for r in system.reactions if r.name == node.name)
+            return transition_energy(system, reaction, counts, omega)
+        n = held[node.name] * omega if node.name in held else counts[..., column[node.name]].astype(float)
+        return np.asarray(n / omega if node.kind == "conc" else n)
+
+    with np.errstate(divide="ignore", invalid="ignore"):
+        result = np.broadcast_to(value(expression.root), np.broadcast_shapes(counts.shape[:-1], np.shape(omega))).copy()
+    if expression.root.dimension != (0, 1):
+        result[~np.isfinite(result)] = np.nan
+    return result
+
+
+def transition_energy(system: System, reaction: Reaction, counts: NDArray[np.int64], omega: Array) -> Array:
+    """dG of the next forward firing of `reaction`, kJ/mol; arguments as for `evaluate`.
+
+    Raises ValueError for a one-way reaction, whose Gibbs energy is undefined.
+    """
+    if reaction.dG0_kJ_per_mol is None:
+        raise ValueError(f"{reaction.name} is one way: its Gibbs energy is undefined")
+    column = {s.name: i for i, s in enumerate(system.free_species)}
+    held = system.held_concentrations()
+    change = reaction.equation.change
+    log_quotient = np.zeros(np.broadcast_shapes(counts.shape[:-1], np.shape(omega)))
+    with np.errstate(divide="ignore"):
+        for sign, terms in ((-1, reaction.equation.reactants), (1, reaction.equation.products)):
+            for name, number in terms:
+                if name in held:
+                    log_quotient = log_quotient + sign * number * np.log(held[name])
+                    continue
+                left = counts[..., column[name]] + (change.get(name, 0) if sign > 0 else 0)
+                for k in range(number):
+                    log_quotient = log_quotient + sign * np.log(np.maximum(left - k, 0) / omega)
+    energy = reaction.dG0_kJ_per_mol + system.conditions.RT_kJ_per_mol * log_quotient
+    return np.where(np.isnan(energy), np.inf, energy)

@@ -1,0 +1,155 @@
+"""A finished or interrupted run, read lazily: numpy arrays by name, an xarray dataset when xarray is there."""
+
+from __future__ import annotations
+
+import html
+import json
+from collections.abc import Mapping
+from functools import cached_property
+from pathlib import Path
+from typing import Any
+
+import h5py
+import numpy as np
+from numpy.typing import NDArray
+
+from driblet.errors import one_problem
+from driblet.store import SERIES, open_run
+from driblet.system import System, loads
+
+
+class Run:
+    """One ensemble of replicates. Nothing is read before it is asked for; arrays have the replicate axis first.
+
+    Open a file with `Run(path)`; `driblet.run` returns one. Use it as a context manager, or call `close`.
+    """
+
+    def __init__(self, source: str | Path | h5py.File) -> None:
+        self.name = source.filename if isinstance(source, h5py.File) else str(source)
+        self._files = [source] if isinstance(source, h5py.File) else open_run(source)
+        first = self._files[0]
+        rows = np.concatenate([f["replicate"][:] for f in self._files])
+        self._order = np.argsort(rows, kind="stable")
+        self.replicate: NDArray[np.int64] = rows[self._order]
+        self.time_s: NDArray[np.float64] = first["time"][:]
+        self.species: tuple[str, ...] = tuple(first["species"].asstr()[:])
+        self.reactions: tuple[str, ...] = tuple(first["reaction"].asstr()[:])
+        self.replicates_planned = int(first.attrs["replicates_planned"])
+        units: Mapping[str, str] = json.loads(first["provenance"].attrs["readout_units"])
+        self.readout_units = dict(units)
+
+    @property
+    def complete(self) -> bool:
+        """Whether every planned replicate is there."""
+        return len(self.replicate) == self.replicates_planned
+
+    @property
+    def identity(self) -> str:
+        """A hash of the system file, the settings and the seed: equal for runs that must give the same bits."""
+        return str(self._files[0].attrs["identity"])
+
+    def _read(self, name: str, rows: slice = slice(None)) -> NDArray[Any]:
+        if len(self._files) == 1 and np.array_equal(self._order, np.arange(len(self._order))):
+            return np.asarray(self._files[0][name][rows])
+        joined = np.concatenate([f[name][:] for f in self._files])
+        return np.asarray(joined[self._order][rows])
+
+    @cached_property
+    def counts(self) -> NDArray[np.int64]:
+        """Copies of each free species, int64, shape=(replicates, times, species)."""
+        return self._read("counts")
+
+    @cached_property
+    def firings_forward(self) -> NDArray[np.int64]:
+        """Forward firings since time zero, int64, shape=(replicates, times, reactions)."""
+        return self._read("firings_forward")
+
+    @cached_property
+    def firings_backward(self) -> NDArray[np.int64]:
+        """Backward firings since time zero, int64, shape=(replicates, times, reactions)."""
+        return self._read("firings_backward")
+
+    @cached_property
+    def volume_L(self) -> NDArray[np.float64]:
+        """Inner volume of each compartment, L, shape=(replicates,)."""
+        return self._read("volume")
+
+    @cached_property
+    def events(self) -> NDArray[np.int64]:
+        """Reaction events of each replicate, shape=(replicates,)."""
+        return self._read("events")
+
+    @cached_property
+    def end_reason(self) -> NDArray[np.int64]:
+        """Why each replicate ended; codes as in driblet.engines.contract.REASONS."""
+        return self._read("end_reason")
+
+    def readout(self, name: str) -> NDArray[np.float64]:
+        """A readout of the system file, shape=(replicates, times). Raises KeyError for an unknown name."""
+        if name not in self.readout_units:
+            raise KeyError(f"{name!r} is not a readout of this run; known: {', '.join(self.readout_units) or 'none'}")
+        return self._read(f"readout_{name}")
+
+    def final_counts(self) -> NDArray[np.int64]:
+        """Counts at the end, int64, shape=(replicates, species), without reading the rest."""
+        return np.concatenate([f["counts"][:, -1] for f in self._files])[self._order]
+
+    def initial_counts(self) -> NDArray[np.int64]:
+        """Counts at time zero, int64, shape=(replicates, species), without reading the rest."""
+        return np.concatenate([f["counts"][:, 0] for f in self._files])[self._order]
+
+    @cached_property
+    def system(self) -> System:
+        """The system this run simulated, built anew from the text kept in the file."""
+        text = self._files[0]["provenance/system_file"].asstr()[()]
+        return loads(text, f"system file in {self.name}")
+
+    @property
+    def provenance(self) -> dict[str, Any]:
+        """How the run was made: versions, engine, settings, seed, host, wall time."""
+        return dict(self._files[0]["provenance"].attrs)
+
+    def to_xarray(self) -> Any:
+        """The run as an xarray Dataset with named dimensions and units. Raises InputError without xarray."""
+        try:
+            import xarray
+        except ImportError as error:
+            raise one_problem("to_xarray", "", 'needs xarray: pip install "driblet[xarray]"') from error
+        axes = {"counts": "species", "firings_forward": "reaction", "firings_backward": "reaction"}
+        data = {name: (("replicate", "time", axes[name]), self._read(name), {"units": "1"}) for name in SERIES}
+        for name, unit in self.readout_units.items():
+            data[f"readout_{name}"] = (("replicate", "time"), self.readout(name), {"units": unit})  # type: ignore[assignment]
+        data["volume"] = (("replicate",), self.volume_L, {"units": "L"})  # type: ignore[assignment]
+        coordinates = {
+            "replicate": self.replicate,
+            "time": ("time", self.time_s, {"units": "s"}),
+            "species": list(self.species),
+            "reaction": list(self.reactions),
+        }
+        return xarray.Dataset(data, coords=coordinates, attrs={"title": self.system.title})
+
+    def close(self) -> None:
+        """Close the file or files."""
+        for file in self._files:
+            file.close()
+
+    def __enter__(self) -> Run:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    def __repr__(self) -> str:
+        state = "" if self.complete else f" of {self.replicates_planned} planned (interrupted)"
+        return (
+            f"<driblet Run {self.name!r}: {len(self.replicate)} replicates{state}, {len(self.time_s)} times to "
+            f"{self.time_s[-1]:g} s, {len(self.species)} species, {len(self.reactions)} reactions>"
+        )
+
+    def _repr_html_(self) -> str:
+        counts = self.final_counts()
+        rows = "".join(
+            f"<tr><td>{html.escape(name)}</td><td>{counts[:, i].mean():.4g}</td><td>{counts[:, i].std():.3g}</td></tr>"
+            for i, name in enumerate(self.species)
+        )
+        return f"{html.escape(repr(self))}<table><tr><th>species</th><th>mean at end</th><th>sd</th></tr>{rows}</table>"

@@ -1,0 +1,342 @@
+"""The run file (HDF5), written and read here and nowhere else.
+
+What was reported as written survives a kill at any instant: finished units of replicates go to shard files in
+RUN.h5.parts/, each written to a temporary name, synced, and renamed; at the end the shards are merged by raw chunk copy
+into RUN.h5, again through a temporary name. One unit of replicates is one row of chunks, in shards and in the merged file.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import shutil
+import time
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import h5py
+import numpy as np
+from numpy.typing import NDArray
+
+from driblet.errors import InputError, one_problem
+
+FORMAT = 1
+_CHUNK_BYTES = 1 << 18
+_FLUSH_SECONDS = 2.0
+_FLUSH_BYTES = 64 << 20
+SERIES = ("counts", "firings_forward", "firings_backward")
+
+
+@dataclass(frozen=True)
+class Layout:
+    """What a run file holds besides numbers.
+
+    Attributes: species, reactions, readouts : names; readout_units; time_s : (G,); replicates : planned number; unit : how
+    many replicates make one row of chunks; identity : hash that two files of the same run share; provenance : strings and
+    numbers; system_text : the system file.
+    """
+
+    species: tuple[str, ...]
+    reactions: tuple[str, ...]
+    readouts: tuple[str, ...]
+    readout_units: tuple[str, ...]
+    time_s: NDArray[np.float64]
+    replicates: int
+    unit: int
+    identity: str
+    system_text: str
+    provenance: Mapping[str, Any] = field(default_factory=dict)
+
+    @property
+    def units(self) -> int:
+        """Number of units."""
+        return -(-self.replicates // self.unit)
+
+
+@dataclass(frozen=True)
+class Block:
+    """Finished replicates of one unit.
+
+    replicate : int64, (R,); volume_L : (R,); reason, events : int64, (R,); series : name -> (R, G, ...) arrays.
+    """
+
+    unit: int
+    replicate: NDArray[np.int64]
+    volume_L: NDArray[np.float64]
+    reason: NDArray[np.int64]
+    events: NDArray[np.int64]
+    series: Mapping[str, NDArray[Any]]
+
+    @property
+    def nbytes(self) -> int:
+        """Size of the series in memory."""
+        return sum(a.nbytes for a in self.series.values())
+
+
+def parts_folder(path: Path) -> Path:
+    """Where the shards of a run that is not finished lie."""
+    return path.with_name(path.name + ".parts")
+
+
+class RunWriter:
+    """Takes blocks, keeps them safe, and makes the run file at the end.
+
+    With path None the file is kept in memory. `done` holds the units found in shards when `resume` is set. Raises
+    InputError when the path is taken, or its parts belong to another run.
+    """
+
+    def __init__(self, path: Path | None, layout: Layout, resume: bool = False, force: bool = False) -> None:
+        self.path, self.layout = path, layout
+        self.waiting: list[Block] = []
+        self.done: set[int] = set()
+        self.last_flush = time.monotonic()
+        if path is None:
+            return
+        if path.is_dir():
+            raise one_problem(str(path), "", "is a directory; a file name is needed")
+        if not path.parent.is_dir():
+            raise one_problem(str(path), "", f"cannot be written: the folder {path.parent} does not exist")
+        parts = parts_folder(path)
+        if force:
+            shutil.rmtree(parts, ignore_errors=True)
+        elif path.exists() and not resume:
+            raise one_problem(str(path), "", "exists already; --force replaces it, another -o keeps it")
+        if resume:
+            for shard in _shards(parts):
+                with open_file(shard) as file:
+                    if file.attrs["identity"] != layout.identity:
+                        raise one_problem(str(parts), "", "holds parts of another run; --force discards them")
+                    self.done.update(int(u) for u in file["provenance/units"][:])
+        elif not force and parts.exists():
+            raise one_problem(
+                str(path), "", f"an interrupted run is kept in {parts.name}; go on with --resume, or discard it with --force"
+            )
+        self._try_to_write()
+
+    def _try_to_write(self) -> None:
+        assert self.path is not None
+        probe = self.path.with_name(f".{self.path.name}.{os.getpid()}.probe")
+        try:
+            probe.touch()
+            probe.unlink()
+        except OSError as error:
+            raise one_problem(str(self.path), "", f"cannot be written: {(error.strerror or '').lower()}") from error
+
+    def add(self, block: Block) -> None:
+        """Take a finished block; it may be written now or with later ones."""
+        self.waiting.append(block)
+        large = sum(b.nbytes for b in self.waiting) > _FLUSH_BYTES
+        if self.path is not None and (large or time.monotonic() - self.last_flush > _FLUSH_SECONDS):
+            self.flush()
+
+    def flush(self) -> None:
+        """Write what is waiting to a shard that survives a kill."""
+        if self.path is None or not self.waiting:
+            return
+        parts = parts_folder(self.path)
+        parts.mkdir(exist_ok=True)
+        blocks = sorted(self.waiting, key=lambda b: b.unit)
+        name = f"units-{blocks[0].unit:06d}-{len(blocks):04d}-{os.getpid()}.h5"
+        _write_atomically(parts / name, lambda file: _fill(file, self.layout, blocks))
+        self.done.update(b.unit for b in blocks)
+        self.waiting = []
+        self.last_flush = time.monotonic()
+
+    def finish(self, closing: Mapping[str, Any]) -> h5py.File | None:
+        """Make the run file of all blocks and remove the shards; `closing` joins the provenance.
+
+        Returns the open file when it is kept in memory, else None.
+        """
+        blocks = sorted(self.waiting, key=lambda b: b.unit)
+        if self.path is None:
+            file = h5py.File("run in memory", "w", driver="core", backing_store=False, libver="v110", track_order=True)
+            _fill(file, self.layout, blocks)
+            file["provenance"].attrs.update(closing)
+            return file
+        parts = parts_folder(self.path)
+        shards = _shards(parts)
+
+        def write(file: h5py.File) -> None:
+            if shards:
+                self.flush()
+                _merge(file, self.layout, _shards(parts))
+            else:
+                _fill(file, self.layout, blocks)
+            file["provenance"].attrs.update(closing)
+
+        _write_atomically(self.path, write)
+        shutil.rmtree(parts, ignore_errors=True)
+        return None
+
+
+def _shards(parts: Path) -> list[Path]:
+    return sorted(parts.glob("units-*.h5")) if parts.is_dir() else []
+
+
+def _write_atomically(path: Path, fill: Any) -> None:
+    temporary = path.with_name(f"{path.name}.{os.getpid()}.tmp")
+    try:
+        with h5py.File(temporary, "w", libver="v110", track_order=True) as file:
+            fill(file)
+            file.flush()
+            os.fsync(file.id.get_vfd_handle())
+        os.replace(temporary, path)
+    except BaseException:
+        temporary.unlink(missing_ok=True)
+        raise
+    folder = os.open(path.parent, os.O_RDONLY)
+    try:
+        os.fsync(folder)
+    finally:
+        os.close(folder)
+
+
+def _frame(file: h5py.File, layout: Layout, replicate: NDArray[np.int64], units: Sequence[int]) -> None:
+    """Attributes, dimension scales and provenance, everything but the series."""
+    file.attrs["driblet_format"] = FORMAT
+    file.attrs["identity"] = layout.identity
+    file.attrs["replicates_planned"] = layout.replicates
+    text = h5py.string_dtype("utf-8")
+    scales: dict[str, Any] = {
+        "replicate": replicate,
+        "time": layout.time_s,
+        "species": np.array(layout.species, dtype=object),
+        "reaction": np.array(layout.reactions, dtype=object),
+    }
+    for name, values in scales.items():
+        dataset = file.create_dataset(name, data=values, dtype=text if values.dtype == object else None)
+        dataset.make_scale(name)
+    file["time"].attrs["units"] = "s"
+    group = file.create_group("provenance")
+    group.create_dataset("system_file", data=layout.system_text, dtype=text)
+    group.create_dataset("units", data=np.array(units, dtype=np.int64))
+    group.attrs["readout_units"] = json.dumps(dict(zip(layout.readouts, layout.readout_units, strict=True)))
+    group.attrs["replicates_per_unit"] = layout.unit
+    for name, value in layout.provenance.items():
+        group.attrs[name] = value
+
+
+def _series_shapes(layout: Layout) -> dict[str, tuple[tuple[int, ...], Any, str]]:
+    """name -> (shape without replicates, dtype, units)."""
+    times, species, reactions = len(layout.time_s), len(layout.species), len(layout.reactions)
+    shapes: dict[str, tuple[tuple[int, ...], Any, str]] = {
+        "counts": ((times, species), np.int64, "1"),
+        "firings_forward": ((times, reactions), np.int64, "1"),
+        "firings_backward": ((times, reactions), np.int64, "1"),
+    }
+    for name, unit in zip(layout.readouts, layout.readout_units, strict=True):
+        shapes[f"readout_{name}"] = ((times,), np.float64, unit)
+    return shapes
+
+
+def _create_series(file: h5py.File, layout: Layout, rows: int) -> None:
+    for name, (shape, dtype, unit) in _series_shapes(layout).items():
+        per_time = 8 * layout.unit * int(np.prod(shape[1:]))
+        times = max(1, min(shape[0], _CHUNK_BYTES // max(1, per_time)))
+        empty = 0 in shape
+        dataset = file.create_dataset(
+            name,
+            shape=(rows, *shape),
+            maxshape=None if empty else (None, *shape),
+            dtype=dtype,
+            chunks=None if empty else (layout.unit, times, *shape[1:]),
+            compression=None if empty else "gzip",
+            compression_opts=None if empty else 1,
+            shuffle=not empty,
+            fletcher32=not empty,
+        )
+        dataset.attrs["units"] = unit
+        third = ["species" if name == "counts" else "reaction"] if len(shape) == 2 else []
+        for axis, scale in enumerate(["replicate", "time", *third]):
+            dataset.dims[axis].attach_scale(file[scale])
+    for name, dtype, unit in (("volume", np.float64, "L"), ("end_reason", np.int64, "1"), ("events", np.int64, "1")):
+        dataset = file.create_dataset(name, shape=(rows,), dtype=dtype)
+        dataset.attrs["units"] = unit
+        dataset.dims[0].attach_scale(file["replicate"])
+
+
+def _fill(file: h5py.File, layout: Layout, blocks: Sequence[Block]) -> None:
+    """A file of the given blocks; the unit that is not full, if any, comes last."""
+    replicate = np.concatenate([b.replicate for b in blocks]) if blocks else np.zeros(0, dtype=np.int64)
+    _frame(file, layout, replicate, [b.unit for b in blocks])
+    _create_series(file, layout, len(replicate))
+    row = 0
+    for block in blocks:
+        rows = slice(row, row + len(block.replicate))
+        row = rows.stop
+        for name, values in block.series.items():
+            if values.size:
+                file[name][rows] = values
+        file["volume"][rows] = block.volume_L
+        file["end_reason"][rows] = block.reason
+        file["events"][rows] = block.events
+
+
+def _merge(file: h5py.File, layout: Layout, shards: Sequence[Path]) -> None:
+    _frame(file, layout, np.arange(layout.replicates, dtype=np.int64), list(range(layout.units)))
+    _create_series(file, layout, layout.replicates)
+    for shard in shards:
+        with open_file(shard) as part:
+            replicate = part["replicate"][:]
+            for name in ("volume", "end_reason", "events"):
+                file[name][replicate] = part[name][:]
+            for row, unit in enumerate(part["provenance/units"][:]):
+                for name in _series_shapes(layout):
+                    _copy_chunks(part[name], file[name], row * layout.unit, int(unit) * layout.unit)
+
+
+def _copy_chunks(source: h5py.Dataset, target: h5py.Dataset, source_row: int, target_row: int) -> None:
+    if source.chunks is None:
+        return
+    for start in range(0, source.shape[1], source.chunks[1]):
+        tail = (start, *(0 for _ in source.shape[2:]))
+        mask, data = source.id.read_direct_chunk((source_row, *tail))
+        target.id.write_direct_chunk((target_row, *tail), data, filter_mask=mask)
+
+
+def open_file(path: str | Path) -> h5py.File:
+    """Open a run file or shard for reading. Raises InputError, one line, for anything that is not one."""
+    name = str(path)
+    path = Path(path)
+    try:
+        with path.open("rb") as stream:
+            head = stream.read(8)
+    except IsADirectoryError as error:
+        raise one_problem(name, "", "is a directory, not a run file") from error
+    except OSError as error:
+        raise one_problem(name, "", f"cannot be read: {(error.strerror or str(error)).lower()}") from error
+    if not head:
+        raise one_problem(name, "", "is empty, so it is no run file")
+    if head != b"\x89HDF\r\n\x1a\n":
+        if path.suffix == ".toml":
+            raise one_problem(name, "", f"is a system file, not a run file: `driblet run {name} -o RUN.h5` makes one")
+        raise one_problem(name, "", "is not HDF5, so it is no run file")
+    try:
+        file = h5py.File(path, "r")
+    except OSError as error:
+        what = "is truncated or damaged" if "truncated" in str(error) or "eof" in str(error) else "cannot be opened"
+        raise one_problem(name, "", f"{what}; run the system again") from error
+    version = file.attrs.get("driblet_format")
+    if version is None:
+        file.close()
+        raise one_problem(name, "", "is HDF5 but not a driblet run file")
+    if int(version) != FORMAT:
+        file.close()
+        raise one_problem(name, "", f"has run-file version {int(version)}; this driblet reads version {FORMAT}")
+    return file
+
+
+def open_run(path: str | Path) -> list[h5py.File]:
+    """The files that make up a run: the run file, or the shards of one that was interrupted."""
+    path = Path(path)
+    if path.is_dir() and path.name.endswith(".parts"):
+        path = path.with_name(path.name.removesuffix(".parts"))
+    shards = _shards(parts_folder(path))
+    if path.exists() or not shards:
+        return [open_file(path)]
+    files = [open_file(shard) for shard in shards]
+    if len({file.attrs["identity"] for file in files}) > 1:
+        raise InputError(str(parts_folder(path)), [("", "mixes parts of different runs")])
+    return files
