@@ -107,7 +107,8 @@ class Run:
     @property
     def provenance(self) -> dict[str, Any]:
         """How the run was made: versions, engine, settings, seed, host, wall time."""
-        return dict(self._files[0]["provenance"].attrs)
+        attributes = self._files[0]["provenance"].attrs.items()
+        return {name: value.item() if isinstance(value, np.generic) else value for name, value in attributes}
 
     def to_xarray(self) -> Any:
         """The run as an xarray Dataset with named dimensions and units. Raises InputError without xarray."""

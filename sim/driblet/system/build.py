@@ -36,8 +36,11 @@ SMALLEST_INNER_SHARE = 1e-6
 HDF5_MAGIC = b"\x89HDF\r\n\x1a\n"
 
 
-def load(path: str | Path) -> System:
-    """Read and validate a system file. Raises InputError with every problem found."""
+def load(path: str | Path, *, closure: bool = True) -> System:
+    """Read and validate a system file. Raises InputError with every problem found.
+
+    With closure=False energies that do not close a cycle are let pass: for `reconcile` alone.
+    """
     source = str(path)
     try:
         data = Path(path).read_bytes()
@@ -49,10 +52,10 @@ def load(path: str | Path) -> System:
         text = data.decode("utf-8")
     except UnicodeDecodeError as error:
         raise one_problem(source, "", "is not text in UTF-8, so it is no system file") from error
-    return loads(text, source)
+    return loads(text, source, closure=closure)
 
 
-def loads(text: str, source: str = "system file") -> System:
+def loads(text: str, source: str = "system file", *, closure: bool = True) -> System:
     """Read and validate the text of a system file. Raises InputError with every problem found."""
     if not text.strip():
         raise one_problem(source, "", "is empty; `driblet new` writes a commented starter file")
@@ -63,7 +66,7 @@ def loads(text: str, source: str = "system file") -> System:
         if "overwrite" in reason or "declare" in reason or "twice" in reason:
             reason += "; each name may be given once"
         raise one_problem(source, "", f"is not valid TOML: {reason[0].lower()}{reason[1:]}") from error
-    builder = _Builder(raw, text, source)
+    builder = _Builder(raw, text, source, closure)
     system = builder.build()
     if builder.problems or system is None:
         raise InputError(source, builder.problems)
@@ -71,8 +74,8 @@ def loads(text: str, source: str = "system file") -> System:
 
 
 class _Builder:
-    def __init__(self, raw: Mapping[str, Any], text: str, source: str) -> None:
-        self.raw, self.text, self.source = raw, text, source
+    def __init__(self, raw: Mapping[str, Any], text: str, source: str, closure: bool) -> None:
+        self.raw, self.text, self.source, self.closure = raw, text, source, closure
         self.problems: list[Problem] = []
 
     def problem(self, key: str, text: str) -> None:
@@ -94,7 +97,8 @@ class _Builder:
         settings = self.settings(run)
         if self.problems or not (conditions and compartment and settings):
             return None
-        self.check_closure(species, reactions)
+        if self.closure:
+            self.check_closure(species, reactions)
         return System(
             title.strip(), conditions, compartment, tuple(species), tuple(reactions), tuple(readouts), settings,
             self.text, self.source,

@@ -1,0 +1,5 @@
+"""`python -m driblet`."""
+
+from driblet.commands.main import script
+
+script()

@@ -1,0 +1,124 @@
+"""`driblet run`: simulate an ensemble into a run file."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+
+import click
+
+from driblet.commands.screen import console, duration, number, table, time_option
+
+
+@click.command(short_help="Simulate an ensemble of compartments into a run file.")
+@click.argument("file", type=click.Path(path_type=Path))
+@click.option("-o", "--output", type=click.Path(path_type=Path), help="The run file; default: FILE's name with .h5, here.")
+@click.option("--replicates", type=click.IntRange(1, 10_000_000), help="How many compartments.")
+@click.option("--duration", callback=time_option, metavar="TIME", help='Simulated time, such as "20 min".')
+@click.option("--sample-every", callback=time_option, metavar="TIME", help='Recording interval, such as "5 s".')
+@click.option("--seed", type=click.IntRange(0, 2**63 - 1), help="Seed of the random streams.")
+@click.option("--threads", type=click.IntRange(1, 4096), help="Threads; default: one per core.")
+@click.option("--engine", help='The algorithm; this version has "exact".')
+@click.option("--force", is_flag=True, help="Replace an existing run file or its parts.")
+@click.option("--resume", is_flag=True, help="Go on with an interrupted run; a complete one is left as it is.")
+def run(
+    file: Path,
+    output: Path | None,
+    replicates: int | None,
+    duration: float | None,
+    sample_every: float | None,
+    seed: int | None,
+    threads: int | None,
+    engine: str | None,
+    force: bool,
+    resume: bool,
+) -> None:
+    """Simulate the system in FILE, molecule by molecule, and write a run file.
+
+    Options replace what FILE says under [run]. Ctrl-C keeps the replicates that are finished; --resume goes on.
+    """
+    if force and resume:
+        raise click.UsageError("--force starts anew and --resume goes on: give one of them")
+    from driblet.ensemble import run as simulate
+    from driblet.system import load
+
+    system = load(file)
+    output = output or Path(file.with_suffix(".h5").name)
+    with _ProgressLine() as line:
+        result = simulate(
+            system,
+            output,
+            replicates=replicates,
+            duration=duration,
+            sample_every=sample_every,
+            seed=seed,
+            engine=engine,
+            threads=threads,
+            resume=resume,
+            force=force,
+            on_progress=line.update,
+        )
+    _summary(result, line.seconds)
+
+
+class _ProgressLine:
+    """A progress bar with rate and estimate, on a terminal only; it also remembers the time taken."""
+
+    def __init__(self) -> None:
+        self.seconds: float | None = None
+        self._bar = None
+
+    def __enter__(self) -> _ProgressLine:
+        if sys.stderr.isatty():
+            from rich.console import Console
+            from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
+
+            self._bar = Progress(
+                TextColumn("simulating"),
+                BarColumn(complete_style="blue", finished_style="blue"),
+                TextColumn("{task.percentage:3.0f} %  {task.fields[detail]}"),
+                TimeRemainingColumn(compact=True),
+                console=Console(file=sys.stderr),
+                transient=True,
+            )
+            self._bar.start()
+            self._task = self._bar.add_task("", total=1.0, detail="")
+        return self
+
+    def update(self, progress) -> None:  # type: ignore[no-untyped-def]
+        self.seconds = progress.seconds
+        if self._bar is not None:
+            rate = progress.events / progress.seconds if progress.seconds else 0.0
+            detail = f"{progress.finished}/{progress.replicates} compartments, {rate / 1e6:.1f} M events/s"
+            self._bar.update(self._task, completed=progress.fraction, detail=detail)
+
+    def __exit__(self, *_: object) -> None:
+        if self._bar is not None:
+            self._bar.stop()
+
+
+def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-def]
+    out = console()
+    system = result.system
+    events = int(result.events.sum())
+    out.print(f"[bold]{system.title}[/bold]", markup=True)
+    spread = ""
+    if seconds is None:
+        spread = "complete already; nothing was simulated anew"
+    else:
+        spread = f"{duration(seconds)} of wall time, {events / max(seconds, 1e-9) / 1e6:.1f} M events/s"
+    out.print(
+        f"{len(result.replicate)} compartments, {duration(float(result.time_s[-1]))} each, {events:,} reaction events; {spread}",
+        markup=False,
+    )
+    final = result.final_counts()
+    labels = {s.name: s.label for s in system.species}
+    rows = [
+        [labels[name], number(final[:, i].mean()), number(final[:, i].std(ddof=1)) if len(final) > 1 else "–",
+         number(float(final[:, i].min())), number(float(final[:, i].max()))]
+        for i, name in enumerate(result.species)
+    ]  # fmt: skip
+    out.print(table("copies at the end, over compartments", ["species", "mean", "sd", "least", "most"], rows))
+    for warning in getattr(system, "warnings", ()):
+        out.print(f"note: {warning}", markup=False)
+    out.print(f"written: {result.name}", markup=False)
