@@ -1,8 +1,8 @@
 """driblet: counts molecules in small ATP-driven compartments, with every reverse rate tied to the energies.
 
-    system = driblet.load("uphill_transfer.toml")
-    run = driblet.run(system, replicates=400)
-    run.counts          # (replicates, times, species)
+system = driblet.load("uphill_transfer.toml")
+run = driblet.run(system, replicates=400)
+run.counts          # (replicates, times, species)
 """
 
 from __future__ import annotations

@@ -59,7 +59,7 @@ def sample_times(settings: RunSettings) -> NDArray[np.float64]:
         raise one_problem("run", "sample_every", "is longer than the run")
     if duration / every > MOST_SAMPLES:
         raise one_problem("run", "sample_every", f"makes more than {MOST_SAMPLES} samples; choose a longer one")
-    times = every * np.arange(int(np.floor(duration / every * (1 + 1e-12))) + 1)
+    times: NDArray[np.float64] = np.arange(int(np.floor(duration / every * (1 + 1e-12))) + 1) * np.float64(every)
     if duration - times[-1] > 1e-9 * duration:
         times = np.append(times, duration)
     times[-1] = duration
@@ -87,8 +87,12 @@ def run(
     taken, InterruptedRunError after Ctrl-C.
     """
     changes = {
-        "replicates": replicates, "duration_s": duration, "sample_every_s": sample_every, "seed": seed, "engine": engine,
-    }  # fmt: skip
+        "replicates": replicates,
+        "duration_s": duration,
+        "sample_every_s": sample_every,
+        "seed": seed,
+        "engine": engine,
+    }
     settings = replace(system.settings, **{k: v for k, v in changes.items() if v is not None})  # type: ignore[arg-type]
     if settings.replicates < 1:
         raise one_problem("run", "replicates", "at least 1 is needed")
@@ -244,9 +248,7 @@ class _Ensemble:
         partial = sum(float(u.next_sample.sum()) / grid for u in units if u.next_sample is not None)
         events = self.events + sum(u.events for u in units)
         fraction = min(1.0, (finished + partial) / self.layout.replicates)
-        self.on_progress(
-            Progress(fraction, finished, self.layout.replicates, events, time.monotonic() - self.started)
-        )
+        self.on_progress(Progress(fraction, finished, self.layout.replicates, events, time.monotonic() - self.started))
 
     def _simulate(self, unit: int) -> Block:
         """One unit from start to end, in a worker thread."""
@@ -267,12 +269,18 @@ class _Ensemble:
         if (state.reason == COUNT_OVERFLOW).any():
             r = int(np.flatnonzero(state.reason == COUNT_OVERFLOW)[0])
             name = self.network.species[int(np.argmax(state.counts[r, :-1]))]
-            raise DribletError(f"replicate {rows[r]}: {REASONS[COUNT_OVERFLOW]} ({name}); the system grows without bound")
+            raise DribletError(
+                f"replicate {rows[r]}: {REASONS[COUNT_OVERFLOW]} ({name}); the system grows without bound"
+            )
         events = state.firings.sum(axis=1)
         del self.running[unit]
         self.events += int(events.sum())
         return Block(
-            unit, np.array(rows, dtype=np.int64), start.volume_L, state.reason.copy(), events,
+            unit,
+            np.array(rows, dtype=np.int64),
+            start.volume_L,
+            state.reason.copy(),
+            events,
             {
                 "counts": samples.counts,
                 "firings_forward": self._by_reaction(samples.firings, FORWARD),
@@ -282,7 +290,7 @@ class _Ensemble:
                     for r in self.system.readouts
                 },
             },
-        )  # fmt: skip
+        )
 
     def _by_reaction(self, firings: NDArray[np.int64], direction: int) -> NDArray[np.int64]:
         index = self.network.channel_index(direction)

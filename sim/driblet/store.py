@@ -111,7 +111,9 @@ class RunWriter:
                     self.done.update(int(u) for u in file["provenance/units"][:])
         elif not force and parts.exists():
             raise one_problem(
-                str(path), "", f"an interrupted run is kept in {parts.name}; go on with --resume, or discard it with --force"
+                str(path),
+                "",
+                f"an interrupted run is kept in {parts.name}; go on with --resume, or discard it with --force",
             )
         self._try_to_write()
 

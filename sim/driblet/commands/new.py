@@ -10,7 +10,7 @@ import driblet
 from driblet.commands.screen import console, table
 from driblet.errors import one_problem
 
-STARTER = '''\
+STARTER = """\
 # A starter file for driblet. Change the numbers, then:
 #   driblet audit THIS_FILE                what the energies imply, before anything runs
 #   driblet run THIS_FILE -o run.h5        every molecule, compartment by compartment
@@ -48,7 +48,7 @@ duration = "5 s"
 sample_every = "0.05 s"
 loading = "poisson"                   # or "nearest": the rounded mean in every compartment
 seed = 1
-'''
+"""
 
 
 def ready_systems() -> dict[str, Path]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import sys
 from pathlib import Path
+from typing import Any
 
 import click
 
@@ -12,7 +13,9 @@ from driblet.commands.screen import console, duration, number, table, time_optio
 
 @click.command(short_help="Simulate an ensemble of compartments into a run file.")
 @click.argument("file", type=click.Path(path_type=Path))
-@click.option("-o", "--output", type=click.Path(path_type=Path), help="The run file; default: FILE's name with .h5, here.")
+@click.option(
+    "-o", "--output", type=click.Path(path_type=Path), help="The run file; default: FILE's name with .h5, here."
+)
 @click.option("--replicates", type=click.IntRange(1, 10_000_000), help="How many compartments.")
 @click.option("--duration", callback=time_option, metavar="TIME", help='Simulated time, such as "20 min".')
 @click.option("--sample-every", callback=time_option, metavar="TIME", help='Recording interval, such as "5 s".')
@@ -66,7 +69,7 @@ class _ProgressLine:
 
     def __init__(self) -> None:
         self.seconds: float | None = None
-        self._bar = None
+        self._bar: Any = None
 
     def __enter__(self) -> _ProgressLine:
         if sys.stderr.isatty():
@@ -102,22 +105,27 @@ def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-
     system = result.system
     events = int(result.events.sum())
     out.print(f"[bold]{system.title}[/bold]", markup=True)
-    spread = ""
     if seconds is None:
         spread = "complete already; nothing was simulated anew"
     else:
         spread = f"{duration(seconds)} of wall time, {events / max(seconds, 1e-9) / 1e6:.1f} M events/s"
     out.print(
-        f"{len(result.replicate)} compartments, {duration(float(result.time_s[-1]))} each, {events:,} reaction events; {spread}",
+        f"{len(result.replicate)} compartments, {duration(float(result.time_s[-1]))} each, "
+        f"{events:,} reaction events; {spread}",
         markup=False,
     )
     final = result.final_counts()
     labels = {s.name: s.label for s in system.species}
     rows = [
-        [labels[name], number(final[:, i].mean()), number(final[:, i].std(ddof=1)) if len(final) > 1 else "–",
-         number(float(final[:, i].min())), number(float(final[:, i].max()))]
+        [
+            labels[name],
+            number(final[:, i].mean()),
+            number(final[:, i].std(ddof=1)) if len(final) > 1 else "–",
+            number(float(final[:, i].min())),
+            number(float(final[:, i].max())),
+        ]
         for i, name in enumerate(result.species)
-    ]  # fmt: skip
+    ]
     out.print(table("copies at the end, over compartments", ["species", "mean", "sd", "least", "most"], rows))
     for warning in getattr(system, "warnings", ()):
         out.print(f"note: {warning}", markup=False)

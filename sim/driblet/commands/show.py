@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import Any
 
 import click
 import numpy as np
@@ -28,7 +29,7 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
             return
         final = run.final_counts()
         codes, times = np.unique(run.end_reason, return_counts=True)
-        facts = {
+        facts: dict[str, Any] = {
             "file": str(run_file),
             "title": run.system.title,
             "replicates": len(run.replicate),
@@ -40,13 +41,17 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
             "ended": {REASONS[int(code)]: int(n) for code, n in zip(codes, times, strict=True)},
             "median_volume_L": float(np.median(run.volume_L)) if len(run.volume_L) else None,
             "species": [
-                {"name": name, "mean_at_end": final[:, i].mean(), "sd_at_end": final[:, i].std(ddof=1) if len(final) > 1 else None}
+                {
+                    "name": name,
+                    "mean_at_end": final[:, i].mean(),
+                    "sd_at_end": final[:, i].std(ddof=1) if len(final) > 1 else None,
+                }
                 for i, name in enumerate(run.species)
             ],
             "reactions": list(run.reactions),
             "readouts": run.readout_units,
             "provenance": {k: v for k, v in run.provenance.items() if k != "readout_units"},
-        }  # fmt: skip
+        }
     if as_json:
         print_json(facts)
         return
@@ -65,5 +70,7 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
     if facts["readouts"]:
         out.print("readouts: " + ", ".join(f"{k} ({v})" for k, v in facts["readouts"].items()), markup=False)
     out.print("reactions: " + ", ".join(facts["reactions"]), markup=False)
-    rows = [[k.replace("_", " "), f"{v:.6g}" if isinstance(v, float) else str(v)] for k, v in facts["provenance"].items()]
+    rows = [
+        [k.replace("_", " "), f"{v:.6g}" if isinstance(v, float) else str(v)] for k, v in facts["provenance"].items()
+    ]
     out.print(table("how it was made", ["", ""], rows, left=2))

@@ -57,7 +57,7 @@ def use_cache() -> bool:
         candidates.append((temporary / name, True))
     for folder, private in candidates:
         if _usable(folder, private):
-            config.CACHE_DIR = str(folder)
+            config.CACHE_DIR = str(folder)  # type: ignore[attr-defined]
             return True
     return False
 

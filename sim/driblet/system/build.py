@@ -100,9 +100,16 @@ class _Builder:
         if self.closure:
             self.check_closure(species, reactions)
         return System(
-            title.strip(), conditions, compartment, tuple(species), tuple(reactions), tuple(readouts), settings,
-            self.text, self.source,
-        )  # fmt: skip
+            title.strip(),
+            conditions,
+            compartment,
+            tuple(species),
+            tuple(reactions),
+            tuple(readouts),
+            settings,
+            self.text,
+            self.source,
+        )
 
     def section(self, name: str, required: bool) -> Mapping[str, Any]:
         """The named tables of a section whose keys are the user's own names."""
@@ -115,14 +122,17 @@ class _Builder:
         for entry in value:
             if not NAME.fullmatch(entry) or not entry.isascii():
                 self.problem(
-                    f'{name}."{entry}"', "is not a name: a letter, then letters, digits or underscores "
+                    f'{name}."{entry}"',
+                    "is not a name: a letter, then letters, digits or underscores "
                     '(label = "..." sets what figures show)',
-                )  # fmt: skip
+                )
         return value
 
     def conditions(self) -> Conditions | None:
         table = read_table(ConditionsTable, self.raw.get("conditions", {}), "conditions", self.problems)
-        return table and Conditions(table.temperature, table.pH, table.pMg, table.ionic_strength)
+        if table is None:
+            return None
+        return Conditions(table.temperature, table.pH, table.pMg, table.ionic_strength)
 
     def compartment(self) -> Compartment | None:
         section = self.section("compartments", required=True)
@@ -204,9 +214,14 @@ class _Builder:
     def reactions(self, conditions: Conditions | None) -> list[Reaction]:
         energies = read_table(EnergiesTable, self.raw.get("energies", {}), "energies", self.problems)
         species = self.raw.get("species", {})
-        held = {n for n, v in species.items() if isinstance(v, Mapping) and v.get("held") is True} if isinstance(
-            species, Mapping) else set()  # fmt: skip
-        reader = ReactionReader(set(species) if isinstance(species, Mapping) else set(), held, conditions, self.problems)
+        held = (
+            {n for n, v in species.items() if isinstance(v, Mapping) and v.get("held") is True}
+            if isinstance(species, Mapping)
+            else set()
+        )
+        reader = ReactionReader(
+            set(species) if isinstance(species, Mapping) else set(), held, conditions, self.problems
+        )
         if energies is not None:
             reader.read_energies(energies)
         found = (reader.read(name, value) for name, value in self.section("reactions", required=True).items())

@@ -69,7 +69,9 @@ class Expression:
         molar, energy = self.root.dimension
         if self.root.dimension == (0, 1):
             return "kJ/mol"
-        parts = [name + (f"^{power}" if power != 1 else "") for name, power in (("M", molar), ("(kJ/mol)", energy)) if power]
+        parts = [
+            name + (f"^{power}" if power != 1 else "") for name, power in (("M", molar), ("(kJ/mol)", energy)) if power
+        ]
         return " ".join(parts) or "1"
 
 

@@ -63,9 +63,15 @@ class ReactionReader:
     def read(self, name: str, value: object) -> Reaction | None:
         """The Reaction of one table, or None after adding what is wrong to the problems."""
         path = f"reactions.{name}"
-        if isinstance(value, Mapping) and isinstance(value.get("energy"), str) and value["energy"] not in (
-            "formation", "hydrolysis",
-        ):  # fmt: skip
+        if (
+            isinstance(value, Mapping)
+            and isinstance(value.get("energy"), str)
+            and value["energy"]
+            not in (
+                "formation",
+                "hydrolysis",
+            )
+        ):
             value = {**value, "energy": {"value": value["energy"]}}
         faults: list[Problem] = []
         table = read_table(ReactionTable, value, path, faults)
@@ -98,14 +104,21 @@ class ReactionReader:
             counted = sum(n for name, n in terms if name not in self.held)
             if counted > MOST_MOLECULES:
                 self.problems.append(
-                    Problem(f"{path}.equation", f"{counted} molecules would have to meet at once; "
-                            f"split it into steps of at most {MOST_MOLECULES}")
-                )  # fmt: skip
+                    Problem(
+                        f"{path}.equation",
+                        f"{counted} molecules would have to meet at once; "
+                        f"split it into steps of at most {MOST_MOLECULES}",
+                    )
+                )
 
     def _one_way(self, name: str, table: ReactionTable, equation: Equation, path: str) -> Reaction | None:
         if table.one_way is None:
-            self._problem(path, "one_way", 'a one-way reaction needs its reason, such as one_way = "escapes as gas"; '
-                          'or write "<=>" and its energy')  # fmt: skip
+            self._problem(
+                path,
+                "one_way",
+                'a one-way reaction needs its reason, such as one_way = "escapes as gas"; '
+                'or write "<=>" and its energy',
+            )
         for key in (*_KEYS, "backward"):
             if getattr(table, key) is not None:
                 self._problem(path, key, 'a one-way reaction has none; write "<=>" in the equation to use it')
@@ -115,7 +128,9 @@ class ReactionReader:
         forward = self._rate(path, "forward", table.forward, equation.reactants)
         if forward is None:
             return None
-        return Reaction(name, table.label or name, equation, None, None, forward, None, "one way", one_way=table.one_way)
+        return Reaction(
+            name, table.label or name, equation, None, None, forward, None, "one way", one_way=table.one_way
+        )
 
     def _reversible(self, name: str, table: ReactionTable, equation: Equation, path: str) -> Reaction | None:
         if table.one_way is not None:
@@ -137,7 +152,9 @@ class ReactionReader:
             self._problem(path, given[0], str(error))
             return None
         if forward is None and backward is None:
-            self._problem(path, "forward", "is missing: a rate constant, forward or backward, is needed with the energy")
+            self._problem(
+                path, "forward", "is missing: a rate constant, forward or backward, is needed with the energy"
+            )
             return None
         if dG0 is None and (forward is None or backward is None):
             self._problem(path, "energy", "is missing: give energy, K or Kd, or both forward and backward")
@@ -145,24 +162,40 @@ class ReactionReader:
         return self._combine(name, table, equation, path, dG0, forward, backward, given, sd)
 
     def _combine(
-        self, name: str, table: ReactionTable, equation: Equation, path: str, dG0: float | None,
-        forward: float | None, backward: float | None, given: list[str], sd: float | None,
-    ) -> Reaction | None:  # fmt: skip
+        self,
+        name: str,
+        table: ReactionTable,
+        equation: Equation,
+        path: str,
+        dG0: float | None,
+        forward: float | None,
+        backward: float | None,
+        given: list[str],
+        sd: float | None,
+    ) -> Reaction | None:
         RT = GAS_CONSTANT * self.temperature
         if forward is not None and backward is not None:
             from_rates = -RT * (math.log(forward) - math.log(backward))
             if dG0 is None:
                 dG0 = from_rates
             elif abs(from_rates - dG0) > AGREEMENT:
-                self._problem(path, "backward", f"forward/backward means {from_rates:.4g} kJ/mol, {given[0]} says "
-                              f"{dG0:.4g}: leave one of the three out")  # fmt: skip
+                self._problem(
+                    path,
+                    "backward",
+                    f"forward/backward means {from_rates:.4g} kJ/mol, {given[0]} says "
+                    f"{dG0:.4g}: leave one of the three out",
+                )
                 return None
         assert dG0 is not None
         try:
             K = equilibrium_constant(dG0, self.temperature)
         except OverflowError:
-            self._problem(path, given[0] if given else "forward", f"{dG0:.6g} kJ/mol is more than {LARGEST_EXPONENT:g} RT: "
-                          "K' is out of the range of a double; check the unit")  # fmt: skip
+            self._problem(
+                path,
+                given[0] if given else "forward",
+                f"{dG0:.6g} kJ/mol is more than {LARGEST_EXPONENT:g} RT: "
+                "K' is out of the range of a double; check the unit",
+            )
             return None
         if forward is None:
             assert backward is not None

@@ -85,7 +85,7 @@ def _text(value: object) -> str:
     return value
 
 
-def _one_of(choices: tuple[str, ...]) -> Callable[[object], object]:
+def _one_of(choices: tuple[object, ...]) -> Callable[[object], object]:
     def read(value: object) -> object:
         if value not in choices:
             raise _complain(f"{value!r} is not known here: {' or '.join(repr(c) for c in choices)}".replace("'", '"'))
@@ -142,7 +142,7 @@ class CompartmentTable(Table):
 
 class SpeciesTable(Table):
     amount: Amount
-    held: Annotated[bool, BeforeValidator(_one_of((True, False)))] = False  # type: ignore[arg-type]
+    held: Annotated[bool, BeforeValidator(_one_of((True, False)))] = False
     loading: Loading | None = None
     label: Text | None = None
 
