@@ -11,6 +11,7 @@ EXIT_BAD_INPUT = 2
 EXIT_CANNOT_ANSWER = 3
 EXIT_OWN_FAULT = 4
 EXIT_INTERRUPTED = 130
+_LONGEST_LINE = 600
 
 
 class Problem(NamedTuple):
@@ -33,12 +34,18 @@ class InputError(DribletError, ValueError):
 
     def __init__(self, source: str, problems: Iterable[Problem | tuple[str, str]]) -> None:
         self.source = source
-        self.problems = tuple(Problem(*p) for p in problems)
+        self.problems = tuple(dict.fromkeys(Problem(*p) for p in problems))
         super().__init__("\n".join(self.lines()))
 
     def lines(self) -> list[str]:
         """One line a problem: `FILE: key.path: what is wrong, what would be right`."""
-        return [": ".join(part for part in (self.source, p.key, p.text) if part) for p in self.problems]
+        return [_one_line(": ".join(part for part in (self.source, p.key, p.text) if part)) for p in self.problems]
+
+
+def _one_line(text: str) -> str:
+    """`text` with control characters escaped and its middle left out when a user's value is very long."""
+    plain = "".join(c if c.isprintable() else c.encode("unicode_escape").decode("ascii") for c in text)
+    return plain if len(plain) <= _LONGEST_LINE else f"{plain[: _LONGEST_LINE // 2]} ... {plain[-_LONGEST_LINE // 2 :]}"
 
 
 class CannotAnswerError(DribletError):

@@ -20,7 +20,12 @@ GAS_CONSTANT = _codata.R / 1000.0  # kJ/(mol K)
 FARADAY = _codata.physical_constants["Faraday constant"][0] / 1000.0  # kJ/(mol V)
 
 _NUMBER = re.compile(r"[+-]?\d+(\.\d*)?([eE][+-]?\d+)?")
-_UNIT_TOKEN = re.compile(r"\*\*|[()*/·]|\^?[+-]?\d+|[°A-Za-zµμ]+|[⁺⁻⁰¹²³⁴-⁹]+|\^|\s+")
+# Our own grammar of unit texts: pint evaluates what it is given, and "M^9^9^9" would never come back.
+_FACTOR = r"[A-Za-zµμ]+(?:(?:\^|\*\*)[+-]?[0-9]{1,2}|[⁺⁻]?[⁰¹²³⁴-⁹]{1,2})?"
+_GAP = r"(?:\s*[*·/]\s*|\s+)"
+_GROUP = rf"(?:{_FACTOR}|\(\s*{_FACTOR}(?:{_GAP}{_FACTOR})*\s*\))"
+_UNIT = re.compile(rf"(?:1?\s*/\s*)?{_GROUP}(?:{_GAP}{_GROUP})*")
+_LONGEST_UNIT = 60
 _ADVICE = {
     "C": 'a bare C would be a charge; write "degC"',
     "c": 'write "degC" for degrees Celsius',
@@ -49,8 +54,17 @@ _KINDS: dict[str, tuple[dict[str, int], str, str]] = {
 }
 
 
+def example_of(kind: str) -> str:
+    """A quantity of `kind` as a message shows it, in quotes."""
+    return _KINDS[kind][2]
+
+
 class QuantityError(ValueError):
     """A text that is not a number with a unit; the message says what would be right."""
+
+
+class OutOfRangeError(QuantityError):
+    """A quantity that a double cannot hold in driblet's unit."""
 
 
 def read_number(text: str) -> float:
@@ -86,15 +100,12 @@ def read_unit(text: str) -> Any:
     """The pint unit of a unit text such as "mM", "/M/s", "kJ/mol"; raises QuantityError with advice."""
     stripped = text.strip()
     advice = _ADVICE.get(stripped)
-    position = 0
-    while position < len(stripped):
-        token = _UNIT_TOKEN.match(stripped, position)
-        if not token:
-            raise QuantityError(f'"{stripped}" is not a unit: "{stripped[position]}" is out of place')
-        position = token.end()
     if re.match(r"[+-]?\d", stripped) and not re.match(r"1\s*/", stripped):
         raise QuantityError(f'digits are grouped without a gap: "{stripped}" begins with a digit where a unit belongs')
-    expression = stripped.replace("·", "*")
+    expression = stripped.replace("°C", "degC")
+    if len(stripped) > _LONGEST_UNIT or not _UNIT.fullmatch(expression):
+        raise QuantityError(f'"{stripped}" is not a unit: write one like mM, /M/s, kJ/mol or um^3')
+    expression = expression.replace("·", "*")
     if expression.startswith("/"):
         expression = "1" + expression
     # "/M s" would be 1/M times s to pint; nobody means that
@@ -162,8 +173,9 @@ class Quantity:
     def _convert(self, target: str) -> float:
         registry = _registry()
         value = float(registry.Quantity(self.value, self.unit).to(target).magnitude)
-        if not math.isfinite(value) or (value == 0.0 and self.value != 0.0):
-            raise QuantityError(f'"{self.text}" is out of the range of a double')
+        offset = self.kind == "temperature"  # zero kelvin is a true value of another scale
+        if not math.isfinite(value) or (value == 0.0 and self.value != 0.0 and not offset):
+            raise OutOfRangeError(f'"{self.text}" is out of the range of a double')
         return value
 
     def __str__(self) -> str:
@@ -179,25 +191,25 @@ def power_unit(concentration: int, per_time: int = 0) -> str:
     return text + "/s" * per_time
 
 
-def read_quantity(text: object, allow_plain: bool = False) -> Quantity:
+def read_quantity(text: object, allow_plain: bool = False, example: str = '"4 mM"') -> Quantity:
     """Read `number unit` from a string; with `allow_plain` a number without a unit is dimensionless.
 
-    Raises QuantityError with the advice a user needs.
+    `example` is what a message shows. Raises QuantityError with the advice a user needs.
     """
     if isinstance(text, bool) or not isinstance(text, str | int | float):
-        raise QuantityError('a number with a unit in quotes is needed, such as "4 mM"')
+        raise QuantityError(f"a number with a unit in quotes is needed, such as {example}")
     if isinstance(text, int | float):
         if allow_plain:
             return Quantity(_finite(text), _registry().dimensionless, repr(text))
-        raise QuantityError(f'a bare number {text!r} has no unit: write it in quotes with one, such as "4 mM"')
+        raise QuantityError(f"a bare number {text!r} has no unit: write it in quotes with one, such as {example}")
     parts = text.split(None, 1)
     if not parts:
-        raise QuantityError('an empty text where a number with a unit is needed, such as "4 mM"')
+        raise QuantityError(f"an empty text where a number with a unit is needed, such as {example}")
     value = read_number(parts[0])
     if len(parts) == 1:
         if allow_plain:
             return Quantity(value, _registry().dimensionless, text)
-        raise QuantityError(f'"{text}" has no unit: write one after a space, such as "4 mM"')
+        raise QuantityError(f'"{text}" has no unit: write one after a space, such as {example}')
     return Quantity(value, read_unit(parts[1]), text)
 
 

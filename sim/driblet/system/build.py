@@ -33,6 +33,10 @@ from driblet.system.tables import (
 
 LARGEST_COUNT = 2.0**53
 SMALLEST_INNER_SHARE = 1e-6
+SMALLEST_OMEGA, LARGEST_OMEGA = 1e-6, 1e27  # copies per mol/L: from less than an atom to a cubic metre
+LARGEST_DIAMETER = 1.0  # m
+LARGEST_HELD = 1000.0  # mol/L, above any pure substance
+LARGEST_LOG_RATE = 200.0  # log10 of a propensity constant in 1/s; times (2^53)^3 it is still a double
 HDF5_MAGIC = b"\x89HDF\r\n\x1a\n"
 
 
@@ -44,12 +48,15 @@ def load(path: str | Path, *, closure: bool = True) -> System:
     source = str(path)
     try:
         data = Path(path).read_bytes()
-    except OSError as error:
-        raise one_problem(source, "", f"cannot be read: {(error.strerror or str(error)).lower()}") from error
+    except (OSError, ValueError) as error:  # a ValueError when the name holds a NUL
+        reason = getattr(error, "strerror", None) or str(error)
+        raise one_problem(source, "", f"cannot be read: {reason.lower()}") from error
     if data.startswith(HDF5_MAGIC):
-        raise one_problem(source, "", f"is an HDF5 file, not a system file: look at it with `driblet show {source}`")
+        raise one_problem(
+            source, "", f"is an HDF5 file, not a system file: `driblet show {source}` prints what it holds"
+        )
     try:
-        text = data.decode("utf-8")
+        text = data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         raise one_problem(source, "", "is not text in UTF-8, so it is no system file") from error
     return loads(text, source, closure=closure)
@@ -66,6 +73,8 @@ def loads(text: str, source: str = "system file", *, closure: bool = True) -> Sy
         if "overwrite" in reason or "declare" in reason or "twice" in reason:
             reason += "; each name may be given once"
         raise one_problem(source, "", f"is not valid TOML: {reason[0].lower()}{reason[1:]}") from error
+    except (ValueError, RecursionError) as error:  # an integer of thousands of digits, thousands of brackets
+        raise one_problem(source, "", f"is not a system file: {error}") from error
     builder = _Builder(raw, text, source, closure)
     system = builder.build()
     if builder.problems or system is None:
@@ -97,6 +106,7 @@ class _Builder:
         settings = self.settings(run)
         if self.problems or not (conditions and compartment and settings):
             return None
+        self.check_rates(compartment, species, reactions)
         if self.closure:
             self.check_closure(species, reactions)
         return System(
@@ -110,6 +120,11 @@ class _Builder:
             self.text,
             self.source,
         )
+
+    def entries(self, name: str) -> Mapping[str, Any]:
+        """A section as it stands in the file, empty when it is no table (which `section` reports)."""
+        value = self.raw.get(name, {})
+        return value if isinstance(value, Mapping) else {}
 
     def section(self, name: str, required: bool) -> Mapping[str, Any]:
         """The named tables of a section whose keys are the user's own names."""
@@ -152,7 +167,7 @@ class _Builder:
             if table.wall is not None:
                 self.problem(f"{path}.wall", "a wall goes with a diameter; a volume is already the inner one")
             volume = self.measure(table.volume, "volume", f"{path}.volume")
-            return Compartment(name, volume, table.volume.cv) if volume else None
+            return Compartment(name, volume, table.volume.cv) if volume and self.fits(volume, path) else None
         assert table.diameter is not None
         diameter = self.measure(table.diameter, "length", f"{path}.diameter")
         if not diameter:
@@ -166,7 +181,7 @@ class _Builder:
             self.problem(f"{path}.diameter.cv", "is so wide that some compartments would be all wall")
             return None
         volume = math.pi / 6 * (diameter - 2 * wall) ** 3 * 1000.0
-        return Compartment(name, volume, table.diameter.cv, diameter, wall)
+        return Compartment(name, volume, table.diameter.cv, diameter, wall) if self.fits(volume, path) else None
 
     def measure(self, spread: SpreadTable, kind: str, path: str) -> float | None:
         try:
@@ -177,10 +192,18 @@ class _Builder:
         if value <= 0:
             self.problem(path, f'"{spread.median}" leaves no room; it must be above zero')
             return None
-        if kind == "volume" and copies_per_molar(value) < 1e-6:
-            self.problem(path, f'"{spread.median}" is smaller than any molecule')
+        if kind == "length" and value > LARGEST_DIAMETER:
+            self.problem(path, f'"{spread.median}" is no compartment where molecules are counted')
             return None
         return value
+
+    def fits(self, volume_L: float, path: str) -> bool:
+        omega = copies_per_molar(volume_L)
+        if omega < SMALLEST_OMEGA:
+            self.problem(path, f"{volume_L:.4g} L is smaller than any molecule")
+        if omega > LARGEST_OMEGA:
+            self.problem(path, f"{volume_L:.4g} L is no compartment where molecules are counted")
+        return SMALLEST_OMEGA <= omega <= LARGEST_OMEGA
 
     def species(self, default_loading: str, compartment: Compartment | None) -> list[Species]:
         species = []
@@ -197,14 +220,20 @@ class _Builder:
             if table is None:
                 continue
             loading = table.loading or default_loading
-            copies = table.amount.to("copies") if table.amount.kind == "copies" else None
-            concentration = None if copies is not None else table.amount.to("concentration")
+            try:
+                copies = table.amount.to("copies") if table.amount.kind == "copies" else None
+                concentration = None if copies is not None else table.amount.to("concentration")
+            except QuantityError as error:
+                self.problem(path, str(error))
+                continue
             if table.held and copies is not None:
                 self.problem(path, "a held species has a fixed concentration: give one, not copies")
             if table.held and concentration == 0:
                 self.problem(path, "a species held at zero would stop its reactions one way; leave it out")
             if copies is not None and loading == "nearest" and copies != round(copies):
                 self.problem(path, f'"{table.amount}" is fractional: only loading = "poisson" takes it as a mean')
+            if table.held and concentration is not None and concentration > LARGEST_HELD:
+                self.problem(path, f'"{table.amount}" is denser than any substance; at most {LARGEST_HELD:g} M is read')
             omega = compartment.omega if compartment else 1.0
             if not table.held and (copies if copies is not None else concentration * omega) > LARGEST_COUNT:  # type: ignore[operator]
                 self.problem(path, f'"{table.amount}" is more than 2^53 copies, too many to count')
@@ -213,15 +242,9 @@ class _Builder:
 
     def reactions(self, conditions: Conditions | None) -> list[Reaction]:
         energies = read_table(EnergiesTable, self.raw.get("energies", {}), "energies", self.problems)
-        species = self.raw.get("species", {})
-        held = (
-            {n for n, v in species.items() if isinstance(v, Mapping) and v.get("held") is True}
-            if isinstance(species, Mapping)
-            else set()
-        )
-        reader = ReactionReader(
-            set(species) if isinstance(species, Mapping) else set(), held, conditions, self.problems
-        )
+        species = self.entries("species")
+        held = {n for n, v in species.items() if isinstance(v, Mapping) and v.get("held") is True}
+        reader = ReactionReader(set(species), held, conditions, self.problems)
         if energies is not None:
             reader.read_energies(energies)
         found = (reader.read(name, value) for name, value in self.section("reactions", required=True).items())
@@ -229,9 +252,9 @@ class _Builder:
 
     def readouts(self) -> list[Readout]:
         readouts = []
-        species, reactions = self.raw.get("species", {}), self.raw.get("reactions", {})
+        species, reactions = self.entries("species"), self.entries("reactions")
         one_way = set()
-        for name, value in reactions.items() if isinstance(reactions, Mapping) else ():
+        for name, value in reactions.items():
             try:
                 if isinstance(value, Mapping) and not read_equation(str(value.get("equation"))).reversible:
                     one_way.add(name)
@@ -257,6 +280,25 @@ class _Builder:
         if duration and sample_every > duration:
             self.problem("run.sample_every", "is longer than the run")
         return RunSettings(run.engine, run.replicates, duration, sample_every, run.seed)
+
+    def check_rates(self, compartment: Compartment, species: list[Species], reactions: list[Reaction]) -> None:
+        """Refuse rate constants whose propensities a double could not hold."""
+        held = {s.name: s.concentration_M for s in species if s.held and s.concentration_M}
+        for reaction in reactions:
+            for key, constant, terms in (
+                ("forward", reaction.forward, reaction.equation.reactants),
+                ("backward", reaction.backward, reaction.equation.products),
+            ):
+                if constant is None:
+                    continue
+                order = sum(number for name, number in terms if name not in held)
+                log_rate = math.log10(constant) + (1 - order) * math.log10(compartment.omega)
+                log_rate += sum(number * math.log10(held[name]) for name, number in terms if name in held)
+                if log_rate > LARGEST_LOG_RATE:
+                    self.problem(
+                        f"reactions.{reaction.name}",
+                        f"its {key} direction would fire 1e{log_rate:.0f} times a second; check the rate and the energy",
+                    )
 
     def check_closure(self, species: list[Species], reactions: list[Reaction]) -> None:
         reversible = [r for r in reactions if r.dG0_kJ_per_mol is not None]

@@ -9,7 +9,8 @@ NAME = re.compile(r"[A-Za-z][A-Za-z0-9_]*")
 WATER = "H2O"
 NOTHING = "nothing"
 RESERVED = frozenset({WATER, NOTHING, "total", "conc", "gibbs", "and", "or", "not"})
-_TERM = re.compile(r"(?:(\d+)\s*)?([A-Za-z][A-Za-z0-9_]*)")
+_TERM = re.compile(r"(?:([0-9]+)\s*)?([A-Za-z][A-Za-z0-9_]*)")
+_LARGEST_NUMBER = 100
 
 
 class EquationError(ValueError):
@@ -77,10 +78,11 @@ def _side(text: str, whole: str) -> dict[str, int]:
         match = _TERM.fullmatch(piece.strip())
         if not match:
             raise EquationError(f'"{whole}": "{piece.strip()}" is not a species with a whole number before it')
-        number, name = int(match[1] or 1), match[2]
+        digits, name = match[1] or "1", match[2]
         if name == NOTHING:
             raise EquationError(f'"{whole}": "{NOTHING}" stands alone on its side')
-        if number < 1:
-            raise EquationError(f'"{whole}": the number before {name} must be at least 1')
+        number = int(digits) if len(digits) < 10 else _LARGEST_NUMBER + 1
+        if not 1 <= number <= _LARGEST_NUMBER:
+            raise EquationError(f'"{whole}": the number before {name} must lie between 1 and {_LARGEST_NUMBER}')
         terms[name] = terms.get(name, 0) + number
     return terms

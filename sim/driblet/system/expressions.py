@@ -16,6 +16,7 @@ Dimension = tuple[int, int]
 PLAIN: Dimension = (0, 0)
 _TOKEN = re.compile(r"\s*(?:(\d+(?:\.\d*)?(?:[eE][+-]?\d+)?)|([A-Za-z][A-Za-z0-9_]*)|([-+*/()−]))")
 _DEPTH = 60
+_MOST_TOKENS = 500  # a chain of operators is a tree as deep as it is long
 
 
 class ExpressionError(ValueError):
@@ -101,6 +102,8 @@ class _Parser:
             position = match.end()
         if not self.tokens:
             raise ExpressionError("the expression is empty")
+        if len(self.tokens) > _MOST_TOKENS:
+            raise ExpressionError(f"the expression has {len(self.tokens)} parts; at most {_MOST_TOKENS} are read")
         self.at = 0
 
     @property

@@ -13,11 +13,11 @@ from driblet.energetics.gibbs import (
     standard_energy,
 )
 from driblet.errors import Problem
-from driblet.quantities import GAS_CONSTANT, Quantity, QuantityError, power_unit
+from driblet.quantities import GAS_CONSTANT, OutOfRangeError, Quantity, QuantityError, power_unit
 from driblet.system.equation import WATER, Equation, EquationError, read_equation
 from driblet.system.expressions import nearest
 from driblet.system.model import Conditions, Reaction
-from driblet.system.tables import EnergiesTable, ReactionTable, read_table
+from driblet.system.tables import EnergiesTable, EnergyTable, ReactionTable, read_table
 
 MOST_MOLECULES = 3
 AGREEMENT = 0.01  # kJ/mol by which an energy and a pair of rate constants may differ, all three being rounded
@@ -63,19 +63,7 @@ class ReactionReader:
     def read(self, name: str, value: object) -> Reaction | None:
         """The Reaction of one table, or None after adding what is wrong to the problems."""
         path = f"reactions.{name}"
-        if (
-            isinstance(value, Mapping)
-            and isinstance(value.get("energy"), str)
-            and value["energy"]
-            not in (
-                "formation",
-                "hydrolysis",
-            )
-        ):
-            value = {**value, "energy": {"value": value["energy"]}}
-        faults: list[Problem] = []
-        table = read_table(ReactionTable, value, path, faults)
-        self.problems += [Problem(_plain_key(p.key, path), p.text) for p in faults]
+        table = read_table(ReactionTable, value, path, self.problems)
         text = value.get("equation") if isinstance(value, Mapping) else None
         if not isinstance(text, str):
             return None
@@ -146,11 +134,18 @@ class ReactionReader:
         sd = None
         try:
             dG0 = self._stated_energy(table, equation) if given else None
-            if isinstance(table.energy, object) and getattr(table.energy, "sd", None) is not None:
-                sd = self._energy(table.energy.sd)  # type: ignore[union-attr, arg-type]
         except (QuantityError, _FaultError, EquationError) as error:
             self._problem(path, given[0], str(error))
             return None
+        if isinstance(table.energy, EnergyTable) and table.energy.sd is not None:
+            try:
+                sd = self._energy(table.energy.sd)
+            except QuantityError as error:
+                self._problem(path, "energy.sd", str(error))
+                return None
+            if sd < 0:
+                self._problem(path, "energy.sd", f'"{table.energy.sd}" is negative; a standard deviation cannot be')
+                return None
         if forward is None and backward is None:
             self._problem(
                 path, "forward", "is missing: a rate constant, forward or backward, is needed with the energy"
@@ -254,6 +249,9 @@ class ReactionReader:
         order = sum(n for _, n in reactants)
         try:
             value = quantity.to_power(1 - order, 1)
+        except OutOfRangeError as error:
+            self._problem(path, key, str(error))
+            return None
         except QuantityError:
             unit = power_unit(1 - order, 1)
             what = "one molecule" if order == 1 else f"{order} molecules" if order else "nothing"
@@ -266,10 +264,3 @@ class ReactionReader:
 
     def _problem(self, path: str, key: str, text: str) -> None:
         self.problems.append(Problem(f"{path}.{key}", text))
-
-
-def _plain_key(key: str, path: str) -> str:
-    """`reactions.r.energy.EnergyTable.value` as the user wrote it: `reactions.r.energy`."""
-    tail = [part for part in key.removeprefix(path).split(".") if part and part not in ("EnergyTable", "value")]
-    tail = [part for part in tail if not part.startswith("literal")]
-    return ".".join([path, *tail])

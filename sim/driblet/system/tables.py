@@ -2,19 +2,20 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Callable, Mapping
 from difflib import get_close_matches
 from typing import Annotated, Any, Literal, TypeVar
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, ValidationError
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Discriminator, Tag, ValidationError
 from pydantic_core import PydanticCustomError
 
 from driblet.errors import Problem
-from driblet.quantities import Quantity, QuantityError, read_quantity
+from driblet.quantities import Quantity, QuantityError, example_of, read_quantity
 
 ENGINES = ("exact",)
 LOADINGS = ("nearest", "poisson")
+SHORTEST_TIME, LONGEST_TIME = 1e-15, 1e15  # s: from faster than a bond vibrates to 30 million years
+ENERGY_WORDS = ("formation", "hydrolysis")  # where an energy can come from instead of being stated
 
 
 def _complain(text: str) -> PydanticCustomError:
@@ -24,7 +25,7 @@ def _complain(text: str) -> PydanticCustomError:
 def _of_kind(kind: str, allow_zero: bool = True, allow_negative: bool = False) -> Callable[[object], float]:
     def read(value: object) -> float:
         try:
-            number = read_quantity(value).to(kind)
+            number = read_quantity(value, example=example_of(kind)).to(kind)
         except QuantityError as error:
             raise _complain(str(error)) from error
         if number < 0 and not allow_negative:
@@ -34,6 +35,13 @@ def _of_kind(kind: str, allow_zero: bool = True, allow_negative: bool = False) -
         return number
 
     return read
+
+
+def _time(value: object) -> float:
+    seconds = _of_kind("time", allow_zero=False)(value)
+    if not SHORTEST_TIME <= seconds <= LONGEST_TIME:
+        raise _complain(f'"{value}" is out of range: a time from {SHORTEST_TIME:g} s to {LONGEST_TIME:g} s is needed')
+    return seconds
 
 
 def _quantity(value: object) -> Quantity:
@@ -61,7 +69,7 @@ def _amount(value: object) -> Quantity:
 
 def _plain(low: float, high: float, what: str) -> Callable[[object], float]:
     def read(value: object) -> float:
-        if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
+        if isinstance(value, bool) or not isinstance(value, int | float):
             raise _complain(f"{value!r} is not {what}: a plain number from {low:g} to {high:g} is needed")
         if not low <= value <= high:
             raise _complain(f"{value!r} is not {what}: it lies between {low:g} and {high:g}")
@@ -94,6 +102,12 @@ def _one_of(choices: tuple[object, ...]) -> Callable[[object], object]:
     return read
 
 
+def _yes_or_no(value: object) -> bool:
+    if not isinstance(value, bool):
+        raise _complain(f"{value!r} will not do: true or false is needed")
+    return value
+
+
 def _engine(value: object) -> object:
     if value not in ENGINES:
         raise _complain(f'{value!r} is not an engine of this version: "exact" is'.replace("'", '"'))
@@ -105,7 +119,7 @@ AnyQuantity = Annotated[Quantity, BeforeValidator(_quantity)]
 Constant = Annotated[Quantity, BeforeValidator(_constant)]
 Amount = Annotated[Quantity, BeforeValidator(_amount)]
 Temperature = Annotated[float, BeforeValidator(_of_kind("temperature", allow_zero=False))]
-Time = Annotated[float, BeforeValidator(_of_kind("time", allow_zero=False))]
+Time = Annotated[float, BeforeValidator(_time)]
 Length = Annotated[float, BeforeValidator(_of_kind("length"))]
 Concentration = Annotated[float, BeforeValidator(_of_kind("concentration"))]
 Loading = Annotated[Literal["nearest", "poisson"], BeforeValidator(_one_of(LOADINGS))]
@@ -142,7 +156,7 @@ class CompartmentTable(Table):
 
 class SpeciesTable(Table):
     amount: Amount
-    held: Annotated[bool, BeforeValidator(_one_of((True, False)))] = False
+    held: Annotated[bool, BeforeValidator(_yes_or_no)] = False
     loading: Loading | None = None
     label: Text | None = None
 
@@ -152,9 +166,20 @@ class EnergyTable(Table):
     sd: AnyQuantity | None = None
 
 
+def _energy_tag(value: object) -> str:
+    return "word" if isinstance(value, str) and value in ENERGY_WORDS else "table"
+
+
+Energy = Annotated[
+    Annotated[EnergyTable, _as_table("value"), Tag("table")]
+    | Annotated[Literal["formation", "hydrolysis"], Tag("word")],
+    Discriminator(_energy_tag),
+]
+
+
 class ReactionTable(Table):
     equation: Text
-    energy: EnergyTable | Literal["formation", "hydrolysis"] | None = None
+    energy: Energy | None = None
     K: Constant | None = None
     Kd: AnyQuantity | None = None
     forward: AnyQuantity | None = None
@@ -196,7 +221,9 @@ def read_table(model: type[TableType], value: object, path: str, problems: list[
 
 def _problem(model: type[Table], value: Mapping[str, Any], path: str, fault: Any) -> Problem:
     location = [str(part) for part in fault["loc"]]
-    if location[-1] == "median" and not isinstance(value.get(location[0]), Mapping):
+    if location[1:2] == ["table"]:
+        del location[1]  # pydantic's name for a branch, not a key of the file
+    if location[-1] in ("median", "value") and not isinstance(value.get(location[0]), Mapping):
         location.pop()  # a bare value stood for the table
     key = ".".join([path, *location])
     kind = fault["type"]
@@ -206,6 +233,8 @@ def _problem(model: type[Table], value: Mapping[str, Any], path: str, fault: Any
         return Problem(key, "is missing and has no default")
     if kind == "driblet":
         return Problem(key, fault["ctx"]["text"])
+    if kind in ("dict_type", "model_type"):
+        return Problem(key, f"a table of keys is needed, not {fault['input']!r}")
     return Problem(key, f"{fault['input']!r} will not do: {fault['msg'][0].lower()}{fault['msg'][1:]}")
 
 
