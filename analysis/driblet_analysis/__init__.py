@@ -1,0 +1,1 @@
+"""driblet_analysis: reads run files; writes tables, figures and verdicts."""

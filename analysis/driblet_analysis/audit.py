@@ -1,0 +1,288 @@
+"""What the energies of a system imply before anything is simulated, as plain facts."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numpy as np
+from driblet.drive import emergent_affinities, is_driven, ln_constants, runnable
+from driblet.energetics.cycles import conservation_laws, cycles
+from driblet.energetics.equilibrium import NoEquilibriumError, equilibrium_composition
+from driblet.ensemble import sample_times
+from driblet.errors import CannotAnswerError, InputError
+from driblet.network import BACKWARD, FORWARD, Network
+from driblet.quantities import power_unit
+from driblet.system import Reaction, System
+from driblet.system.build import stoichiometric_matrix
+from numpy.typing import NDArray
+
+from driblet_analysis.references.count_equilibrium import count_law
+from driblet_analysis.references.rate_equations import expected_course
+
+EVENTS_PER_SECOND_AND_CORE = 3e7  # of the exact engine on a current core; for the estimate alone
+FEW_MOLECULES = 10
+WIDE_RANGE = 1e9
+ROUNDING = 0.01
+Array = NDArray[np.float64]
+
+
+def audit_facts(system: System) -> dict[str, Any]:
+    """Everything `driblet audit` prints, as values for JSON; energies in kJ/mol, times in s, counts in copies.
+
+    Numbers that have no value are None, with the reason beside them.
+    """
+    network = Network.of(system)
+    omega = system.compartment.omega
+    copies = np.array([s.mean_copies(omega) for s in system.free_species])
+    rates = network.rates(np.array([omega]))[0]
+    course = _course(system, network, copies)
+    warnings = list(getattr(system, "warnings", ()))
+    warnings += _warnings(system, network, copies, course)
+    return {
+        "title": system.title,
+        "source": system.source,
+        "conditions": {
+            "temperature_K": system.conditions.temperature_K,
+            "pH": system.conditions.pH,
+            "pMg": system.conditions.pMg,
+            "ionic_strength_M": system.conditions.ionic_strength_M,
+            "RT_kJ_per_mol": system.conditions.RT_kJ_per_mol,
+        },
+        "compartment": {
+            "name": system.compartment.name,
+            "volume_L": system.compartment.volume_L,
+            "cv": system.compartment.cv,
+            "copies_per_mM": omega * 1e-3,
+        },
+        "species": [
+            {
+                "name": s.name,
+                "held": s.held,
+                "concentration_M": s.concentration_M if s.concentration_M is not None else (s.copies or 0.0) / omega,
+                "mean_copies": None if s.held else s.mean_copies(omega),
+                "loading": None if s.held else s.loading,
+            }
+            for s in system.species
+        ],
+        "reactions": [_reaction_facts(system, network, r, copies, rates) for r in range(len(system.reactions))],
+        "conservation_laws": _conservation(network, copies),
+        "cycles": _cycle_facts(system),
+        "emergent_cycles": [
+            {"reactions": _weights(system, cycle.reactions), "affinity_kJ_per_mol": cycle.affinity_kJ_per_mol}
+            for cycle in emergent_affinities(system)
+        ],
+        "driven": is_driven(system),
+        "equilibrium": _equilibrium(system, network),
+        "run": _run_facts(system, course),
+        "warnings": warnings,
+    }
+
+
+def _reaction_facts(system: System, network: Network, r: int, copies: Array, rates: Array) -> dict[str, Any]:
+    reaction = system.reactions[r]
+    propensities = network.propensities(np.round(copies), rates)
+    forward, backward = (network.channel_index(d)[r] for d in (FORWARD, BACKWARD))
+    energy, reason = _initial_energy(system, reaction)
+    order_left = sum(n for _, n in reaction.equation.reactants)
+    order_right = sum(n for _, n in reaction.equation.products)
+    return {
+        "name": reaction.name,
+        "equation": str(reaction.equation),
+        "dG0_kJ_per_mol": reaction.dG0_kJ_per_mol,
+        "K": reaction.K,
+        "K_unit": power_unit(reaction.equation.order_change) or "1",
+        "dG_kJ_per_mol": energy,
+        "dG_reason": reason,
+        "direction": _direction(system, reaction, energy),
+        "forward_constant": reaction.forward,
+        "forward_unit": power_unit(1 - order_left, 1),
+        "backward_constant": reaction.backward,
+        "backward_unit": power_unit(1 - order_right, 1),
+        "forward_propensity_per_s": float(propensities[forward]),
+        "backward_propensity_per_s": float(propensities[backward]) if backward >= 0 else None,
+        "energy_from": reaction.energy_from,
+        "one_way": reaction.one_way,
+    }
+
+
+def _concentration(system: System, name: str) -> float:
+    species = next(s for s in system.species if s.name == name)
+    if species.concentration_M is not None:
+        return species.concentration_M
+    return (species.copies or 0.0) / system.compartment.omega
+
+
+def _initial_energy(system: System, reaction: Reaction) -> tuple[float | None, str | None]:
+    """dG at the initial composition in concentrations, or None and why."""
+    if reaction.dG0_kJ_per_mol is None:
+        return None, "one way: the energy is undefined"
+    log_quotient = 0.0
+    for name, number in reaction.equation.change.items():
+        c = _concentration(system, name)
+        if c == 0:
+            side = "product" if number > 0 else "reactant"
+            return None, f"{side} {name} is absent"
+        log_quotient += number * math.log(c)
+    return reaction.dG0_kJ_per_mol + system.conditions.RT_kJ_per_mol * log_quotient, None
+
+
+def _direction(system: System, reaction: Reaction, energy: float | None) -> str:
+    if reaction.backward is None:
+        return "forward"
+    if energy is not None:
+        return "at equilibrium" if abs(energy) < 1e-9 else ("forward" if energy < 0 else "backward")
+    can_forward = all(_concentration(system, n) > 0 for n, _ in reaction.equation.reactants)
+    can_backward = all(_concentration(system, n) > 0 for n, _ in reaction.equation.products)
+    return {(True, False): "forward", (False, True): "backward"}.get((can_forward, can_backward), "neither can start")
+
+
+def _conservation(network: Network, copies: Array) -> list[dict[str, Any]]:
+    return [
+        {
+            "weights": {network.species[i]: int(law[i]) for i in np.flatnonzero(law)},
+            "total_copies": float(law @ copies),
+        }
+        for law in conservation_laws(network.stoichiometry)
+    ]
+
+
+def _weights(system: System, vector: NDArray[np.int64]) -> dict[str, int]:
+    return {r.name: int(w) for r, w in zip(system.reactions, vector, strict=True) if w}
+
+
+def _cycle_facts(system: System) -> list[dict[str, Any]]:
+    reversible = [r for r in system.reactions if r.dG0_kJ_per_mol is not None]
+    matrix = stoichiometric_matrix([s.name for s in system.species], reversible)
+    energies = np.array([r.dG0_kJ_per_mol for r in reversible], dtype=float)
+    return [
+        {
+            "reactions": {reversible[r].name: int(vector[r]) for r in np.flatnonzero(vector)},
+            "sum_kJ_per_mol": float(vector @ energies),
+        }
+        for vector in cycles(matrix)
+    ]
+
+
+def _equilibrium(system: System, network: Network) -> dict[str, Any] | None:
+    """Copies in the median compartment: macroscopic, and the exact mean over states of its class."""
+    if is_driven(system) is not False:
+        why = "the system is driven" if is_driven(system) else "one-way reactions have no equilibrium"
+        return {"macroscopic": None, "finite_count_mean": None, "reason": why}
+    omega = system.compartment.omega
+    names = network.species
+    concentrations = np.array([_concentration(system, name) for name in names])
+    active = runnable(system)
+    macroscopic = concentrations.copy()
+    touched = np.abs(network.stoichiometry[:, active]).sum(axis=1) > 0
+    try:
+        macroscopic[touched] = equilibrium_composition(
+            network.stoichiometry[np.ix_(touched, active)], ln_constants(system)[active], concentrations[touched]
+        )
+    except NoEquilibriumError as error:
+        return {"macroscopic": None, "finite_count_mean": None, "reason": str(error)}
+    facts: dict[str, Any] = {
+        "macroscopic": dict(zip(names, (macroscopic * omega).tolist(), strict=True)),
+        "finite_count_mean": None,
+        "finite_count_sd": None,
+        "reason": None,
+    }
+    load = np.array([round(s.mean_copies(omega)) for s in system.free_species], dtype=np.int64)
+    try:
+        law = count_law(system, load, omega)
+    except CannotAnswerError as error:
+        return {**facts, "reason": str(error)}
+    if law is None:
+        return {**facts, "reason": "too many states to enumerate"}
+    facts["finite_count_mean"] = dict(zip(names, law.mean().tolist(), strict=True))
+    facts["finite_count_sd"] = dict(zip(names, np.sqrt(np.diag(law.covariance())).tolist(), strict=True))
+    return facts
+
+
+def _course(system: System, network: Network, copies: Array) -> dict[str, Any] | None:
+    """Expected firings of each channel over the run by the rate equations, None without a duration."""
+    duration = system.settings.duration_s
+    if not duration > 0:
+        return None
+    firings, final = expected_course(network, copies, system.compartment.omega, duration)
+    return {"firings": firings, "final": final, "duration_s": duration}
+
+
+def _run_facts(system: System, course: dict[str, Any] | None) -> dict[str, Any]:
+    if course is None:
+        return {"duration_s": None, "events_per_simulated_second": None, "estimated_core_seconds": None}
+    events = float(np.sum(course["firings"]))
+    try:
+        samples = len(sample_times(system.settings))
+    except InputError:
+        samples = 0
+    return {
+        "duration_s": course["duration_s"],
+        "replicates": system.settings.replicates,
+        "samples": samples,
+        "events_per_simulated_second": events / course["duration_s"],
+        "estimated_core_seconds": events * system.settings.replicates / EVENTS_PER_SECOND_AND_CORE,
+    }
+
+
+def _warnings(system: System, network: Network, copies: Array, course: dict[str, Any] | None) -> list[str]:
+    found = []
+    stoichiometry = network.stoichiometry
+    used = {i for channel in network.channels for i, _ in channel.reactants + channel.change}
+    for i, name in enumerate(network.species):
+        if i not in used:
+            found.append(f"{name} takes part in no reaction")
+        elif not stoichiometry[i].any():
+            found.append(f"{name} is only a catalyst: its count never changes")
+    for reaction, can_run in zip(system.reactions, runnable(system), strict=True):
+        if not can_run:
+            found.append(f"{reaction.name} can never run from this load: something it needs is never made")
+    found += _rounding(system)
+    final = copies if course is None else course["final"]
+    few = [
+        name
+        for i, name in enumerate(network.species)
+        if i in used and 0 < max(copies[i], final[i]) < FEW_MOLECULES and stoichiometry[i].any()
+    ]
+    if few:
+        found.append(
+            f"under {FEW_MOLECULES} copies of {', '.join(few)} in a compartment: concentrations mislead, read the "
+            "finite-count means"
+        )
+    if course is not None:
+        found += _firing_warnings(system, network, course)
+    return found
+
+
+def _rounding(system: System) -> list[str]:
+    omega = system.compartment.omega
+    found = []
+    for species in system.free_species:
+        mean = species.mean_copies(omega)
+        if species.loading == "nearest" and mean and abs(round(mean) - mean) > ROUNDING * mean:
+            found.append(
+                f"{species.name}: {mean:.4g} copies on average, but loading = \"nearest\" puts {round(mean)} in a median "
+                'compartment; loading = "poisson" keeps the mean'
+            )
+    return found
+
+
+def _firing_warnings(system: System, network: Network, course: dict[str, Any]) -> list[str]:
+    firings = course["firings"]
+    found = []
+    backward = network.channel_index(BACKWARD)
+    for r, reaction in enumerate(system.reactions):
+        total = float(firings[backward[r]]) * system.settings.replicates if backward[r] >= 0 else math.inf
+        if total < 1 and runnable(system)[r]:
+            found.append(
+                f"the reverse of {reaction.name} is expected to fire {total:.2g} times in the whole run: too rarely for "
+                "the run to show its energy"
+            )
+    positive = firings[firings > 0]
+    if len(positive) and positive.max() / positive.min() > WIDE_RANGE:
+        slow, fast = (network.channels[int(np.flatnonzero(firings == f)[0])] for f in (positive.min(), positive.max()))
+        found.append(
+            f"firings are {positive.max() / positive.min():.1g}-fold apart ({network.reactions[fast.reaction]} against "
+            f"{network.reactions[slow.reaction]}): nearly all of the work goes into the fastest"
+        )
+    return found

@@ -1,0 +1,141 @@
+"""`driblet audit`: what the energies of a system imply before anything is simulated."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import click
+
+from driblet.commands.screen import CAUTION, console, duration, number, print_json, table
+
+
+@click.command(short_help="Show what a system's energies imply before anything runs.")
+@click.argument("file", type=click.Path(path_type=Path))
+@click.option("--json", "as_json", is_flag=True, help="Print the same facts as JSON.")
+def audit(file: Path, as_json: bool) -> None:
+    """Show what the energies and rate constants in FILE imply, before anything is simulated.
+
+    Energies, constants and directions of each reaction; conserved sums; cycles and what drives them; the equilibrium
+    composition beside the exact means over countable states; the work a run will take; and what to watch out for.
+    """
+    from driblet.system import load
+
+    from driblet_analysis.audit import audit_facts
+
+    facts = audit_facts(load(file))
+    if as_json:
+        print_json(facts)
+        return
+    _print(facts)
+
+
+def _print(facts: dict[str, Any]) -> None:
+    out = console()
+    out.print(f"[bold]{facts['title']}[/bold]")
+    out.print(_conditions(facts), markup=False)
+    out.print(_species(facts))
+    out.print(_energies(facts))
+    out.print(_rates(facts))
+    for law in facts["conservation_laws"]:
+        out.print(f"conserved: {_sum(law['weights'])} = {number(law['total_copies'])} copies", markup=False)
+    for cycle in facts["cycles"]:
+        out.print(f"closed cycle: {_sum(cycle['reactions'])} = 0 kJ/mol", markup=False)
+    for cycle in facts["emergent_cycles"]:
+        spent = cycle["affinity_kJ_per_mol"]
+        what = f"spends {number(spent)} kJ/mol a turn" if spent else "held concentrations agree, no drive"
+        out.print(f"emergent cycle: {_sum(cycle['reactions'])}: {what}", markup=False)
+    driven = {True: "driven: a steady state is not an equilibrium", False: "not driven: it runs to equilibrium"}
+    out.print(driven.get(facts["driven"], "driven or not is undefined: reactions that can run are one way"), markup=False)
+    equilibrium = facts["equilibrium"]
+    if equilibrium["macroscopic"] is None:
+        out.print(f"no equilibrium composition: {equilibrium['reason']}", markup=False)
+    elif equilibrium["reason"]:
+        out.print(f"no exact finite-count means: {equilibrium['reason']}", markup=False)
+    run = facts["run"]
+    if run["duration_s"] is not None:
+        out.print(
+            f"{number(run['events_per_simulated_second'])} events per simulated second and compartment; "
+            f"{run['replicates']} compartments for {duration(run['duration_s'])}: about "
+            f"{duration(run['estimated_core_seconds'])} on one core",
+            markup=False,
+        )
+    for warning in facts["warnings"]:
+        out.print(f"note: {warning}", markup=False)
+    out.print(CAUTION, style="dim")
+
+
+def _conditions(facts: dict[str, Any]) -> str:
+    c = facts["conditions"]
+    parts = [f"{c['temperature_K'] - 273.15:.4g} °C"]
+    parts += [f"{name} {c[name]:g}" for name in ("pH", "pMg") if c[name] is not None]
+    if c["ionic_strength_M"] is not None:
+        parts.append(f"ionic strength {c['ionic_strength_M']:g} M")
+    volume = facts["compartment"]["volume_L"]
+    scale, unit = next((s, u) for s, u in ((1e-9, "nL"), (1e-12, "pL"), (1e-15, "fL"), (0.0, "aL")) if volume >= s)
+    scale = scale or 1e-18
+    spread = f" (median; cv {facts['compartment']['cv']:g})" if facts["compartment"]["cv"] else ""
+    return (
+        f"{', '.join(parts)}; {facts['compartment']['name']} of {number(volume / scale)} {unit}{spread}: "
+        f"1 mM = {number(facts['compartment']['copies_per_mM'])} copies"
+    )
+
+
+def _species(facts: dict[str, Any]) -> Any:
+    equilibrium = facts["equilibrium"]
+
+    def at(kind: str, name: str) -> str:
+        values = equilibrium.get(kind)
+        return number(values.get(name)) if values else "–"
+
+    rows = [
+        [
+            s["name"],
+            f"{s['concentration_M'] * 1e3:.4g}",
+            "held" if s["held"] else number(s["mean_copies"]),
+            at("macroscopic", s["name"]),
+            at("finite_count_mean", s["name"]),
+            at("finite_count_sd", s["name"]),
+        ]
+        for s in facts["species"]
+    ]
+    columns = ["species", "start (mM)", "copies", "equilibrium, macroscopic", "exact mean", "exact sd"]
+    return table("species, copies in the median compartment", columns, rows)
+
+
+def _energies(facts: dict[str, Any]) -> Any:
+    rows = [
+        [
+            r["name"],
+            r["equation"],
+            number(r["dG0_kJ_per_mol"]),
+            number(r["K"]) + (f" {r['K_unit']}" if r["K"] is not None and r["K_unit"] != "1" else ""),
+            number(r["dG_kJ_per_mol"]) if r["dG_reason"] is None else f"– ({r['dG_reason']})",
+            r["direction"],
+        ]
+        for r in facts["reactions"]
+    ]
+    return table("energies, kJ/mol", ["reaction", "equation", "ΔG°′", "K′", "ΔG at the start", "runs"], rows, left=2)
+
+
+def _rates(facts: dict[str, Any]) -> Any:
+    rows = [
+        [
+            r["name"],
+            f"{number(r['forward_constant'])} {r['forward_unit']}",
+            f"{number(r['backward_constant'])} {r['backward_unit']}" if r["backward_constant"] else f"– ({r['one_way']})",
+            number(r["forward_propensity_per_s"]),
+            number(r["backward_propensity_per_s"]),
+        ]
+        for r in facts["reactions"]
+    ]
+    columns = ["reaction", "forward constant", "backward constant", "forward at start (/s)", "backward at start (/s)"]
+    return table("rates", columns, rows)
+
+
+def _sum(weights: dict[str, int]) -> str:
+    text = ""
+    for name, weight in weights.items():
+        sign = (" − " if weight < 0 else " + ") if text else ("−" if weight < 0 else "")
+        text += sign + (f"{abs(weight)} " if abs(weight) != 1 else "") + name
+    return text
