@@ -7,11 +7,14 @@ into RUN.h5, again through a temporary name. One unit of replicates is one row o
 
 from __future__ import annotations
 
+import itertools
 import json
 import os
 import shutil
+import tempfile
 import time
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -26,6 +29,7 @@ FORMAT = 1
 _CHUNK_BYTES = 1 << 18
 _FLUSH_SECONDS = 2.0
 _FLUSH_BYTES = 64 << 20
+_MEMORY_RUNS = itertools.count(1)  # HDF5 keeps files in memory apart by name
 SERIES = ("counts", "firings_forward", "firings_backward")
 
 
@@ -77,7 +81,7 @@ class Block:
 
 def parts_folder(path: Path) -> Path:
     """Where the shards of a run that is not finished lie."""
-    return path.with_name(path.name + ".parts")
+    return path.parent / f"{path.name}.parts"  # with_name refuses "." and "/"
 
 
 class RunWriter:
@@ -94,37 +98,38 @@ class RunWriter:
         self.last_flush = time.monotonic()
         if path is None:
             return
-        if path.is_dir():
-            raise one_problem(str(path), "", "is a directory; a file name is needed")
-        if not path.parent.is_dir():
-            raise one_problem(str(path), "", f"cannot be written: the folder {path.parent} does not exist")
         parts = parts_folder(path)
-        if force:
-            shutil.rmtree(parts, ignore_errors=True)
-        elif path.exists() and not resume:
-            raise one_problem(str(path), "", "exists already; --force replaces it, another -o keeps it")
+        with _writing(path):
+            self._claim(path, parts, resume, force)
         if resume:
             for shard in _shards(parts):
                 with open_file(shard) as file:
                     if file.attrs["identity"] != layout.identity:
                         raise one_problem(str(parts), "", "holds parts of another run; --force discards them")
                     self.done.update(int(u) for u in file["provenance/units"][:])
-        elif not force and parts.exists():
-            raise one_problem(
-                str(path),
-                "",
-                f"an interrupted run is kept in {parts.name}; go on with --resume, or discard it with --force",
-            )
-        self._try_to_write()
 
-    def _try_to_write(self) -> None:
-        assert self.path is not None
-        probe = self.path.with_name(f".{self.path.name}.{os.getpid()}.probe")
-        try:
-            probe.touch()
-            probe.unlink()
-        except OSError as error:
-            raise one_problem(str(self.path), "", f"cannot be written: {(error.strerror or '').lower()}") from error
+    @staticmethod
+    def _claim(path: Path, parts: Path, resume: bool, force: bool) -> None:
+        """Make sure that the run file can be made, and that nothing is lost by making it."""
+        name = str(path)
+        taken = _exists(path)
+        if path.is_dir():
+            raise one_problem(name, "", "is a directory; a file name is needed")
+        if taken and not path.is_file():
+            raise one_problem(name, "", "is no ordinary file; another name is needed")
+        if not path.parent.is_dir():
+            raise one_problem(name, "", f"cannot be written: the folder {path.parent} does not exist")
+        if _exists(parts) and not parts.is_dir():
+            raise one_problem(name, "", f"cannot be written: {parts.name} is in the way")
+        if taken and not (resume or force):
+            raise one_problem(name, "", "exists already; --force replaces it, another -o keeps it")
+        if _shards(parts) and not (resume or force):
+            text = f"an interrupted run is kept in {parts.name}; go on with --resume, or discard it with --force"
+            raise one_problem(name, "", text)
+        with tempfile.TemporaryFile(dir=path.parent):
+            pass
+        if force:
+            shutil.rmtree(parts, ignore_errors=True)
 
     def add(self, block: Block) -> None:
         """Take a finished block; it may be written now or with later ones."""
@@ -138,10 +143,13 @@ class RunWriter:
         if self.path is None or not self.waiting:
             return
         parts = parts_folder(self.path)
-        parts.mkdir(exist_ok=True)
         blocks = sorted(self.waiting, key=lambda b: b.unit)
         name = f"units-{blocks[0].unit:06d}-{len(blocks):04d}-{os.getpid()}.h5"
-        _write_atomically(parts / name, lambda file: _fill(file, self.layout, blocks))
+        with _writing(self.path):
+            parts.mkdir(exist_ok=True)
+            _write_atomically(parts / name, parts, lambda file: _fill(file, self.layout, blocks))
+            # readers take the run file before its parts, so one that is being replaced (--force) goes now
+            self.path.unlink(missing_ok=True)
         self.done.update(b.unit for b in blocks)
         self.waiting = []
         self.last_flush = time.monotonic()
@@ -153,7 +161,14 @@ class RunWriter:
         """
         blocks = sorted(self.waiting, key=lambda b: b.unit)
         if self.path is None:
-            file = h5py.File("run in memory", "w", driver="core", backing_store=False, libver="v110", track_order=True)
+            file = h5py.File(
+                f"run in memory {next(_MEMORY_RUNS)}",
+                "w",
+                driver="core",
+                backing_store=False,
+                libver="v110",
+                track_order=True,
+            )
             _fill(file, self.layout, blocks)
             file["provenance"].attrs.update(closing)
             return file
@@ -168,7 +183,9 @@ class RunWriter:
                 _fill(file, self.layout, blocks)
             file["provenance"].attrs.update(closing)
 
-        _write_atomically(self.path, write)
+        with _writing(self.path):
+            parts.mkdir(exist_ok=True)
+            _write_atomically(self.path, parts, write)
         shutil.rmtree(parts, ignore_errors=True)
         return None
 
@@ -177,8 +194,31 @@ def _shards(parts: Path) -> list[Path]:
     return sorted(parts.glob("units-*.h5")) if parts.is_dir() else []
 
 
-def _write_atomically(path: Path, fill: Any) -> None:
-    temporary = path.with_name(f"{path.name}.{os.getpid()}.tmp")
+def _exists(path: Path) -> bool:
+    """Whether there is anything of that name, a dangling link too. Raises OSError where that cannot be known."""
+    try:
+        path.lstat()
+    except (FileNotFoundError, NotADirectoryError):
+        return False
+    return True
+
+
+@contextmanager
+def _writing(path: Path) -> Iterator[None]:
+    """Turns what the system says about writing (a full disk, no permission) into one line about `path`."""
+    try:
+        yield
+    except InputError:
+        raise
+    except (OSError, RuntimeError, ValueError) as error:  # h5py has all three
+        code = error.errno if isinstance(error, OSError) else None
+        reason = os.strerror(code) if code else " ".join(str(error).split())
+        raise one_problem(str(path), "", f"cannot be written: {reason[:1].lower()}{reason[1:]}") from error
+
+
+def _write_atomically(path: Path, workplace: Path, fill: Any) -> None:
+    """Make a file that is there whole or not at all; `workplace` : a folder on the same disk for the unfinished one."""
+    temporary = workplace / f"{path.name}.{os.getpid()}.tmp"
     try:
         with h5py.File(temporary, "w", libver="v110", track_order=True) as file:
             fill(file)
@@ -320,14 +360,28 @@ def open_file(path: str | Path) -> h5py.File:
     except OSError as error:
         what = "is truncated or damaged" if "truncated" in str(error) or "eof" in str(error) else "cannot be opened"
         raise one_problem(name, "", f"{what}; run the system again") from error
-    version = file.attrs.get("driblet_format")
-    if version is None:
+    try:
+        with reading(name):
+            version = file.attrs.get("driblet_format")
+            if version is None:
+                raise one_problem(name, "", "is HDF5 but not a driblet run file")
+            if version != FORMAT:
+                raise one_problem(name, "", f"has run-file version {version}; this driblet reads version {FORMAT}")
+    except InputError:
         file.close()
-        raise one_problem(name, "", "is HDF5 but not a driblet run file")
-    if int(version) != FORMAT:
-        file.close()
-        raise one_problem(name, "", f"has run-file version {int(version)}; this driblet reads version {FORMAT}")
+        raise
     return file
+
+
+@contextmanager
+def reading(name: str) -> Iterator[None]:
+    """Turns what h5py says about a damaged file into one line."""
+    try:
+        yield
+    except InputError:
+        raise
+    except (OSError, RuntimeError, ValueError, KeyError, TypeError, AttributeError) as error:
+        raise one_problem(name, "", "is a damaged run file; run the system again") from error
 
 
 def open_run(path: str | Path) -> list[h5py.File]:
