@@ -11,22 +11,24 @@ import os
 import platform
 import threading
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from dataclasses import dataclass, replace
+from numbers import Integral, Real
 from pathlib import Path
 from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from driblet.errors import DribletError, InterruptedRunError, one_problem
+from driblet.errors import DribletError, InputError, InterruptedRunError, Problem, one_problem
 from driblet.loading import prepare
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.readouts import evaluate
 from driblet.results import Run
 from driblet.store import FORMAT, Block, Layout, RunWriter
 from driblet.system import RunSettings, System
+from driblet.system.tables import ENGINES, LARGEST_SEED, LONGEST_TIME, MOST_REPLICATES, SHORTEST_TIME
 from driblet.version import __version__
 
 _BUDGET = 1 << 20  # events an engine fires before it looks up: some 30 ms
@@ -66,6 +68,26 @@ def sample_times(settings: RunSettings) -> NDArray[np.float64]:
     return times
 
 
+def _check_arguments(given: Mapping[str, object], threads: int | None) -> None:
+    """Hold what a caller gave to the rules of the system file. Raises InputError with every problem."""
+    problems = []
+    for key, low, high in (("replicates", 1, MOST_REPLICATES), ("seed", 0, LARGEST_SEED)):
+        value = given.get(key, low)
+        if isinstance(value, bool) or not isinstance(value, Integral) or not low <= int(value) <= high:
+            problems.append(Problem(key, f"{value!r} will not do: a whole number from {low} to {high} is needed"))
+    for key, argument in (("duration_s", "duration"), ("sample_every_s", "sample_every")):
+        value = given.get(key, 1.0)
+        if isinstance(value, bool) or not isinstance(value, Real) or not SHORTEST_TIME <= float(value) <= LONGEST_TIME:
+            text = f"{value!r} will not do: seconds from {SHORTEST_TIME:g} to {LONGEST_TIME:g} are needed"
+            problems.append(Problem(argument, text))
+    if given.get("engine", "exact") not in ENGINES:
+        problems.append(Problem("engine", f'"{given["engine"]}" is not an engine of this version: "exact" is'))
+    if threads is not None and (isinstance(threads, bool) or not isinstance(threads, Integral) or threads < 1):
+        problems.append(Problem("threads", f"{threads!r} will not do: a whole number from 1 is needed"))
+    if problems:
+        raise InputError("run", problems)
+
+
 def run(
     system: System,
     output: str | Path | None = None,
@@ -93,11 +115,10 @@ def run(
         "seed": seed,
         "engine": engine,
     }
-    settings = replace(system.settings, **{k: v for k, v in changes.items() if v is not None})  # type: ignore[arg-type]
-    if settings.replicates < 1:
-        raise one_problem("run", "replicates", "at least 1 is needed")
-    if settings.engine != "exact":
-        raise one_problem("run", "engine", f'"{settings.engine}" is not an engine of this version: "exact" is')
+    given = {k: v for k, v in changes.items() if v is not None}
+    _check_arguments(given, threads)
+    plain = {k: v if k == "engine" else float(v) if k.endswith("_s") else int(v) for k, v in given.items()}
+    settings = replace(system.settings, **plain)  # type: ignore[arg-type]
     times = sample_times(settings)
     layout = _layout(system, settings, times)
     path = Path(output) if output is not None else None

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import html
 import json
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from functools import cached_property
 from pathlib import Path
 from typing import Any
@@ -14,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.errors import one_problem
-from driblet.store import SERIES, open_run
+from driblet.store import SERIES, open_run, reading
 from driblet.system import System, loads
 
 
@@ -27,9 +28,14 @@ class Run:
     def __init__(self, source: str | Path | h5py.File) -> None:
         self.name = source.filename if isinstance(source, h5py.File) else str(source)
         self._files = [source] if isinstance(source, h5py.File) else open_run(source)
+        with reading(self.name):
+            self._read_frame()
+
+    def _read_frame(self) -> None:
         first = self._files[0]
         rows = np.concatenate([f["replicate"][:] for f in self._files])
-        self._order = np.argsort(rows, kind="stable")
+        # a replicate can stand in two shards when Ctrl-C came between writing and noting it: the same bits twice
+        self._order = np.unique(rows, return_index=True)[1]
         self.replicate: NDArray[np.int64] = rows[self._order]
         self.time_s: NDArray[np.float64] = first["time"][:]
         self.species: tuple[str, ...] = tuple(first["species"].asstr()[:])
@@ -48,11 +54,19 @@ class Run:
         """A hash of the system file, the settings and the seed: equal for runs that must give the same bits."""
         return str(self._files[0].attrs["identity"])
 
+    @contextmanager
+    def _opened(self) -> Iterator[list[h5py.File]]:
+        if not all(self._files):
+            raise ValueError(f"{self.name} has been closed; what was not read before is out of reach")
+        with reading(self.name):
+            yield self._files
+
     def _read(self, name: str, rows: slice = slice(None)) -> NDArray[Any]:
-        if len(self._files) == 1 and np.array_equal(self._order, np.arange(len(self._order))):
-            return np.asarray(self._files[0][name][rows])
-        joined = np.concatenate([f[name][:] for f in self._files])
-        return np.asarray(joined[self._order][rows])
+        with self._opened() as files:
+            if len(files) == 1 and np.array_equal(self._order, np.arange(len(self._order))):
+                return np.asarray(files[0][name][rows])
+            joined = np.concatenate([f[name][:] for f in files])
+            return np.asarray(joined[self._order][rows])
 
     @cached_property
     def counts(self) -> NDArray[np.int64]:
@@ -92,23 +106,27 @@ class Run:
 
     def final_counts(self) -> NDArray[np.int64]:
         """Counts at the end, int64, shape=(replicates, species), without reading the rest."""
-        return np.concatenate([f["counts"][:, -1] for f in self._files])[self._order]
+        with self._opened() as files:
+            return np.concatenate([f["counts"][:, -1] for f in files])[self._order]
 
     def initial_counts(self) -> NDArray[np.int64]:
         """Counts at time zero, int64, shape=(replicates, species), without reading the rest."""
-        return np.concatenate([f["counts"][:, 0] for f in self._files])[self._order]
+        with self._opened() as files:
+            return np.concatenate([f["counts"][:, 0] for f in files])[self._order]
 
     @cached_property
     def system(self) -> System:
         """The system this run simulated, built anew from the text kept in the file."""
-        text = self._files[0]["provenance/system_file"].asstr()[()]
+        with self._opened() as files:
+            text = files[0]["provenance/system_file"].asstr()[()]
         return loads(text, f"system file in {self.name}")
 
     @property
     def provenance(self) -> dict[str, Any]:
         """How the run was made: versions, engine, settings, seed, host, wall time."""
-        attributes = self._files[0]["provenance"].attrs.items()
-        return {name: value.item() if isinstance(value, np.generic) else value for name, value in attributes}
+        with self._opened() as files:
+            attributes = dict(files[0]["provenance"].attrs)
+        return {name: value.item() if isinstance(value, np.generic) else value for name, value in attributes.items()}
 
     def to_xarray(self) -> Any:
         """The run as an xarray Dataset with named dimensions and units. Raises InputError without xarray."""

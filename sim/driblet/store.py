@@ -218,7 +218,8 @@ def _writing(path: Path) -> Iterator[None]:
 
 def _write_atomically(path: Path, workplace: Path, fill: Any) -> None:
     """Make a file that is there whole or not at all; `workplace` : a folder on the same disk for the unfinished one."""
-    temporary = workplace / f"{path.name}.{os.getpid()}.tmp"
+    # a name of our own: the longest name a run file may have leaves no room for additions
+    temporary = workplace / f"{'shard' if path.parent == workplace else 'run'}.{os.getpid()}.tmp"
     try:
         with h5py.File(temporary, "w", libver="v110", track_order=True) as file:
             fill(file)
@@ -347,8 +348,9 @@ def open_file(path: str | Path) -> h5py.File:
             head = stream.read(8)
     except IsADirectoryError as error:
         raise one_problem(name, "", "is a directory, not a run file") from error
-    except OSError as error:
-        raise one_problem(name, "", f"cannot be read: {(error.strerror or str(error)).lower()}") from error
+    except (OSError, ValueError) as error:  # a ValueError when the name holds a NUL
+        reason = getattr(error, "strerror", None) or str(error)
+        raise one_problem(name, "", f"cannot be read: {reason.lower()}") from error
     if not head:
         raise one_problem(name, "", "is empty, so it is no run file")
     if head != b"\x89HDF\r\n\x1a\n":
@@ -387,10 +389,11 @@ def reading(name: str) -> Iterator[None]:
 def open_run(path: str | Path) -> list[h5py.File]:
     """The files that make up a run: the run file, or the shards of one that was interrupted."""
     path = Path(path)
-    if path.is_dir() and path.name.endswith(".parts"):
+    if path.name.endswith(".parts") and os.path.isdir(path):
         path = path.with_name(path.name.removesuffix(".parts"))
-    shards = _shards(parts_folder(path))
-    if path.exists() or not shards:
+    parts = parts_folder(path)
+    shards = _shards(parts) if os.path.isdir(parts) else []
+    if os.path.exists(path) or not shards:
         return [open_file(path)]
     files = [open_file(shard) for shard in shards]
     if len({file.attrs["identity"] for file in files}) > 1:

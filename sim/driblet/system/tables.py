@@ -14,6 +14,7 @@ from driblet.quantities import Quantity, QuantityError, example_of, read_quantit
 
 ENGINES = ("exact",)
 LOADINGS = ("nearest", "poisson")
+MOST_REPLICATES, LARGEST_SEED = 10_000_000, 2**63 - 1
 SHORTEST_TIME, LONGEST_TIME = 1e-15, 1e15  # s: from faster than a bond vibrates to 30 million years
 ENERGY_WORDS = ("formation", "hydrolysis")  # where an energy can come from instead of being stated
 
@@ -195,11 +196,11 @@ class EnergiesTable(Table):
 
 class RunTable(Table):
     engine: Annotated[str, BeforeValidator(_engine)] = "exact"
-    replicates: Annotated[int, BeforeValidator(_whole(1, 10_000_000))] = 100
+    replicates: Annotated[int, BeforeValidator(_whole(1, MOST_REPLICATES))] = 100
     duration: Time | None = None
     sample_every: Time | None = None
     loading: Loading = "nearest"
-    seed: Annotated[int, BeforeValidator(_whole(0, 2**63 - 1))] = 0
+    seed: Annotated[int, BeforeValidator(_whole(0, LARGEST_SEED))] = 0
 
 
 SECTIONS = ("title", "conditions", "compartments", "species", "energies", "reactions", "readouts", "run")
