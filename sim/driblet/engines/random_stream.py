@@ -10,6 +10,7 @@ from __future__ import annotations
 import numpy as np
 from llvmlite import ir
 from numba import njit, types
+from numba.core import config
 from numba.extending import intrinsic
 
 _LN2 = 0.6931471805599453
@@ -34,6 +35,15 @@ def _double_of_bits(typingctx, x):  # type: ignore[no-untyped-def]
         return builder.bitcast(args[0], ir.DoubleType())
 
     return types.float64(types.int64), codegen
+
+
+if config.DISABLE_JIT:  # type: ignore[attr-defined]  # an intrinsic exists in compiled code only
+
+    def _bits_of_double(x):  # type: ignore[no-untyped-def, misc]
+        return np.float64(x).view(np.int64)
+
+    def _double_of_bits(x):  # type: ignore[no-untyped-def, misc]
+        return np.int64(x).view(np.float64)
 
 
 @njit(inline="always")
