@@ -59,7 +59,9 @@ mean, sd = np.array(exact).T
 with style():
     figure = Figure(figsize=(6.4, 4.2), layout="constrained")
     ax = figure.subplots()
-    ax.fill_between(pulls, mean - sd, mean + sd, color=COLOURS[0], alpha=0.25, linewidth=0, label="± sd of compartments")
+    ax.fill_between(
+        pulls, mean - sd, mean + sd, color=COLOURS[0], alpha=0.25, linewidth=0, label="± sd of compartments"
+    )
     ax.plot(pulls, mean, color=COLOURS[0], linewidth=1.8, label="exact mean at equilibrium")
     for k, pull in enumerate((0, 8, 16, 24)):
         run = driblet.run(driblet.loads(TEXT.format(pull=-float(pull))), seed=pull)

@@ -6,6 +6,8 @@ import math
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
+
 from driblet.drive import emergent_affinities, is_driven, ln_constants, runnable
 from driblet.energetics.cycles import conservation_laws, cycles
 from driblet.energetics.equilibrium import NoEquilibriumError, equilibrium_composition
@@ -15,10 +17,8 @@ from driblet.network import BACKWARD, FORWARD, Network
 from driblet.quantities import power_unit
 from driblet.system import Reaction, System
 from driblet.system.build import stoichiometric_matrix
-from numpy.typing import NDArray
-
+from driblet_analysis.course import expected_course
 from driblet_analysis.references.count_equilibrium import count_law
-from driblet_analysis.references.rate_equations import expected_course
 
 EVENTS_PER_SECOND_AND_CORE = 3e7  # of the exact engine on a current core; for the estimate alone
 FEW_MOLECULES = 10
@@ -261,7 +261,7 @@ def _rounding(system: System) -> list[str]:
         mean = species.mean_copies(omega)
         if species.loading == "nearest" and mean and abs(round(mean) - mean) > ROUNDING * mean:
             found.append(
-                f"{species.name}: {mean:.4g} copies on average, but loading = \"nearest\" puts {round(mean)} in a median "
+                f'{species.name}: {mean:.4g} copies on average, but loading = "nearest" puts {round(mean)} in a median '
                 'compartment; loading = "poisson" keeps the mean'
             )
     return found

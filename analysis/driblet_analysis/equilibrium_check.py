@@ -11,6 +11,8 @@ from dataclasses import dataclass
 from typing import NamedTuple
 
 import numpy as np
+from numpy.typing import NDArray
+
 from driblet.drive import emergent_affinities, is_driven
 from driblet.energetics.cycles import dependencies
 from driblet.errors import CannotAnswerError
@@ -19,8 +21,6 @@ from driblet.results import Run
 from driblet.statistics import holm, jackknife, randomised_pit
 from driblet.system import System
 from driblet.system.build import describe_cycle
-from numpy.typing import NDArray
-
 from driblet_analysis.references.count_equilibrium import CountLaw, count_law
 from driblet_analysis.references.rate_equations import relaxation_time
 
@@ -119,7 +119,7 @@ def _first_relaxed_sample(run: Run, system: System, laws: list[CountLaw]) -> int
     if needed > 0.5 * duration:
         raise CannotAnswerError(
             f"too short: the slowest relaxation takes {slowest:.3g} s and the run {duration:.3g} s; "
-            f"run about {2 * needed / duration:.1f} times longer (--duration \"{2 * needed:.2g} s\")"
+            f'run about {2 * needed / duration:.1f} times longer (--duration "{2 * needed:.2g} s")'
         )
     return int(np.searchsorted(run.time_s, 0.5 * duration))
 
@@ -170,7 +170,10 @@ def _average_test(name: str, difference: Array) -> TestRow:
     """Student's t over replicates of time average minus exact mean."""
     from scipy.stats import ttest_1samp
 
-    label, hypothesis = f"{name}: time average", f"its mean over compartments is the exact one, {name} by {name}'s class"
+    label, hypothesis = (
+        f"{name}: time average",
+        f"its mean over compartments is the exact one, {name} by {name}'s class",
+    )
     hypothesis = "the mean over compartments of (time average − exact mean of the compartment's class) is zero"
     if np.ptp(difference) == 0:
         exact = bool(difference[0] == 0)

@@ -13,13 +13,13 @@ from typing import Any
 
 import matplotlib
 import numpy as np
-from driblet.errors import CannotAnswerError, one_problem
-from driblet.results import Run
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
+from driblet.errors import CannotAnswerError, one_problem
+from driblet.results import Run
 from driblet_analysis.references.count_equilibrium import CountLaw, count_law
 
 Array = NDArray[np.float64]
@@ -108,7 +108,9 @@ def _overview(run: Run) -> Figure:
     labels = {s.name: s.label for s in run.system.species}
     counts = run.counts
     changing = [i for i in range(len(run.species)) if np.ptp(counts[:, :, i])]
-    rows: list[tuple[str, Array, int | None]] = [(f"{labels[run.species[i]]} (copies)", counts[:, :, i], i) for i in changing]
+    rows: list[tuple[str, Array, int | None]] = [
+        (f"{labels[run.species[i]]} (copies)", counts[:, :, i], i) for i in changing
+    ]
     for name, unit in run.readout_units.items():
         rows.append((f"{name} ({unit})" if unit != "1" else name, run.readout(name), None))
     left_out = max(0, len(rows) - MOST_ROWS)

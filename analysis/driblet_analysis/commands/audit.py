@@ -20,7 +20,6 @@ def audit(file: Path, as_json: bool) -> None:
     composition beside the exact means over countable states; the work a run will take; and what to watch out for.
     """
     from driblet.system import load
-
     from driblet_analysis.audit import audit_facts
 
     facts = audit_facts(load(file))
@@ -46,7 +45,9 @@ def _print(facts: dict[str, Any]) -> None:
         what = f"spends {number(spent)} kJ/mol a turn" if spent else "held concentrations agree, no drive"
         out.print(f"emergent cycle: {_sum(cycle['reactions'])}: {what}", markup=False)
     driven = {True: "driven: a steady state is not an equilibrium", False: "not driven: it runs to equilibrium"}
-    out.print(driven.get(facts["driven"], "driven or not is undefined: reactions that can run are one way"), markup=False)
+    out.print(
+        driven.get(facts["driven"], "driven or not is undefined: reactions that can run are one way"), markup=False
+    )
     equilibrium = facts["equilibrium"]
     if equilibrium["macroscopic"] is None:
         out.print(f"no equilibrium composition: {equilibrium['reason']}", markup=False)
@@ -123,7 +124,9 @@ def _rates(facts: dict[str, Any]) -> Any:
         [
             r["name"],
             f"{number(r['forward_constant'])} {r['forward_unit']}",
-            f"{number(r['backward_constant'])} {r['backward_unit']}" if r["backward_constant"] else f"– ({r['one_way']})",
+            f"{number(r['backward_constant'])} {r['backward_unit']}"
+            if r["backward_constant"]
+            else f"– ({r['one_way']})",
             number(r["forward_propensity_per_s"]),
             number(r["backward_propensity_per_s"]),
         ]

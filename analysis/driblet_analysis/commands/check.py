@@ -5,6 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 
 import click
+
 from driblet.commands.screen import console, duration, number, print_json, table
 from driblet.errors import EXIT_CANNOT_ANSWER, EXIT_CHECK_SAYS_NO, EXIT_DONE
 from driblet.quantities import power_unit
@@ -23,7 +24,6 @@ def check(run_file: Path, as_json: bool) -> int:
     most 5 % of cases.
     """
     from driblet.results import Run
-
     from driblet_analysis.equilibrium_check import FALSE_ALARM_RATE, check_equilibrium
 
     with Run(run_file) as run:

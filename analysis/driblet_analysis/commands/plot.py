@@ -5,13 +5,17 @@ from __future__ import annotations
 from pathlib import Path
 
 import click
+
 from driblet.commands.screen import console
 
 
 @click.command(short_help="Draw trajectories and histograms of a run.")
 @click.argument("run_file", metavar="RUN.h5", type=click.Path(path_type=Path))
 @click.option(
-    "-o", "--output", type=click.Path(path_type=Path), help="FIG.png, .pdf or .svg; default: RUN.png beside the run file."
+    "-o",
+    "--output",
+    type=click.Path(path_type=Path),
+    help="FIG.png, .pdf or .svg; default: RUN.png beside the run file.",
 )
 def plot(run_file: Path, output: Path | None) -> None:
     """Draw RUN.h5: each species over time with the spread between compartments, and the end states.
@@ -19,7 +23,6 @@ def plot(run_file: Path, output: Path | None) -> None:
     Where the system has an exact equilibrium law, it is drawn over the histograms.
     """
     from driblet.results import Run
-
     from driblet_analysis.figures import overview, save
 
     with Run(run_file) as run:
