@@ -130,6 +130,7 @@ def _overview(run: Run) -> Figure:
         law = None if laws is None or i is None else _mean_marginal(laws, i)
         _end_states(axes[k, 1], values[:, -1], label, colour, law, legend=k == 0)
     axes[-1, 0].set_xlabel(f"time ({unit})")
+    figure.align_ylabels(axes[:, 0])
     axes[0, 0].set_title("over time")
     axes[0, 1].set_title("at the end" + (", with the exact law" if laws is not None else ""))
     return figure
@@ -180,10 +181,11 @@ def _end_states(
         n, p = law
         low, high = edges[0] - (edges[-1] - edges[0]) * 0.15, edges[-1] + (edges[-1] - edges[0]) * 0.15
         bins = np.arange(edges[0] - np.ceil((edges[0] - low) / width) * width, high + width, width)
+        bins = bins[bins >= -0.5]
         expected, _ = np.histogram(n, bins=bins, weights=p)
         ax.stairs(expected, bins, color=LAW_COLOUR, linewidth=1.4, label="exact law")
     ax.xaxis.set_major_locator(MaxNLocator(5, integer=whole))
-    if legend:
+    if legend and law is not None:
         ax.legend(loc="best")
 
 
