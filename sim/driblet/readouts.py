@@ -45,7 +45,7 @@ def evaluate(system: System, expression: Expression, counts: NDArray[np.int64], 
         n = held[node.name] * omega if node.name in held else counts[..., column[node.name]].astype(float)
         return np.asarray(n / omega if node.kind == "conc" else n)
 
-    with np.errstate(divide="ignore", invalid="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         result = np.broadcast_to(value(expression.root), np.broadcast_shapes(counts.shape[:-1], np.shape(omega))).copy()
     if expression.root.dimension != (0, 1):
         result[~np.isfinite(result)] = np.nan

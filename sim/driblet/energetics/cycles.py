@@ -14,14 +14,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 Vector = NDArray[np.int64]
+_LARGE = 2**31  # products and sums of smaller numbers stay exact in int64
 CLOSURE_TOLERANCE = 1e-6  # kJ/mol; energies that sum to less along a cycle close it
 
 
 def dependencies(rows: NDArray[np.int64]) -> Vector:
     """Every linear dependency among integer rows: an exact basis of the left null space.
 
-    rows : int64, shape=(n, m). Returns int64, shape=(k, n), smallest whole numbers; each dependency expresses one row
-    by independent rows before it, so the basis is unique for an order of rows.
+    rows : int64, shape=(n, m). Returns the smallest whole numbers, shape=(k, n), int64, or object where they are huge;
+    each dependency expresses one row by independent rows before it, so the basis is unique for an order of rows.
     """
     n = rows.shape[0]
     pivots: dict[int, tuple[dict[int, int], dict[int, int]]] = {}
@@ -44,7 +45,9 @@ def dependencies(rows: NDArray[np.int64]) -> Vector:
         else:
             divisor = gcd(*mix.values()) * (1 if mix[i] > 0 else -1)
             found.append({k: v // divisor for k, v in mix.items()})
-    basis = np.zeros((len(found), n), dtype=np.int64)
+    # the smallest whole numbers of a tangled network can be larger than 64 bits hold; then Python's own integers
+    large = max((abs(value) for mix in found for value in mix.values()), default=0) > _LARGE
+    basis = np.zeros((len(found), n), dtype=object if large else np.int64)
     for k, mix in enumerate(found):
         for i, value in mix.items():
             basis[k, i] = value
@@ -80,7 +83,7 @@ def conservation_laws(stoichiometry: NDArray[np.int64]) -> Vector:
         for k, law in enumerate(laws):
             if (law < 0).any():
                 laws[k] = _lift(law, [other for j, other in enumerate(laws) if j != k])
-    return np.array(laws, dtype=np.int64).reshape(len(laws), stoichiometry.shape[0])
+    return np.vstack([np.zeros((0, stoichiometry.shape[0]), dtype=np.int64), *laws])
 
 
 def _lift(law: Vector, others: list[Vector]) -> Vector:
@@ -137,7 +140,7 @@ def emergent_cycles(stoichiometry: NDArray[np.int64], held: NDArray[np.bool_]) -
         if trial.shape[0] - len(dependencies(trial)) > rank:
             kept.append(vector)
             rank += 1
-    return np.array(kept, dtype=np.int64).reshape(len(kept), stoichiometry.shape[1])
+    return np.vstack([np.zeros((0, stoichiometry.shape[1]), dtype=np.int64), *kept])
 
 
 def reconciled(
