@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.integrate import solve_ivp
 
 from driblet.drive import ln_constants, runnable
 from driblet.energetics.equilibrium import equilibrium_composition
@@ -20,6 +19,8 @@ def expected_course(network: Network, copies: Array, omega: float, duration_s: f
     copies : at the start, shape=(species,); omega : copies per mol/L. Propensities are taken at the mean counts, which is
     exact for first-order reactions and an estimate for the others. Raises ArithmeticError where the integration fails.
     """
+    from scipy.integrate import solve_ivp
+
     n = len(network.species)
     rates = network.rates(np.array([omega]))[0]
     change = np.zeros((n, len(network.channels)))

@@ -6,6 +6,7 @@ from collections.abc import Callable
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.special import kolmogorov, stdtr
 
 Array = NDArray[np.float64]
 
@@ -44,3 +45,24 @@ def jackknife(statistic: Callable[[Array], float], samples: Array) -> tuple[floa
     whole = statistic(total / n)
     parts = np.array([statistic((total - one) / (n - 1)) for one in samples])
     return whole, float(np.sqrt((n - 1) / n * np.sum((parts - parts.mean()) ** 2)))
+
+
+def student_t(differences: Array) -> tuple[float, float]:
+    """Student's t of a mean against zero and its two-sided p; differences : shape=(n,), n at least 2, not all equal."""
+    n = len(differences)
+    t = float(np.mean(differences) / (np.std(differences, ddof=1) / np.sqrt(n)))
+    return t, float(2.0 * stdtr(n - 1, -abs(t)))
+
+
+def uniformity(values: Array) -> tuple[float, float]:
+    """Kolmogorov-Smirnov distance of values from the uniform law on (0, 1), and its p.
+
+    Stephens' modification of the limiting distribution (J. R. Stat. Soc. B 32:115, 1970), good from n = 5 up. (The exact
+    distribution stands in scipy.stats, whose import takes longer than most checks.)
+    """
+    n = len(values)
+    x = np.sort(values)
+    steps = np.arange(1, n + 1) / n
+    distance = float(max(np.max(steps - x), np.max(x - steps + 1.0 / n)))
+    root = np.sqrt(n)
+    return distance, float(kolmogorov((root + 0.12 + 0.11 / root) * distance))
