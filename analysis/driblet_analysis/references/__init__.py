@@ -1,0 +1,1 @@
+"""What a simulation is held against: count equilibrium, master equation, rate equations."""
