@@ -67,18 +67,21 @@ class CheckResult:
     window_s: tuple[float, float] | None = None
 
 
-def check_equilibrium(run: Run) -> CheckResult:
-    """Test a run against the exact count equilibrium of its system file; never raises for data that cannot answer."""
+def check_equilibrium(run: Run, against: System | None = None) -> CheckResult:
+    """Test a run against the exact count equilibrium of its system, or of `against`: the same with other energies.
+
+    Never raises for data that cannot answer; the verdict says so.
+    """
+    system = against or run.system
     try:
-        laws, first = _prepare(run)
-        return _test(run, laws, first)
+        laws, first = _prepare(run, system)
+        return _test(run, system, laws, first)
     except CannotAnswerError as error:
         return CheckResult("cannot answer", str(error))
 
 
-def _prepare(run: Run) -> tuple[list[CountLaw], int]:
+def _prepare(run: Run, system: System) -> tuple[list[CountLaw], int]:
     """The law of each replicate and the first sample after relaxation. Raises CannotAnswerError."""
-    system = run.system
     driven = is_driven(system)
     if driven:
         vector, affinity = max(emergent_affinities(system), key=lambda pair: abs(pair[1]))
@@ -131,8 +134,7 @@ def independent_species(network: Network) -> list[int]:
     return [i for i in range(matrix.shape[0]) if i not in dependent]
 
 
-def _test(run: Run, laws: list[CountLaw], first: int) -> CheckResult:
-    system = run.system
+def _test(run: Run, system: System, laws: list[CountLaw], first: int) -> CheckResult:
     network = Network.of(system)
     means = np.array([law.mean() for law in laws])
     averages = run.counts[:, first:].mean(axis=1)
