@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import string
+from contextlib import suppress
 
 import pytest
 from hypothesis import given
@@ -163,7 +164,7 @@ def test_quantities_convert(text: str, kind: str, value: float) -> None:
     ],
 )
 def test_quantities_refused_with_advice(text: str, advice: str) -> None:
-    with pytest.raises(QuantityError, match=".") as caught:
+    with pytest.raises(QuantityError) as caught:
         read_quantity(text)
     assert advice in str(caught.value)
 
@@ -264,16 +265,9 @@ def test_power_units_are_written_as_they_are_read(concentration: int, per_time: 
 
 @given(st.text(alphabet="munpkMLsJKdegC°CÅ()*/^·-+0123456789 ²³⁻¹.eV_[]{}%µ\n\t'\"\\", max_size=25))
 def test_no_unit_text_does_anything_but_read_or_refuse(text: str) -> None:
-    try:
-        quantity = read_quantity("4 " + text)
-    except QuantityError as error:
-        assert str(error)
-        return
     for kind in ("concentration", "temperature", "energy", "time"):
-        try:
-            assert math.isfinite(quantity.to(kind))
-        except QuantityError:
-            continue
+        with suppress(QuantityError):
+            assert math.isfinite(read_quantity("4 " + text).to(kind))
 
 
 def test_constants_of_nature_are_codata() -> None:

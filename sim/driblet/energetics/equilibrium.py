@@ -55,7 +55,8 @@ def equilibrium_composition(stoichiometry: NDArray[np.int64], ln_K: Array, initi
     if not len(laws):
         return np.asarray(np.exp(g))
     totals = laws @ initial
-    scale = float(np.max(np.abs(totals)))
+    # sums that are all zero, as when a species and its partner come from nothing together, set no scale
+    scale = float(np.max(np.abs(totals))) or float(np.max(initial)) or 1.0
     guess = np.log(np.maximum(initial, 1e-3 * scale))
     multipliers, *_ = np.linalg.lstsq(laws.T, guess - g, rcond=None)
     return _solve_dual(laws, totals, g, multipliers, scale)
