@@ -47,7 +47,7 @@ def runnable(system: System, present: Collection[str] | None = None) -> NDArray[
     right = [{index[name] for name, _ in r.equation.products} for r in system.reactions]
     for r, reaction in enumerate(system.reactions):
         if reaction.backward is None:
-            right[r].add(-1 - r)  # stands for something only this reaction makes: its right side comes from nowhere else
+            right[r].add(-1 - r)  # stands for something that only this reaction makes, so that it never runs backward
     return np.array(reachable(left, right, here)[1], dtype=bool)
 
 

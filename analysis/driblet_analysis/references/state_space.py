@@ -84,7 +84,9 @@ def is_finite(network: Network, reactions: Sequence[int]) -> bool:
         return True
     from scipy.optimize import linprog  # slow to import, and most checks never come here
 
-    result = linprog(np.ones(S.shape[0]), A_eq=S.T.astype(float), b_eq=np.zeros(S.shape[1]), bounds=(1.0, None), method="highs")
+    result = linprog(
+        np.ones(S.shape[0]), A_eq=S.T.astype(float), b_eq=np.zeros(S.shape[1]), bounds=(1.0, None), method="highs"
+    )
     return bool(result.status == 0)
 
 
@@ -154,10 +156,10 @@ def _table(states, count, size):  # type: ignore[no-untyped-def]
 
 @njit(nogil=True, cache=CACHE)
 def _enabled(state, need, channel):  # type: ignore[no-untyped-def]
+    enabled = True
     for i in range(state.size):
-        if state[i] < need[channel, i]:
-            return False
-    return True
+        enabled = enabled and state[i] >= need[channel, i]
+    return enabled
 
 
 @njit(nogil=True, cache=CACHE)
