@@ -51,6 +51,13 @@ _KINDS: dict[str, tuple[dict[str, int], str, str]] = {
         '"-16.7 kJ/mol"',
     ),
     "thermal energy": ({"[thermal_energy]": 1}, "kT", '"-6.6 kT"'),
+    "mass concentration": ({"[mass]": 1, "[length]": -3}, "gram / liter", '"20 ug/mL"'),
+    "molar mass": ({"[mass]": 1, "[substance]": -1}, "gram / mole", '"82 kDa"'),
+    "specific activity": (
+        {"[substance]": 1, "[time]": -1, "[mass]": -1},
+        "mole / second / gram",
+        '"150 U/mg"',
+    ),
 }
 
 
@@ -139,7 +146,7 @@ class Quantity:
         return next((kind for kind, spec in _KINDS.items() if spec[0] == dimension), None)
 
     def to(self, kind: str) -> float:
-        """The value in driblet's unit of `kind`: K, s, m, L, mol/L, copies, kJ/mol, kT.
+        """The value in driblet's unit of `kind`: K, s, m, L, mol/L, copies, kJ/mol, kT, g/L, g/mol, mol/(s g).
 
         Raises QuantityError when the dimension is another.
         """
