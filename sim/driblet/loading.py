@@ -18,6 +18,7 @@ from driblet.quantities import copies_per_molar
 from driblet.system.model import Compartment, System
 
 Array = NDArray[np.float64]
+_MANY = 1e9
 _PREPARATION = 1  # the spawn key that sets a replicate's preparation apart from its reaction events
 
 
@@ -75,9 +76,15 @@ def volumes(compartment: Compartment, uniform: Array) -> Array:
 
 
 def poisson_quantile(p: Array, mean: Array) -> Array:
-    """Smallest k with P(N <= k) >= p for N Poisson of the given mean; shapes alike."""
+    """Smallest k with P(N <= k) >= p for N Poisson of the given mean; shapes alike.
+
+    Above 1e9 copies, where scipy's inverse gives up, to the nearest copy or two by Cornish and Fisher's expansion.
+    """
     k = np.zeros_like(p)
-    some = mean > 0
+    many = mean > _MANY
+    z = ndtri(p[many])
+    k[many] = np.ceil(mean[many] + z * np.sqrt(mean[many]) + (z * z - 1.0) / 6.0 - 0.5)
+    some = (mean > 0) & ~many
     q, m = p[some], mean[some]
     guess = np.ceil(np.nan_to_num(pdtrik(q, m), nan=0.0))
     guess = np.maximum(guess, 0.0)
