@@ -21,8 +21,8 @@ from driblet.results import Run
 from driblet.statistics import holm, jackknife, randomised_pit, student_t, uniformity
 from driblet.system import System
 from driblet.system.build import describe_cycle
-from driblet_analysis.course import relaxation_time
 from driblet_analysis.references.count_equilibrium import CountLaw, count_law
+from driblet_analysis.references.rate_equations import relaxation_time
 
 FALSE_ALARM_RATE = 0.05  # chance that a correct run is called inconsistent
 FEWEST_REPLICATES = 20
