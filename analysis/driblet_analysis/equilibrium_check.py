@@ -30,10 +30,8 @@ _RELAXATION_MARGIN = 1.5  # small compartments relax at their own pace, not quit
 Array = NDArray[np.float64]
 
 
-class TestRow(NamedTuple):
+class CheckRow(NamedTuple):
     """One test. p is corrected for the number of tests; samples counts replicates."""
-
-    __test__ = False  # not a test of pytest's
 
     name: str
     hypothesis: str
@@ -62,7 +60,7 @@ class CheckResult:
 
     verdict: str
     reason: str
-    tests: tuple[TestRow, ...] = ()
+    tests: tuple[CheckRow, ...] = ()
     ratios: tuple[RatioRow, ...] = ()
     window_s: tuple[float, float] | None = None
 
@@ -140,13 +138,13 @@ def _test(run: Run, system: System, laws: list[CountLaw], first: int) -> CheckRe
     averages = run.counts[:, first:].mean(axis=1)
     final = run.counts[:, -1]
     uniform = np.random.default_rng(np.random.SeedSequence(int(run.provenance["seed"]), spawn_key=(2**32 - 1,)))
-    rows: list[TestRow] = []
+    rows: list[CheckRow] = []
     for i in independent_species(network):
         name = run.species[i]
         varies = np.array([law.covariance()[i, i] > 0 for law in laws])
         if not varies.any():
             if np.any(averages[:, i] != means[:, i]):
-                rows.append(TestRow(f"{name}: fixed", f"{name} keeps its count", math.inf, 0.0, len(laws)))
+                rows.append(CheckRow(f"{name}: fixed", f"{name} keeps its count", math.inf, 0.0, len(laws)))
             continue
         rows.append(_average_test(name, (averages - means)[varies, i]))
         transform = _transform(final[varies, i], [law for law, v in zip(laws, varies, strict=True) if v], i, uniform)
@@ -168,7 +166,7 @@ def _test(run: Run, system: System, laws: list[CountLaw], first: int) -> CheckRe
     return CheckResult("inconsistent" if failed else "consistent", reason, tests, ratios, window)
 
 
-def _average_test(name: str, difference: Array) -> TestRow:
+def _average_test(name: str, difference: Array) -> CheckRow:
     """Student's t over replicates of time average minus exact mean."""
     label, hypothesis = (
         f"{name}: time average",
@@ -177,16 +175,16 @@ def _average_test(name: str, difference: Array) -> TestRow:
     hypothesis = "the mean over compartments of (time average − exact mean of the compartment's class) is zero"
     if np.ptp(difference) == 0:
         exact = bool(difference[0] == 0)
-        return TestRow(label, hypothesis, 0.0 if exact else math.inf, 1.0 if exact else 0.0, len(difference))
+        return CheckRow(label, hypothesis, 0.0 if exact else math.inf, 1.0 if exact else 0.0, len(difference))
     t, p = student_t(difference)
-    return TestRow(label, hypothesis, t, p, len(difference))
+    return CheckRow(label, hypothesis, t, p, len(difference))
 
 
-def _uniformity_test(name: str, transform: Array) -> TestRow:
+def _uniformity_test(name: str, transform: Array) -> CheckRow:
     """Kolmogorov-Smirnov of the transformed end states against uniformity."""
     distance, p = uniformity(transform)
     hypothesis = "the end state of each compartment follows the exact law of its class"
-    return TestRow(f"{name}: distribution", hypothesis, distance, p, len(transform))
+    return CheckRow(f"{name}: distribution", hypothesis, distance, p, len(transform))
 
 
 def _transform(values: NDArray[np.int64], laws: list[CountLaw], i: int, generator: np.random.Generator) -> Array:
