@@ -27,7 +27,7 @@ COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#6
 LAW_COLOUR = "#1F1F1F"
 FORMATS = (".png", ".pdf", ".svg")
 MOST_ROWS = 10
-_STYLE: dict[str, Any] = {
+_STYLE: Any = {
     "font.size": 9.5,
     "axes.titlesize": 10.5,
     "axes.titlelocation": "left",
@@ -108,7 +108,7 @@ def _overview(run: Run) -> Figure:
     labels = {s.name: s.label for s in run.system.species}
     counts = run.counts
     changing = [i for i in range(len(run.species)) if np.ptp(counts[:, :, i])]
-    rows: list[tuple[str, Array, int | None]] = [
+    rows: list[tuple[str, NDArray[Any], int | None]] = [
         (f"{labels[run.species[i]]} (copies)", counts[:, :, i], i) for i in changing
     ]
     for name, unit in run.readout_units.items():

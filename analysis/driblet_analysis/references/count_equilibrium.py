@@ -71,7 +71,7 @@ class CountLaw:
         counts = self.states[:, species]
         low = int(counts.min())
         pmf = np.bincount(counts - low, weights=self.probability)
-        return np.arange(low, low + len(pmf)), pmf
+        return np.arange(low, low + len(pmf), dtype=np.int64), np.asarray(pmf, dtype=float)
 
 
 def log_weights(states: States, ln_c_eq: Array, omega: float) -> Array:
