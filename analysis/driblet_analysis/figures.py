@@ -6,6 +6,7 @@ order of Okabe & Ito, "Color Universal Design", 2008).
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -191,9 +192,10 @@ def _end_states(
 
 def _mean_marginal(laws: list[CountLaw], i: int) -> tuple[Array, Array]:
     """Average over compartments of the marginal law of species i: (counts, probabilities)."""
-    total: dict[int, float] = {}
-    for law in laws:
-        for n, p in zip(*law.marginal(i), strict=True):
-            total[int(n)] = total.get(int(n), 0.0) + float(p)
-    n = np.array(sorted(total), dtype=float)
-    return n, np.array([total[int(k)] for k in n]) / len(laws)
+    shared = Counter(id(law) for law in laws)  # compartments of one load and size share their law
+    parts = [(law.marginal(i), shared.pop(id(law))) for law in laws if id(law) in shared]
+    low = min(int(n[0]) for (n, _), _ in parts)
+    total = np.zeros(max(int(n[-1]) for (n, _), _ in parts) - low + 1)
+    for (n, p), times in parts:
+        total[n - low] += times * p
+    return np.arange(low, low + len(total), dtype=float), total / len(laws)
