@@ -8,7 +8,7 @@ logarithm repeats the engine's series in the same order of operations, because b
 from __future__ import annotations
 
 import struct
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 
 MASK = (1 << 64) - 1
@@ -73,7 +73,11 @@ def propensity(step: Step, counts: Mapping[str, int]) -> float:
 
 
 def simulate(
-    steps: Sequence[Step], start: Mapping[str, int], times: Sequence[float], seed: Sequence[int]
+    steps: Sequence[Step],
+    start: Mapping[str, int],
+    times: Sequence[float],
+    seed: Sequence[int],
+    propensity: Callable[[Step, Mapping[str, int]], float] = propensity,
 ) -> Trajectory:
     """Gillespie's direct method: two words an event, first the waiting time, then the channel."""
     stream = words(seed)

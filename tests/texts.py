@@ -46,7 +46,7 @@ wall = "4 nm"
 A = "60 uM"
 B = { amount = "20 copies", loading = "nearest" }
 C = "0 copies"
-D = "3 copies"
+D = "9 copies"
 E = { amount = "5 copies", loading = "nearest" }
 F = { amount = "1 mM", held = true }
 
@@ -67,12 +67,12 @@ forward = "5e4 /M/s"
 
 [reactions.triple]
 equation = "3 D <=> C"
-K = "1e9 /M^2"
+K = "1e12 /M^2"
 backward = "0.5 /s"
 
 [reactions.meet]
 equation = "A + B + D <=> C + F"
-K = "2e8 /M"
+K = "5e7 /M"
 backward = "1e3 /M/s"
 
 [reactions.leak]

@@ -50,9 +50,9 @@ def test_propensity_constants_by_hand(network: Network) -> None:
         ("turn", BACKWARD): 1e4 / 3 / omega,
         ("pair", FORWARD): 5e4 / omega,  # times n (n - 1): no 1/2
         ("pair", BACKWARD): 5e4 / 1e4,
-        ("triple", FORWARD): 0.5 * 1e9 / omega**2,
+        ("triple", FORWARD): 0.5 * 1e12 / omega**2,
         ("triple", BACKWARD): 0.5,
-        ("meet", FORWARD): 1e3 * 2e8 / omega**2,
+        ("meet", FORWARD): 1e3 * 5e7 / omega**2,
         ("meet", BACKWARD): 1e3 * 1e-3,  # F is held at 1 mM
         ("leak", FORWARD): 0.05,
     }
