@@ -49,7 +49,9 @@ def use_cache() -> bool:
     if os.environ.get("NUMBA_CACHE_DIR"):
         return _usable(Path(os.environ["NUMBA_CACHE_DIR"]), private=False)
     name = source_hash()
-    home = os.environ.get("XDG_CACHE_HOME") or os.path.join(os.path.expanduser("~"), ".cache")
+    home = os.environ.get("XDG_CACHE_HOME", "")
+    if not os.path.isabs(home):  # the XDG standard: a relative path is to be ignored
+        home = os.path.join(os.path.expanduser("~"), ".cache")
     user_id = os.getuid() if hasattr(os, "getuid") else 0
     temporary = Path(tempfile.gettempdir()) / f"driblet-{user_id}"
     candidates = [(Path(home) / "driblet" / name, False)] if os.path.isabs(home) else []
