@@ -18,6 +18,7 @@ from driblet.quantities import power_unit
 from driblet.system import Reaction, System
 from driblet.system.build import stoichiometric_matrix
 from driblet_analysis.course import expected_course
+from driblet_analysis.energy_conditions import buffer_facts, condition_warnings, magnesium_facts, sensitivity_facts
 from driblet_analysis.references.count_equilibrium import count_law
 
 EVENTS_PER_SECOND_AND_CORE = 3e7  # of the exact engine on a current core; for the estimate alone
@@ -37,7 +38,12 @@ def audit_facts(system: System) -> dict[str, Any]:
     copies = np.array([s.mean_copies(omega) for s in system.free_species])
     rates = network.rates(np.array([omega]))[0]
     course = _course(system, network, copies)
-    warnings = list(getattr(system, "warnings", ()))
+    equilibrium = _equilibrium(system, network)
+    macroscopic = equilibrium["macroscopic"] if equilibrium else None
+    magnesium = magnesium_facts(system, macroscopic and {name: n / omega for name, n in macroscopic.items()})
+    buffer = buffer_facts(system)
+    warnings = list(system.warnings)
+    warnings += condition_warnings(magnesium, buffer)
     warnings += _warnings(system, network, copies, course)
     return {
         "title": system.title,
@@ -45,6 +51,7 @@ def audit_facts(system: System) -> dict[str, Any]:
         "conditions": {
             "temperature_K": system.conditions.temperature_K,
             "pH": system.conditions.pH,
+            "pH_scale": system.conditions.pH_scale,
             "pMg": system.conditions.pMg,
             "ionic_strength_M": system.conditions.ionic_strength_M,
             "RT_kJ_per_mol": system.conditions.RT_kJ_per_mol,
@@ -73,7 +80,9 @@ def audit_facts(system: System) -> dict[str, Any]:
             for cycle in emergent_affinities(system)
         ],
         "driven": is_driven(system),
-        "equilibrium": _equilibrium(system, network),
+        "equilibrium": equilibrium,
+        "magnesium": magnesium,
+        "buffer": buffer,
         "run": _run_facts(system, course),
         "warnings": warnings,
     }
@@ -102,6 +111,9 @@ def _reaction_facts(system: System, network: Network, r: int, copies: Array, rat
         "forward_propensity_per_s": float(propensities[forward]),
         "backward_propensity_per_s": float(propensities[backward]) if backward >= 0 else None,
         "energy_from": reaction.energy_from,
+        "energy_note": reaction.energy_note,
+        "energy_sd_kJ_per_mol": reaction.energy_sd_kJ_per_mol,
+        "sensitivity_kJ_per_mol": sensitivity_facts(system, reaction),
         "one_way": reaction.one_way,
     }
 

@@ -35,6 +35,7 @@ def _print(facts: dict[str, Any]) -> None:
     out.print(_conditions(facts), markup=False)
     out.print(_species(facts))
     out.print(_energies(facts))
+    _print_conditions(out, facts)
     out.print(_rates(facts))
     for law in facts["conservation_laws"]:
         out.print(f"conserved: {_sum(law['weights'])} = {number(law['total_copies'])} copies", markup=False)
@@ -69,7 +70,7 @@ def _print(facts: dict[str, Any]) -> None:
 def _conditions(facts: dict[str, Any]) -> str:
     c = facts["conditions"]
     parts = [f"{c['temperature_K'] - 273.15:.4g} °C"]
-    parts += [f"{name} {c[name]:g}" for name in ("pH", "pMg") if c[name] is not None]
+    parts += [f"{name} {c[name]:.4g}" for name in ("pH", "pMg") if c[name] is not None]
     if c["ionic_strength_M"] is not None:
         parts.append(f"ionic strength {c['ionic_strength_M']:g} M")
     volume = facts["compartment"]["volume_L"]
@@ -117,6 +118,63 @@ def _energies(facts: dict[str, Any]) -> Any:
         for r in facts["reactions"]
     ]
     return table("energies, kJ/mol", ["reaction", "equation", "ΔG°′", "K′", "ΔG at the start", "runs"], rows, left=2)
+
+
+def _print_conditions(out: Any, facts: dict[str, Any]) -> None:
+    """How the energies answer to the conditions; what magnesium and pH would do if they were not held."""
+    for r in facts["reactions"]:
+        if r["energy_note"]:
+            out.print(f"{r['name']}: {r['energy_note']}", markup=False)
+    known = [r for r in facts["reactions"] if r["sensitivity_kJ_per_mol"]["reason"] is None]
+    if known:
+        keys = ("per_pH", "per_pMg", "per_10_K")
+        rows = [
+            [
+                r["name"],
+                *(_signed(r["sensitivity_kJ_per_mol"][key]) for key in keys),
+                number(r["energy_sd_kJ_per_mol"], 2),
+            ]
+            for r in known
+        ]
+        columns = ["reaction", "per unit pH", "per unit pMg", "per 10 K", "sd"]
+        out.print(table("how ΔG°′ changes, kJ/mol", columns, rows))
+    magnesium = facts["magnesium"]
+    if magnesium is not None and (magnesium["stated_total_M"] is not None or known):
+        bound = ", ".join(f"{n} {c * 1e3:.3g}" for n, c in magnesium["bound_M"].items() if c >= 5e-7)
+        out.print(
+            f"magnesium, mM: free {magnesium['free_M'] * 1e3:.3g}, total {magnesium['total_M'] * 1e3:.4g}; bound to {bound}"
+            + (
+                f"; not in the table, taken to bind none: {', '.join(unknown)}"
+                if (unknown := magnesium["not_in_table"])
+                else ""
+            ),
+            markup=False,
+        )
+        rows = [
+            [row["at"], number(row["pMg"]), *(_energy_at(row, r["name"]) for r in known)]
+            for row in magnesium["compositions"]
+        ]
+        names = [r["name"] for r in known]
+        out.print(table("ΔG°′ if free magnesium were not held, kJ/mol", ["composition", "pMg", *names], rows))
+    for row in facts["buffer"]["pH_after"] if facts["buffer"] else ():
+        end = (
+            f"pH {row['pH']:.2f} ({_signed(row['change'])})"
+            if row["pH"] is not None
+            else f"pH unknown: {row['reason']}"
+        )
+        out.print(
+            f"{row['reaction']} run to the end in {facts['buffer']['concentration_M'] * 1e3:g} mM "
+            f"{facts['buffer']['name']}: {end}",
+            markup=False,
+        )
+
+
+def _signed(value: float | None) -> str:
+    return "–" if value is None else f"{value:+.2f}".replace("-", "−")
+
+
+def _energy_at(row: dict[str, Any], name: str) -> str:
+    return "–" if row["dG0_kJ_per_mol"] is None else number(row["dG0_kJ_per_mol"][name])
 
 
 def _rates(facts: dict[str, Any]) -> Any:

@@ -13,16 +13,19 @@ from numpy.typing import NDArray
 from scipy.special import ndtr
 
 from driblet.energetics.cycles import OpenCycle, unclosed_cycles
+from driblet.energetics.reactant_tables import read_reactants
+from driblet.energetics.reference import reference_table
 from driblet.errors import InputError, Problem, one_problem
 from driblet.quantities import QuantityError, copies_per_molar
+from driblet.system.conditions import read_conditions, with_free_magnesium
 from driblet.system.equation import NAME, RESERVED, EquationError, read_equation
 from driblet.system.expressions import ExpressionError, read_expression
 from driblet.system.model import Compartment, Conditions, Reaction, Readout, RunSettings, Species, System
 from driblet.system.reactions import ReactionReader
+from driblet.system.reference_energies import ReferenceEnergies
 from driblet.system.tables import (
     SECTIONS,
     CompartmentTable,
-    ConditionsTable,
     EnergiesTable,
     RunTable,
     SpeciesTable,
@@ -86,6 +89,7 @@ class _Builder:
     def __init__(self, raw: Mapping[str, Any], text: str, source: str, closure: bool) -> None:
         self.raw, self.text, self.source, self.closure = raw, text, source, closure
         self.problems: list[Problem] = []
+        self.warnings: list[str] = []
 
     def problem(self, key: str, text: str) -> None:
         self.problems.append(Problem(key, text))
@@ -97,11 +101,17 @@ class _Builder:
         title = self.raw.get("title", Path(self.source).stem)
         if not isinstance(title, str) or not title.strip():
             self.problem("title", "a text in quotes is needed")
-        conditions = self.conditions()
+        own = read_reactants(self.section("reactants", required=False), "reactants", self.problems)
+        reference = reference_table().with_reactants(own)
+        conditions = read_conditions(self.raw.get("conditions", {}), reference, self.problems)
         compartment = self.compartment()
         run = read_table(RunTable, self.raw.get("run", {}), "run", self.problems)
         species = self.species(run.loading if run else "nearest", compartment)
-        reactions = self.reactions(conditions)
+        if conditions and compartment:
+            conditions = with_free_magnesium(conditions, reference, species, compartment, self.problems)
+        unsolved = conditions is not None and conditions.total_magnesium_M is not None and conditions.pMg is None
+        energies = ReferenceEnergies(reference, None if unsolved else conditions, self.warnings)
+        reactions = self.reactions(energies, conditions)
         readouts = self.readouts()
         settings = self.settings(run)
         if self.problems or not (conditions and compartment and settings):
@@ -119,6 +129,8 @@ class _Builder:
             settings,
             self.text,
             self.source,
+            tuple(self.warnings),
+            reference,
         )
 
     def entries(self, name: str) -> Mapping[str, Any]:
@@ -142,12 +154,6 @@ class _Builder:
                     '(label = "..." sets what figures show)',
                 )
         return value
-
-    def conditions(self) -> Conditions | None:
-        table = read_table(ConditionsTable, self.raw.get("conditions", {}), "conditions", self.problems)
-        if table is None:
-            return None
-        return Conditions(table.temperature, table.pH, table.pMg, table.ionic_strength)
 
     def compartment(self) -> Compartment | None:
         section = self.section("compartments", required=True)
@@ -240,11 +246,11 @@ class _Builder:
             species.append(Species(name, table.label or name, concentration, copies, table.held, loading))
         return species
 
-    def reactions(self, conditions: Conditions | None) -> list[Reaction]:
+    def reactions(self, reference: ReferenceEnergies, conditions: Conditions | None) -> list[Reaction]:
         energies = read_table(EnergiesTable, self.raw.get("energies", {}), "energies", self.problems)
         species = self.entries("species")
         held = {n for n, v in species.items() if isinstance(v, Mapping) and v.get("held") is True}
-        reader = ReactionReader(set(species), held, conditions, self.problems)
+        reader = ReactionReader(set(species), held, conditions, self.problems, reference)
         if energies is not None:
             reader.read_energies(energies)
         found = (reader.read(name, value) for name, value in self.section("reactions", required=True).items())

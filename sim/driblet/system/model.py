@@ -6,24 +6,11 @@ import html
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
-from driblet.quantities import copies_per_molar, thermal_energy
+from driblet.energetics.conditions import Conditions
+from driblet.energetics.reference import Reference
+from driblet.quantities import copies_per_molar
 from driblet.system.equation import Equation
 from driblet.system.expressions import Expression
-
-
-@dataclass(frozen=True)
-class Conditions:
-    """Conditions at which the stated energies hold; only the temperature enters a calculation."""
-
-    temperature_K: float
-    pH: float | None = None
-    pMg: float | None = None
-    ionic_strength_M: float | None = None
-
-    @property
-    def RT_kJ_per_mol(self) -> float:
-        """Thermal energy, kJ/mol."""
-        return thermal_energy(self.temperature_K)
 
 
 @dataclass(frozen=True)
@@ -72,7 +59,8 @@ class Reaction:
     """A reaction whose reverse rate its energy has fixed.
 
     Attributes: dG0_kJ_per_mol : dG0', None for one way; K : exp(-dG0'/RT) relative to 1 mol/L; forward, backward : rate
-    constants in (mol/L)^(1-m)/s of v = k prod [A_i]^nu_i; energy_from : what in the file set dG0'; one_way : the reason.
+    constants in (mol/L)^(1-m)/s of v = k prod [A_i]^nu_i; energy_from : what in the file set dG0', energy_note : how, where
+    the reference table had a part in it; one_way : the reason.
     """
 
     name: str
@@ -85,6 +73,7 @@ class Reaction:
     energy_from: str
     energy_sd_kJ_per_mol: float | None = None
     one_way: str | None = None
+    energy_note: str = ""
 
 
 @dataclass(frozen=True)
@@ -111,7 +100,8 @@ class System:
     """A validated, immutable description of one compartment and what happens in it.
 
     Attributes: title, conditions, compartment, species, reactions, readouts, settings; text : the system file it was read
-    from, kept for provenance; source : its name for messages.
+    from, kept for provenance; source : its name for messages; warnings : what is doubtful in the file, one line each;
+    reference : the table its energies come from, the file's own reactants included.
     """
 
     title: str
@@ -123,6 +113,8 @@ class System:
     settings: RunSettings
     text: str = field(default="", repr=False)
     source: str = field(default="", repr=False)
+    warnings: tuple[str, ...] = ()
+    reference: Reference | None = field(default=None, repr=False, compare=False)
 
     @property
     def free_species(self) -> tuple[Species, ...]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
+from dataclasses import replace
 
 from driblet.energetics.gibbs import (
     LARGEST_EXPONENT,
@@ -12,12 +13,14 @@ from driblet.energetics.gibbs import (
     equilibrium_constant,
     standard_energy,
 )
+from driblet.energetics.reference import NotInTableError
 from driblet.errors import Problem
 from driblet.quantities import GAS_CONSTANT, OutOfRangeError, Quantity, QuantityError, power_unit
 from driblet.system.equation import WATER, Equation, EquationError, read_equation
 from driblet.system.expressions import nearest
 from driblet.system.model import Conditions, Reaction
-from driblet.system.tables import EnergiesTable, EnergyTable, ReactionTable, read_table
+from driblet.system.reference_energies import ReferenceEnergies
+from driblet.system.tables import EnergiesTable, EnergyTable, ReactionTable, StatedAt, read_table
 
 MOST_MOLECULES = 3
 AGREEMENT = 0.01  # kJ/mol by which an energy and a pair of rate constants may differ, all three being rounded
@@ -32,9 +35,15 @@ class ReactionReader:
     """Reads reaction tables against the species and conditions of one file, collecting problems."""
 
     def __init__(
-        self, species: set[str], held: set[str], conditions: Conditions | None, problems: list[Problem]
+        self,
+        species: set[str],
+        held: set[str],
+        conditions: Conditions | None,
+        problems: list[Problem],
+        reference: ReferenceEnergies,
     ) -> None:
         self.species, self.held, self.conditions, self.problems = species, held, conditions, problems
+        self.reference = reference
         self.formation: dict[str, float] = {}
         self.hydrolysis: list[tuple[dict[str, int], float]] = []
 
@@ -57,6 +66,7 @@ class ReactionReader:
                 if equation.water != -1:
                     raise EquationError(f'"{text}" does not take up one H2O on the left, as a hydrolysis does')
                 self.hydrolysis.append((equation.change, self._energy(quantity)))
+                self.reference.check_plausible(key, equation, self.hydrolysis[-1][1])
             except (EquationError, QuantityError) as error:
                 self.problems.append(Problem(key, str(error)))
 
@@ -131,10 +141,14 @@ class ReactionReader:
         backward = self._rate(path, "backward", table.backward, equation.products)
         if (table.forward is not None and forward is None) or (table.backward is not None and backward is None):
             return None
-        sd = None
+        sd, note = None, ""
         try:
-            dG0 = self._stated_energy(table, equation) if given else None
-        except (QuantityError, _FaultError, EquationError) as error:
+            dG0 = None
+            if table.energy == "reference":
+                dG0, sd, note = self.reference.looked_up(f"{path}.energy", equation)
+            elif given:
+                dG0, note = self._carried(path, given[0], table, equation)
+        except (QuantityError, _FaultError, EquationError, NotInTableError) as error:
             self._problem(path, given[0], str(error))
             return None
         if isinstance(table.energy, EnergyTable) and table.energy.sd is not None:
@@ -154,7 +168,7 @@ class ReactionReader:
         if dG0 is None and (forward is None or backward is None):
             self._problem(path, "energy", "is missing: give energy, K or Kd, or both forward and backward")
             return None
-        return self._combine(name, table, equation, path, dG0, forward, backward, given, sd)
+        return self._combine(name, table, equation, path, dG0, forward, backward, given, sd, note)
 
     def _combine(
         self,
@@ -167,6 +181,7 @@ class ReactionReader:
         backward: float | None,
         given: list[str],
         sd: float | None,
+        note: str,
     ) -> Reaction | None:
         RT = GAS_CONSTANT * self.temperature
         if forward is not None and backward is not None:
@@ -202,17 +217,35 @@ class ReactionReader:
         origin = "rates" if not given else given[0]
         if origin == "energy" and isinstance(table.energy, str):
             origin = table.energy
-        return Reaction(name, table.label or name, equation, dG0, K, forward, backward, origin, sd)
+        if origin != "reference":
+            self.reference.check_plausible(f"{path}.{given[0] if given else 'forward'}", equation, dG0)
+        return Reaction(name, table.label or name, equation, dG0, K, forward, backward, origin, sd, energy_note=note)
 
-    def _stated_energy(self, table: ReactionTable, equation: Equation) -> float:
+    def _carried(self, path: str, key: str, table: ReactionTable, equation: Equation) -> tuple[float, str]:
+        """The stated energy at the file's conditions, and how it got there."""
+        stated_at = table.K if table.K is not None else table.energy
+        dG0 = self._stated_energy(table, equation, self.temperature)
+        if self.conditions is None or not isinstance(stated_at, StatedAt):
+            return dG0, ""
+        there = stated_conditions(stated_at, self.conditions)
+        if there == self.conditions:
+            return dG0, ""
+        value_there = self._stated_energy(table, equation, there.temperature_K)
+        carried = self.reference.carried(f"{path}.{key}", equation, value_there, there)
+        return (dG0, f"as given at {there}, not carried") if carried is None else (carried.dG0, carried.note)
+
+    def _stated_energy(self, table: ReactionTable, equation: Equation, temperature: float) -> float:
+        """dG0' as stated; a constant or an energy in kT means one at `temperature`."""
         if table.K is not None:
-            K = table.K.to_power(equation.order_change)
-            return self._from_constant(K, table.K)
+            K = table.K.value.to_power(equation.order_change)
+            return self._from_constant(K, table.K.value, temperature)
         if table.Kd is not None:
             if equation.order_change == 0:
                 raise _FaultError("a dissociation constant needs a side with more molecules; use K or energy")
             Kd = table.Kd.to_power(abs(equation.order_change))
-            return self._from_constant(Kd if equation.order_change > 0 else 1 / Kd if Kd else 0.0, table.Kd)
+            return self._from_constant(
+                Kd if equation.order_change > 0 else 1 / Kd if Kd else 0.0, table.Kd, temperature
+            )
         if table.energy == "formation":
             change = dict(equation.change)
             if equation.water:
@@ -228,17 +261,17 @@ class ReactionReader:
             if round(-sum(result[1])) != equation.water:
                 raise _FaultError("the water in the equation does not match the hydrolyses it is a sum of")
             return result[0]
-        assert table.energy is not None
-        return self._energy(table.energy.value)
+        assert isinstance(table.energy, EnergyTable)
+        return self._energy(table.energy.value, temperature)
 
-    def _from_constant(self, K: float, quantity: Quantity) -> float:
+    def _from_constant(self, K: float, quantity: Quantity, temperature: float) -> float:
         if not 0 < K < math.inf:
             raise _FaultError(f'"{quantity}" will not do: an equilibrium constant is above zero and finite')
-        return standard_energy(K, self.temperature)
+        return standard_energy(K, temperature)
 
-    def _energy(self, quantity: Quantity) -> float:
+    def _energy(self, quantity: Quantity, temperature: float | None = None) -> float:
         if quantity.kind == "thermal energy":
-            return quantity.to("thermal energy") * GAS_CONSTANT * self.temperature
+            return quantity.to("thermal energy") * GAS_CONSTANT * (temperature or self.temperature)
         return quantity.to("energy")
 
     def _rate(
@@ -264,3 +297,15 @@ class ReactionReader:
 
     def _problem(self, path: str, key: str, text: str) -> None:
         self.problems.append(Problem(f"{path}.{key}", text))
+
+
+def stated_conditions(table: StatedAt, conditions: Conditions) -> Conditions:
+    """The conditions a value was stated at: the keys its table gives, the file's for the rest."""
+    given = {
+        "temperature_K": table.temperature,
+        "pH": table.pH,
+        "pH_scale": table.pH_scale,
+        "pMg": table.pMg,
+        "ionic_strength_M": table.ionic_strength,
+    }
+    return replace(conditions, **{key: value for key, value in given.items() if value is not None})  # type: ignore[arg-type]

@@ -9,6 +9,7 @@ from typing import Annotated, Any, Literal, TypeVar
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Discriminator, Tag, ValidationError
 from pydantic_core import PydanticCustomError
 
+from driblet.energetics.conditions import PH_SCALES
 from driblet.errors import Problem
 from driblet.quantities import Quantity, QuantityError, example_of, read_quantity
 
@@ -16,7 +17,7 @@ ENGINES = ("exact",)
 LOADINGS = ("nearest", "poisson")
 MOST_REPLICATES, LARGEST_SEED = 10_000_000, 2**63 - 1
 SHORTEST_TIME, LONGEST_TIME = 1e-15, 1e15  # s: from faster than a bond vibrates to 30 million years
-ENERGY_WORDS = ("formation", "hydrolysis")  # where an energy can come from instead of being stated
+ENERGY_WORDS = ("formation", "hydrolysis", "reference")  # where an energy can come from instead of being stated
 
 
 def _complain(text: str) -> PydanticCustomError:
@@ -123,6 +124,7 @@ Temperature = Annotated[float, BeforeValidator(_of_kind("temperature", allow_zer
 Time = Annotated[float, BeforeValidator(_time)]
 Length = Annotated[float, BeforeValidator(_of_kind("length"))]
 Concentration = Annotated[float, BeforeValidator(_of_kind("concentration"))]
+EnergyChange = Annotated[float, BeforeValidator(_of_kind("energy", allow_negative=True))]
 Loading = Annotated[Literal["nearest", "poisson"], BeforeValidator(_one_of(LOADINGS))]
 
 
@@ -132,11 +134,27 @@ class Table(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True)
 
 
+PH = Annotated[float, BeforeValidator(_plain(0, 14, "a pH"))]
+PMg = Annotated[float, BeforeValidator(_plain(-1, 14, "a pMg"))]
+PHScale = Annotated[str, BeforeValidator(_one_of(PH_SCALES))]
+
+
+class BufferTable(Table):
+    name: Text
+    concentration: Concentration
+    pK: Annotated[float, BeforeValidator(_plain(0, 14, "a pK"))] | None = None
+    acid_charge: Annotated[int, BeforeValidator(_whole(-4, 4))] | None = None
+    enthalpy: EnergyChange | None = None
+
+
 class ConditionsTable(Table):
     temperature: Temperature
-    pH: Annotated[float, BeforeValidator(_plain(0, 14, "a pH"))] | None = None
-    pMg: Annotated[float, BeforeValidator(_plain(-1, 14, "a pMg"))] | None = None
+    pH: PH | None = None
+    pH_scale: PHScale = "activity"
+    pMg: PMg | None = None
+    total_magnesium: Concentration | None = None
     ionic_strength: Concentration | None = None
+    buffer: BufferTable | None = None
 
 
 class SpreadTable(Table):
@@ -162,9 +180,23 @@ class SpeciesTable(Table):
     label: Text | None = None
 
 
-class EnergyTable(Table):
+class StatedAt(Table):
+    """The conditions at which a value holds, where they are not the file's."""
+
+    temperature: Temperature | None = None
+    pH: PH | None = None
+    pH_scale: PHScale | None = None
+    pMg: PMg | None = None
+    ionic_strength: Concentration | None = None
+
+
+class EnergyTable(StatedAt):
     value: AnyQuantity
     sd: AnyQuantity | None = None
+
+
+class ConstantTable(StatedAt):
+    value: Constant
 
 
 def _energy_tag(value: object) -> str:
@@ -173,7 +205,7 @@ def _energy_tag(value: object) -> str:
 
 Energy = Annotated[
     Annotated[EnergyTable, _as_table("value"), Tag("table")]
-    | Annotated[Literal["formation", "hydrolysis"], Tag("word")],
+    | Annotated[Literal["formation", "hydrolysis", "reference"], Tag("word")],
     Discriminator(_energy_tag),
 ]
 
@@ -181,7 +213,7 @@ Energy = Annotated[
 class ReactionTable(Table):
     equation: Text
     energy: Energy | None = None
-    K: Constant | None = None
+    K: Annotated[ConstantTable, _as_table("value")] | None = None
     Kd: AnyQuantity | None = None
     forward: AnyQuantity | None = None
     backward: AnyQuantity | None = None
@@ -203,7 +235,9 @@ class RunTable(Table):
     seed: Annotated[int, BeforeValidator(_whole(0, LARGEST_SEED))] = 0
 
 
-SECTIONS = ("title", "conditions", "compartments", "species", "energies", "reactions", "readouts", "run")
+SECTIONS = (
+    "title", "conditions", "compartments", "species", "reactants", "energies", "reactions", "readouts", "run",
+)  # fmt: skip
 TableType = TypeVar("TableType", bound=Table)
 
 
@@ -242,7 +276,7 @@ def _problem(model: type[Table], value: Mapping[str, Any], path: str, fault: Any
 def _keys_at(model: type[Table], location: list[str]) -> list[str]:
     for part in location:
         annotation = model.model_fields[part].annotation if part in model.model_fields else None
-        nested = [t for t in (SpreadTable, EnergyTable) if t.__name__ in repr(annotation)]
+        nested = [t for t in (SpreadTable, EnergyTable, ConstantTable, BufferTable) if t.__name__ in repr(annotation)]
         if nested:
             model = nested[0]
     return list(model.model_fields)
