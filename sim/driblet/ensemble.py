@@ -98,13 +98,15 @@ def run(
     seed: int | None = None,
     engine: str | None = None,
     threads: int | None = None,
+    key: int = 0,
     resume: bool = False,
     force: bool = False,
     on_progress: Callable[[Progress], None] | None = None,
 ) -> Run:
     """Simulate an ensemble and return it as a Run, in memory or, with `output`, in a run file.
 
-    duration, sample_every : s. What is not given is taken from the system's [run]. With `resume`, finished replicates of an
+    duration, sample_every : s. What is not given is taken from the system's [run]. key : sets the random streams of the
+    points of a sweep apart, 0 to 2^63 - 1. With `resume`, finished replicates of an
     interrupted run are kept; a complete run is returned as it is. Raises InputError for bad settings or an output that is
     taken, InterruptedRunError after Ctrl-C.
     """
@@ -120,7 +122,7 @@ def run(
     plain = {k: v if k == "engine" else float(v) if k.endswith("_s") else int(v) for k, v in given.items()}
     settings = replace(system.settings, **plain)  # type: ignore[arg-type]
     times = sample_times(settings)
-    layout = _layout(system, settings, times)
+    layout = _layout(system, settings, times, key)
     path = Path(output) if output is not None else None
     if path is not None and resume and path.is_file():
         existing = Run(path)
@@ -129,11 +131,11 @@ def run(
         existing.close()
         raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
     writer = RunWriter(path, layout, resume=resume, force=force)
-    file = _Ensemble(system, settings, layout, writer, threads or os.cpu_count() or 1, on_progress).run()
+    file = _Ensemble(system, settings, layout, writer, threads or os.cpu_count() or 1, on_progress, key).run()
     return Run(file) if path is None else Run(path)
 
 
-def _layout(system: System, settings: RunSettings, times: NDArray[np.float64]) -> Layout:
+def _layout(system: System, settings: RunSettings, times: NDArray[np.float64], key: int) -> Layout:
     species, reactions = len(system.free_species), len(system.reactions)
     row_bytes = 8 * len(times) * max(1, species + 4 * reactions + len(system.readouts))
     unit = max(1, min(-(-settings.replicates // 64), _UNIT_BYTES // row_bytes))
@@ -143,6 +145,7 @@ def _layout(system: System, settings: RunSettings, times: NDArray[np.float64]) -
         "replicates": settings.replicates,
         "duration_s": settings.duration_s,
         "sample_every_s": settings.sample_every_s or settings.duration_s / DEFAULT_SAMPLES,
+        **({"stream_key": key} if key else {}),
     }
     identity = hashlib.sha256(json.dumps([FORMAT, system.text, facts], sort_keys=True).encode()).hexdigest()[:32]
     import numba
@@ -198,9 +201,10 @@ class _Ensemble:
         writer: RunWriter,
         threads: int,
         on_progress: Callable[[Progress], None] | None,
+        key: int = 0,
     ) -> None:
         self.system, self.settings, self.layout, self.writer = system, settings, layout, writer
-        self.threads, self.on_progress = threads, on_progress
+        self.threads, self.on_progress, self.key = threads, on_progress, key
         self.network = Network.of(system)
         self.stop = threading.Event()
         self.running: dict[int, _Unit] = {}
@@ -278,7 +282,7 @@ class _Ensemble:
 
         watched = self.running[unit] = _Unit()
         rows = self._rows(unit)
-        start = prepare(self.system, self.settings.seed, rows)
+        start = prepare(self.system, self.settings.seed, rows, self.key)
         rates = self.network.rates(start.omega)
         state = new_state(start.counts, start.stream, len(self.network.channels))
         samples = new_samples(self.layout.time_s, len(rows), len(self.network.species), len(self.network.channels))

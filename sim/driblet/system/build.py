@@ -78,6 +78,11 @@ def loads(text: str, source: str = "system file", *, closure: bool = True) -> Sy
         raise one_problem(source, "", f"is not valid TOML: {reason[0].lower()}{reason[1:]}") from error
     except (ValueError, RecursionError) as error:  # an integer of thousands of digits, thousands of brackets
         raise one_problem(source, "", f"is not a system file: {error}") from error
+    return build(raw, text, source, closure=closure)
+
+
+def build(raw: Mapping[str, Any], text: str, source: str = "system file", *, closure: bool = True) -> System:
+    """Validate a system file that is parsed already; `text` is kept as it is. Raises InputError with every problem."""
     builder = _Builder(raw, text, source, closure)
     system = builder.build()
     if builder.problems or system is None:
