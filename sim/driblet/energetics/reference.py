@@ -98,7 +98,7 @@ class Reference:
     ) -> None:
         magnesium = next(r for r in reactants if r.key == _MAGNESIUM).species[0]
         assert magnesium.enthalpy is not None
-        self._stated = tuple(reactants)
+        self.stated = {r.key: r for r in reactants}  # as the sources have them, enthalpies left open included
         self.magnesium_ion: IonicSpecies = magnesium
         self.reactants = {r.key: r for r in completed(reactants, magnesium.enthalpy)}
         self.measured, self.buffers, self.ambiguous = tuple(measured), dict(buffers or {}), dict(ambiguous or {})
@@ -119,7 +119,7 @@ class Reference:
                 replaced[old.key] = replace(reactant, key=old.key, aliases=(*names, reactant.key))
             else:
                 replaced[reactant.key] = reactant
-        kept = [r for r in self._stated if r.key not in replaced]
+        kept = [r for r in self.stated.values() if r.key not in replaced]
         ambiguous = {n: k for n, k in self.ambiguous.items() if normal_form(n) not in map(normal_form, replaced)}
         return Reference([*kept, *replaced.values()], self.measured, self.buffers, ambiguous)
 
