@@ -11,7 +11,7 @@ from collections.abc import Callable
 import numpy as np
 from numpy.typing import NDArray
 
-from driblet.system.expressions import Expression, Node, Number, Operation, Reference
+from driblet.system.expressions import Expression, Named, Node, Number, Operation, Reference
 from driblet.system.model import Reaction, System
 
 Array = NDArray[np.float64]
@@ -34,6 +34,8 @@ def evaluate(system: System, expression: Expression, counts: NDArray[np.int64], 
     def value(node: Node) -> Array:
         if isinstance(node, Number):
             return np.asarray(node.value)
+        if isinstance(node, Named):
+            return value(node.node)
         if isinstance(node, Operation):
             return _ARITHMETIC[node.operator](value(node.left), value(node.right))
         return referred(node)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import tomllib
 from collections.abc import Mapping
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -16,13 +17,23 @@ from driblet.energetics.cycles import OpenCycle, unclosed_cycles
 from driblet.energetics.reactant_tables import read_reactants
 from driblet.energetics.reference import reference_table
 from driblet.errors import InputError, Problem, one_problem
-from driblet.quantities import QuantityError, copies_per_molar
+from driblet.quantities import QuantityError, copies_per_molar, thermal_energy
 from driblet.system.conditions import read_conditions, with_free_magnesium
 from driblet.system.equation import NAME, RESERVED, EquationError, read_equation
-from driblet.system.expressions import ExpressionError, read_expression
-from driblet.system.model import Compartment, Conditions, Reaction, Readout, RunSettings, Species, System
+from driblet.system.expressions import ExpressionError, Names, read_value
+from driblet.system.model import (
+    Compartment,
+    Conditions,
+    Reaction,
+    Readout,
+    Requirement,
+    RunSettings,
+    Species,
+    System,
+)
 from driblet.system.reactions import ReactionReader
 from driblet.system.reference_energies import ReferenceEnergies
+from driblet.system.requirements import read_requirement
 from driblet.system.tables import (
     SECTIONS,
     CompartmentTable,
@@ -117,7 +128,9 @@ class _Builder:
         unsolved = conditions is not None and conditions.total_magnesium_M is not None and conditions.pMg is None
         energies = ReferenceEnergies(reference, None if unsolved else conditions, self.warnings)
         reactions = self.reactions(energies, conditions)
-        readouts = self.readouts()
+        names = self.names(conditions)
+        readouts = self.readouts(names)
+        requirements = self.requirements(replace(names, readouts={r.name: r.expression for r in readouts}), run)
         settings = self.settings(run)
         if self.problems or not (conditions and compartment and settings):
             return None
@@ -136,6 +149,7 @@ class _Builder:
             self.source,
             tuple(self.warnings),
             reference,
+            requirements=tuple(requirements),
         )
 
     def entries(self, name: str) -> Mapping[str, Any]:
@@ -261,8 +275,8 @@ class _Builder:
         found = (reader.read(name, value) for name, value in self.section("reactions", required=True).items())
         return [reaction for reaction in found if reaction is not None]
 
-    def readouts(self) -> list[Readout]:
-        readouts = []
+    def names(self, conditions: Conditions | None) -> Names:
+        """What an expression of this file may refer to, the readouts apart."""
         species, reactions = self.entries("species"), self.entries("reactions")
         one_way = set()
         for name, value in reactions.items():
@@ -271,17 +285,29 @@ class _Builder:
                     one_way.add(name)
             except EquationError:
                 continue
+        RT = conditions.RT_kJ_per_mol if conditions else thermal_energy(298.15)
+        return Names(list(species), [r for r in reactions if r not in one_way], RT_kJ_per_mol=RT)
+
+    def readouts(self, names: Names) -> list[Readout]:
+        readouts = []
         for name, value in self.section("readouts", required=False).items():
             path = f"readouts.{name}"
             if not isinstance(value, str):
                 self.problem(path, f"an expression in quotes is needed, not {value!r}")
                 continue
             try:
-                expression = read_expression(value, list(species), [r for r in reactions if r not in one_way])
-                readouts.append(Readout(name, expression))
+                readouts.append(Readout(name, read_value(value, names)))
             except ExpressionError as error:
                 self.problem(path, str(error))
         return readouts
+
+    def requirements(self, names: Names, run: RunTable | None) -> list[Requirement]:
+        duration = run.duration if run else None
+        found = (
+            read_requirement(name, value, names, duration, self.problems)
+            for name, value in self.section("requirements", required=False).items()
+        )
+        return [requirement for requirement in found if requirement is not None]
 
     def settings(self, run: RunTable | None) -> RunSettings | None:
         if run is None:

@@ -10,7 +10,7 @@ from driblet.energetics.conditions import Conditions
 from driblet.energetics.reference import Reference
 from driblet.quantities import copies_per_molar
 from driblet.system.equation import Equation
-from driblet.system.expressions import Expression
+from driblet.system.expressions import Condition, Expression
 
 
 @dataclass(frozen=True)
@@ -85,6 +85,32 @@ class Readout:
 
 
 @dataclass(frozen=True)
+class Requirement:
+    """What a condition must do over a span of time, to be met in a stated share of compartments.
+
+    Attributes: must : the condition; when : "throughout", "at end", "once" or "on average"; during_s : start and end of the
+    span, s, None for the whole run; averaged_over_s : s, None where the state of each moment counts; share : in (0, 1],
+    None where none is asked for.
+    """
+
+    name: str
+    must: Condition
+    when: str
+    during_s: tuple[float, float] | None = None
+    averaged_over_s: float | None = None
+    share: float | None = None
+
+    def span_s(self, duration_s: float) -> tuple[float, float]:
+        """Start and end of the span in a run of `duration_s`."""
+        return self.during_s or (0.0, duration_s)
+
+    @property
+    def averaged(self) -> bool:
+        """Whether averages over time are judged, not the state of each moment."""
+        return self.when == "on average" or self.averaged_over_s is not None
+
+
+@dataclass(frozen=True)
 class RunSettings:
     """How a system is run unless the caller says otherwise."""
 
@@ -99,8 +125,8 @@ class RunSettings:
 class System:
     """A validated, immutable description of one compartment and what happens in it.
 
-    Attributes: title, conditions, compartment, species, reactions, readouts, settings; text : the system file it was read
-    from, kept for provenance; source : its name for messages; warnings : what is doubtful in the file, one line each;
+    Attributes: title, conditions, compartment, species, reactions, readouts, settings, requirements; text : the system file it
+    was read from, kept for provenance; source : its name for messages; warnings : what is doubtful in the file, one line each;
     reference : the table its energies come from, the file's own reactants included.
     """
 
@@ -111,6 +137,7 @@ class System:
     reactions: tuple[Reaction, ...]
     readouts: tuple[Readout, ...]
     settings: RunSettings
+    requirements: tuple[Requirement, ...] = field(default=(), kw_only=True)
     text: str = field(default="", repr=False)
     source: str = field(default="", repr=False)
     warnings: tuple[str, ...] = ()

@@ -15,6 +15,7 @@ from driblet.quantities import Quantity, QuantityError, example_of, read_quantit
 
 ENGINES = ("exact",)
 LOADINGS = ("nearest", "poisson")
+WHEN = ("throughout", "at end", "once", "on average")  # when the condition of a requirement must hold
 MOST_REPLICATES, LARGEST_SEED = 10_000_000, 2**63 - 1
 SHORTEST_TIME, LONGEST_TIME = 1e-15, 1e15  # s: from faster than a bond vibrates to 30 million years
 ENERGY_WORDS = ("formation", "hydrolysis", "reference")  # where an energy can come from instead of being stated
@@ -108,6 +109,22 @@ def _yes_or_no(value: object) -> bool:
     if not isinstance(value, bool):
         raise _complain(f"{value!r} will not do: true or false is needed")
     return value
+
+
+def _share(value: object) -> float:
+    if isinstance(value, bool) or not isinstance(value, int | float) or not 0 < value <= 1:
+        hint = "; write 0.95 for 95 %" if isinstance(value, int | float) and 1 < value <= 100 else ""
+        raise _complain(f"{value!r} is no share of compartments: a plain number above 0, at most 1, is needed{hint}")
+    return float(value)
+
+
+def _span(value: object) -> tuple[float, float]:
+    if not isinstance(value, list) or len(value) != 2:
+        raise _complain(f'{value!r} is no span: two times are needed, such as ["0 s", "20 min"]')
+    start, end = (_of_kind("time")(v) for v in value)
+    if not start < end:
+        raise _complain(f'"{value[0]}" to "{value[1]}" is no span: it ends after it starts')
+    return start, end
 
 
 def _engine(value: object) -> object:
@@ -226,6 +243,14 @@ class EnergiesTable(Table):
     hydrolysis: dict[str, AnyQuantity] = {}
 
 
+class RequirementTable(Table):
+    must: Text
+    when: Annotated[str, BeforeValidator(_one_of(WHEN))]
+    averaged_over: Time | None = None
+    during: Annotated[tuple[float, float], BeforeValidator(_span)] | None = None
+    share: Annotated[float, BeforeValidator(_share)] | None = None
+
+
 class RunTable(Table):
     engine: Annotated[str, BeforeValidator(_engine)] = "exact"
     replicates: Annotated[int, BeforeValidator(_whole(1, MOST_REPLICATES))] = 100
@@ -236,7 +261,8 @@ class RunTable(Table):
 
 
 SECTIONS = (
-    "title", "conditions", "compartments", "species", "reactants", "energies", "reactions", "readouts", "run",
+    "title", "conditions", "compartments", "species", "reactants", "energies", "reactions", "readouts", "requirements",
+    "run",
 )  # fmt: skip
 TableType = TypeVar("TableType", bound=Table)
 
