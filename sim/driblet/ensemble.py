@@ -229,6 +229,9 @@ class _Ensemble:
                         block = future.result()
                         self.writer.add(block)
                         finished += len(block.replicate)
+                        # taken off here and not in the worker, so that the fraction done never falls
+                        del self.running[block.unit]
+                        self.events += int(block.events.sum())
                     self._report(finished)
             except KeyboardInterrupt:
                 self._stop(futures)
@@ -298,8 +301,6 @@ class _Ensemble:
                 f"replicate {rows[r]}: {REASONS[COUNT_OVERFLOW]} ({name}); the system grows without bound"
             )
         events = state.firings.sum(axis=1)
-        del self.running[unit]
-        self.events += int(events.sum())
         return Block(
             unit,
             np.array(rows, dtype=np.int64),
