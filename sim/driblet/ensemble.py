@@ -21,7 +21,7 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from driblet.errors import DribletError, InputError, InterruptedRunError, Problem, one_problem
+from driblet.errors import InputError, InterruptedRunError, Problem, one_problem
 from driblet.loading import prepare
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.readouts import evaluate
@@ -239,9 +239,14 @@ class _Ensemble:
             except BaseException:
                 self._stop(futures)
                 raise
-        self._report(finished)
-        seconds = time.monotonic() - self.started
-        return self.writer.finish({"wall_time_s": seconds, "threads": self.threads, "events_this_session": self.events})
+        try:
+            self._report(finished)
+            seconds = time.monotonic() - self.started
+            closing = {"wall_time_s": seconds, "threads": self.threads, "events_this_session": self.events}
+            return self.writer.finish(closing)
+        except KeyboardInterrupt:
+            self.writer.flush()
+            raise InterruptedRunError(self._farewell()) from None
 
     def _stop(self, futures: set[Future[Block]]) -> None:
         self.stop.set()
@@ -297,9 +302,8 @@ class _Ensemble:
         if (state.reason == COUNT_OVERFLOW).any():
             r = int(np.flatnonzero(state.reason == COUNT_OVERFLOW)[0])
             name = self.network.species[int(np.argmax(state.counts[r, :-1]))]
-            raise DribletError(
-                f"replicate {rows[r]}: {REASONS[COUNT_OVERFLOW]} ({name}); the system grows without bound"
-            )
+            text = f"{REASONS[COUNT_OVERFLOW]} in replicate {rows[r]}: the system grows without bound, or holds too much"
+            raise one_problem(self.system.source, f"species.{name}", text)
         events = state.firings.sum(axis=1)
         return Block(
             unit,

@@ -186,6 +186,7 @@ class RunWriter:
         with _writing(self.path):
             parts.mkdir(exist_ok=True)
             _write_atomically(self.path, parts, write)
+        self.waiting = []
         shutil.rmtree(parts, ignore_errors=True)
         return None
 

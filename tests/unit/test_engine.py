@@ -288,7 +288,7 @@ def test_a_count_that_grows_past_2_to_53_ends_with_a_message() -> None:
     case = Case(text, replicates=1)
     state, _ = case.run(np.array([1.0]))
     assert state.reason[0] == COUNT_OVERFLOW
-    with pytest.raises(driblet.DribletError, match=r"2\^53 \(A\)"):
+    with pytest.raises(driblet.InputError, match=r"species\.A: a count passed 2\^53 in replicate 0"):
         driblet.run(driblet.loads(text), replicates=1)
 
 
