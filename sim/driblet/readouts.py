@@ -28,6 +28,14 @@ def evaluate(system: System, expression: Expression, counts: NDArray[np.int64], 
 
     counts : (..., free species), copies; omega : copies per mol/L, shape that broadcasts against counts[..., 0].
     """
+    result = extended(system, expression.root, counts, omega)
+    if expression.root.dimension != (0, 1):
+        result[~np.isfinite(result)] = np.nan
+    return result
+
+
+def extended(system: System, root: Node, counts: NDArray[np.int64], omega: Array) -> Array:
+    """Value of a parsed expression in the extended reals: x/0 is infinite, 0/0 is NaN. Arguments as for `evaluate`."""
     column = {s.name: i for i, s in enumerate(system.free_species)}
     held = system.held_concentrations()
 
@@ -48,10 +56,7 @@ def evaluate(system: System, expression: Expression, counts: NDArray[np.int64], 
         return np.asarray(n / omega if node.kind == "conc" else n)
 
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        result = np.broadcast_to(value(expression.root), np.broadcast_shapes(counts.shape[:-1], np.shape(omega))).copy()
-    if expression.root.dimension != (0, 1):
-        result[~np.isfinite(result)] = np.nan
-    return result
+        return np.broadcast_to(value(root), np.broadcast_shapes(counts.shape[:-1], np.shape(omega))).copy()
 
 
 def transition_energy(system: System, reaction: Reaction, counts: NDArray[np.int64], omega: Array) -> Array:
