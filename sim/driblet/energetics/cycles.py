@@ -121,6 +121,7 @@ def unclosed_cycles(stoichiometry: NDArray[np.int64], dG0: NDArray[np.float64]) 
     """
     found = []
     for vector in cycles(stoichiometry):
+        vector = vector if vector[np.flatnonzero(vector)[0]] > 0 else -vector
         excess = float(vector @ dG0)
         if abs(excess) > CLOSURE_TOLERANCE * max(1, int(np.abs(vector).sum())):
             found.append(OpenCycle(vector, excess))
