@@ -142,8 +142,7 @@ class Quantity:
     @property
     def kind(self) -> str | None:
         """Which of the named kinds this is ("time", "concentration", ...), or None."""
-        dimension = dict(self.unit.dimensionality)
-        return next((kind for kind, spec in _KINDS.items() if spec[0] == dimension), None)
+        return _kind_of(self.unit)
 
     def to(self, kind: str) -> float:
         """The value in driblet's unit of `kind`: K, s, m, L, mol/L, copies, kJ/mol, kT, g/L, g/mol, mol/(s g).
@@ -151,7 +150,7 @@ class Quantity:
         Raises QuantityError when the dimension is another.
         """
         dimension, target, example = _KINDS[kind]
-        if dict(self.unit.dimensionality) != dimension:
+        if self.kind != kind and dict(self.unit.dimensionality) != dimension:
             own = self.kind or f"in {self.unit:~}"
             article = "" if own.startswith("in ") else ("an " if own[0] in "aeiou" else "a ")
             raise QuantityError(
@@ -178,8 +177,7 @@ class Quantity:
         return self._convert(" * ".join(parts) or "")
 
     def _convert(self, target: str) -> float:
-        registry = _registry()
-        value = float(registry.Quantity(self.value, self.unit).to(target).magnitude)
+        value = _converted(self.value, self.unit, target)
         offset = self.kind == "temperature"  # zero kelvin is a true value of another scale
         if not math.isfinite(value) or (value == 0.0 and self.value != 0.0 and not offset):
             raise OutOfRangeError(f'"{self.text}" is out of the range of a double')
@@ -187,6 +185,18 @@ class Quantity:
 
     def __str__(self) -> str:
         return self.text
+
+
+# a sweep builds thousands of systems from the same few texts, and pint is most of the work of building one
+@lru_cache(maxsize=512)
+def _kind_of(unit: Any) -> str | None:
+    dimension = dict(unit.dimensionality)
+    return next((kind for kind, spec in _KINDS.items() if spec[0] == dimension), None)
+
+
+@lru_cache(maxsize=8192)
+def _converted(value: float, unit: Any, target: str) -> float:
+    return float(_registry().Quantity(value, unit).to(target).magnitude)
 
 
 def power_unit(concentration: int, per_time: int = 0) -> str:
