@@ -1,11 +1,16 @@
 """What every engine takes and gives: arrays only. This is the contract; an engine is a function `advance`.
 
-    events = advance(network, rates, state, samples, budget)
+    events = advance(network, rates, state, samples, budget, recorders)
 
 It advances the replicates (rows) whose `state.reason` is RUNNING until each has a reason, or until about `budget` events
 have fired, and returns the number fired. The caller loops; progress, Ctrl-C, recording and files live there. How often an
-engine returns, which replicates share a call and how many threads run never changes a replicate's bits: all that a
-replicate needs to go on is in its rows.
+engine returns, which replicates share a call, how many advance in lockstep and how many threads run never changes a
+replicate's bits: all that a replicate needs to go on is in its rows.
+
+Canonical arithmetic. An event takes two words of the replicate's stream, the first for the waiting time and the second for
+the channel. Propensities are constant * a * (b - o) * (c - p), left to right; they are summed in channel order, in groups
+where there are many (sums.py); a channel is found by counting the cumulative sums that do not exceed the target. Nothing
+is contracted, reassociated or replaced by a reciprocal. So every method gives the same bits.
 """
 
 from __future__ import annotations
@@ -19,14 +24,19 @@ RUNNING = 0
 TIME_REACHED = 1
 NOTHING_CAN_FIRE = 2  # the state is frozen; the rest of the grid holds it
 COUNT_OVERFLOW = 3
+STOP_CONDITION = 4  # a condition that stops was met; the rest of the grid holds the state at that moment
+BUFFER_FULL = 5  # the event log is full: empty it, set `used` to 0 and the reason to RUNNING, and call again
 
 REASONS = {
     TIME_REACHED: "time reached",
     NOTHING_CAN_FIRE: "nothing can fire any more",
     COUNT_OVERFLOW: "a count passed 2^53",
+    STOP_CONDITION: "stop condition met",
+    BUFFER_FULL: "event buffer full",
 }
 LARGEST_COUNT = 2.0**53
 MOST_EVENTS_A_CALL = 1 << 22  # an event changes a count by at most 3, which bounds how far a call can overshoot
+OVERFLOW_GUARD = LARGEST_COUNT - 4.0 * MOST_EVENTS_A_CALL
 
 
 class NetworkArrays(NamedTuple):
@@ -54,7 +64,7 @@ class EnsembleState(NamedTuple):
 
     counts : float64, (R, N + 1), whole numbers up to 2^53, the last column 1
     stream : uint64, (R, 4), xoshiro256++
-    clock : float64, (R,), s, time of the last event
+    clock : float64, (R,), s, time of the last event; when the replicate has ended, the time of its end
     next_sample : int64, (R,), index of the next grid point to record
     firings : int64, (R, M), firings so far
     reason : int64, (R,), RUNNING or why the replicate ended
@@ -77,6 +87,80 @@ class Samples(NamedTuple):
     time: NDArray[np.float64]
     counts: NDArray[np.int64]
     firings: NDArray[np.int64]
+
+
+class Averages(NamedTuple):
+    """Exact time integrals of Q monomials (n_a - o)(n_b - p)(n_c - q) over E - 1 windows of time.
+
+    edge : float64, (E,), s, increasing, the last not after the last grid point: window k is [edge_k, edge_k+1)
+    factor : int64, (Q, 3), species as in NetworkArrays.reactant; offset : float64, (Q, 3)
+    integral : float64, (R, E - 1, Q), s times molecules to the power of the monomial's order; the result
+    firings : int64, (R, E, M), cumulative firings at each edge; the result
+    running : float64, (R, Q), of the window the replicate is in; next_edge : int64, (R,). Carried between calls.
+
+    A replicate that stops early leaves its last window integrated up to its end (`state.clock`) and later ones zero.
+    """
+
+    edge: NDArray[np.float64]
+    factor: NDArray[np.int64]
+    offset: NDArray[np.float64]
+    integral: NDArray[np.float64]
+    firings: NDArray[np.int64]
+    running: NDArray[np.float64]
+    next_edge: NDArray[np.int64]
+
+
+class Occupancy(NamedTuple):
+    """Time spent at each count of S chosen species within a span of time: histograms.
+
+    slot : int64, (N + 2,), row of a species in `seconds`, -1 where it is not followed; species : int64, (S,)
+    width : int64, (S,), counts per bin; the last bin holds all larger counts
+    span : float64, (2,), s
+    seconds : float64, (R, S, B), the result; since : float64, (R, S), carried between calls.
+    """
+
+    slot: NDArray[np.int64]
+    species: NDArray[np.int64]
+    width: NDArray[np.int64]
+    span: NDArray[np.float64]
+    seconds: NDArray[np.float64]
+    since: NDArray[np.float64]
+
+
+class Conditions(NamedTuple):
+    """When each of C polynomial conditions is first met, at event resolution; one that stops ends the replicate then.
+
+    Condition c is sum_t weight[r, t] (n_a - o)(n_b - p)(n_c - q) > 0 over its terms, summed in order; a constant is a term
+    of dummies, a ratio or a Gibbs energy against a threshold is brought to this form by multiplying out.
+    term_start : int64, (C + 1,); weight : float64, (R, T); factor : int64, (T, 3); offset : float64, (T, 3)
+    span : float64, (C, 2), s, when it is looked at, within the grid; stops : int64, (C,), 1 or 0
+    first_met : float64, (R, C), s, inf where it was not; the result.
+    """
+
+    term_start: NDArray[np.int64]
+    weight: NDArray[np.float64]
+    factor: NDArray[np.int64]
+    offset: NDArray[np.float64]
+    span: NDArray[np.float64]
+    stops: NDArray[np.int64]
+    first_met: NDArray[np.float64]
+
+
+class EventLog(NamedTuple):
+    """Every event until the caller empties it. time : float64, (R, L), s; channel : int32, (R, L); used : int64, (R,)."""
+
+    time: NDArray[np.float64]
+    channel: NDArray[np.int32]
+    used: NDArray[np.int64]
+
+
+class Recorders(NamedTuple):
+    """What is gathered while running besides the grid. Each is off when its arrays are empty, and then costs nothing."""
+
+    averages: Averages
+    occupancy: Occupancy
+    conditions: Conditions
+    log: EventLog
 
 
 def new_state(counts: NDArray[np.float64], stream: NDArray[np.uint64], channels: int) -> EnsembleState:

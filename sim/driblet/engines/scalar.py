@@ -1,0 +1,168 @@
+"""The direct method (Gillespie, J. Phys. Chem. 81:2340, 1977) for one replicate after the other, at any size of network.
+
+A firing recomputes the propensities that depend on it and rebuilds the sums that these make stale (sums.py).
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit
+
+from driblet.engines.compile_cache import CACHE
+from driblet.engines.contract import (
+    BUFFER_FULL,
+    COUNT_OVERFLOW,
+    NOTHING_CAN_FIRE,
+    OVERFLOW_GUARD,
+    RUNNING,
+    STOP_CONDITION,
+    TIME_REACHED,
+)
+from driblet.engines.random_stream import minus_log, next_word, selection_uniform, waiting_uniform
+from driblet.engines.recording import (
+    close,
+    close_windows,
+    integrate,
+    look_at_conditions,
+    next_mark,
+    occupy,
+    sample_until,
+)
+from driblet.engines.sums import FAN, STRIDE, select, within
+
+_ONE = np.uint64(1)
+_FAN = np.uint64(FAN)
+_STRIDE = np.uint64(STRIDE)
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
+def propensity(network, constant, counts, channel):  # type: ignore[no-untyped-def]
+    """constant times the falling factorials of the channel's reactants; counts : (N + 1,)."""
+    a, b, c = network.reactant[channel, 0], network.reactant[channel, 1], network.reactant[channel, 2]
+    value = constant * counts[np.uint64(a)]
+    value *= counts[np.uint64(b)] - network.offset[channel, 1]
+    return value * (counts[np.uint64(c)] - network.offset[channel, 2])
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
+def sum_all(network, rows, constants, counts, value, cumulative):  # type: ignore[no-untyped-def]
+    """Every propensity and every sum; value, cumulative : (P,)."""
+    for row in range(rows.end):
+        value[row] = 0.0
+        cumulative[row] = 0.0
+    for j in range(rows.leaf.size):
+        row = rows.leaf[j]
+        value[row] = propensity(network, constants[j], counts, j)
+        cumulative[row] = cumulative[row - 1] + value[row]
+    for k in range(rows.upper.size):
+        row = rows.upper[k]
+        value[row] = cumulative[rows.source[k]]
+        cumulative[row] = cumulative[row - 1] + value[row]
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
+def refresh_sums(rows, refresh, channel, value, cumulative):  # type: ignore[no-untyped-def]
+    """Rebuild the sums that a firing of `channel` made stale."""
+    for k in range(np.uint64(refresh.start[channel]), np.uint64(refresh.start[channel + _ONE])):
+        first = np.uint64(refresh.row[k])
+        group = first // _STRIDE
+        total = cumulative[first - _ONE]
+        for row in range(first, np.uint64(refresh.group_end[group])):
+            total += value[row]
+            cumulative[row] = total
+        value[np.uint64(refresh.group_parent[group])] = total
+    first = np.uint64(refresh.top[channel])
+    total = cumulative[first - _ONE]
+    for row in range(first, np.uint64(rows.end)):
+        total += value[row]
+        cumulative[row] = total
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
+def find_channel(rows, cumulative, target):  # type: ignore[no-untyped-def]
+    """The channel whose share of the total propensity holds `target`."""
+    zero_row = np.uint64(rows.top)
+    member = select(cumulative[rows.top + 1 :], target)
+    index = member
+    for level in range(rows.base.size):
+        before = cumulative[zero_row + member]
+        zero_row = np.uint64(rows.base[level]) + index * _STRIDE
+        target = within(target, before, cumulative[zero_row + _FAN])
+        member = select(cumulative[zero_row + _ONE :], target)
+        index = index * _FAN + member
+    return index
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
+def advance_scalar(network, rows, refresh, rates, state, samples, budget, recorders):  # type: ignore[no-untyped-def]
+    """See contract.py. rates : float64, (R, M), 1/s per product of falling factorials."""
+    averages, occupancy, conditions, log = recorders
+    replicates = rates.shape[0]
+    species = state.counts.shape[1] - 1
+    grid_size = samples.time.size
+    averaging, watching = averages.edge.size > 0, conditions.stops.size > 0
+    following, logging = occupancy.species.size > 0, log.time.shape[1] > 0
+    value = np.empty(rows.end)
+    cumulative = np.empty(rows.end)
+    left = budget
+    for r in range(replicates):
+        if state.reason[r] != RUNNING:
+            continue
+        if left <= 0:
+            break
+        counts, constants, firings, running = state.counts[r], rates[r], state.firings[r], averages.running[r]
+        sum_all(network, rows, constants, counts, value, cumulative)
+        clock = state.clock[r]
+        sample = state.next_sample[r]
+        mark = next_mark(samples, averages, r, sample)
+        while left > 0:
+            if logging and log.used[r] == log.time.shape[1]:
+                state.reason[r] = BUFFER_FULL
+                break
+            total = cumulative[rows.end - 1]
+            wait = minus_log(waiting_uniform(next_word(state.stream, r))) / total
+            target = selection_uniform(next_word(state.stream, r)) * total
+            later = clock + wait  # inf when nothing can fire, so that the grid below ends the replicate
+            since = clock
+            if watching:
+                stop = look_at_conditions(conditions, r, clock, later, counts)
+                if stop < np.inf:
+                    sample = close(samples, recorders, r, sample, since, stop, True, counts, firings, running)
+                    state.reason[r] = STOP_CONDITION
+                    clock = stop
+                    break
+            if not later <= mark:
+                if averaging:
+                    since = close_windows(averages, r, since, later, counts, firings, running)
+                sample = sample_until(samples, r, sample, later, counts, firings)
+                if sample == grid_size:
+                    clock = samples.time[grid_size - 1]
+                    close(samples, recorders, r, sample, since, clock, False, counts, firings, running)
+                    state.reason[r] = TIME_REACHED if total > 0.0 else NOTHING_CAN_FIRE
+                    break
+                mark = next_mark(samples, averages, r, sample)
+            if averaging:
+                integrate(averages, counts, running, later - since)
+            clock = later
+            j = find_channel(rows, cumulative, target)
+            for k in range(np.uint64(network.change_start[j]), np.uint64(network.change_start[j + _ONE])):
+                i = np.uint64(network.change_species[k])
+                if following and occupancy.slot[i] >= 0:
+                    occupy(occupancy, r, occupancy.slot[i], counts[i], clock)
+                counts[i] += network.change_amount[k]
+            for k in range(np.uint64(network.depend_start[j]), np.uint64(network.depend_start[j + _ONE])):
+                d = np.uint64(network.depend_channel[k])
+                value[np.uint64(rows.leaf[d])] = propensity(network, constants[d], counts, d)
+            refresh_sums(rows, refresh, j, value, cumulative)
+            firings[j] += 1
+            if logging:
+                log.time[r, log.used[r]] = clock
+                log.channel[r, log.used[r]] = j
+                log.used[r] += 1
+            left -= 1
+        state.clock[r] = clock
+        state.next_sample[r] = sample
+        for i in range(species):
+            if counts[i] > OVERFLOW_GUARD:
+                state.reason[r] = COUNT_OVERFLOW
+    return budget - left
