@@ -52,11 +52,19 @@ def extended(system: System, root: Node, counts: NDArray[np.int64], omega: Array
         if node.kind == "gibbs":
             reaction = next(r for r in system.reactions if r.name == node.name)
             return transition_energy(system, reaction, counts, omega)
-        n = held[node.name] * omega if node.name in held else counts[..., column[node.name]].astype(float)
+        n = sum(
+            number * (held[name] * omega if name in held else counts[..., column[name]].astype(float))
+            for name, number in copies_in(system, node)
+        )
         return np.asarray(n / omega if node.kind == "conc" else n)
 
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         return np.broadcast_to(value(root), np.broadcast_shapes(counts.shape[:-1], np.shape(omega))).copy()
+
+
+def copies_in(system: System, reference: Reference) -> list[tuple[str, int]]:
+    """What a count, a concentration or a total adds up: (species, molecules of it in one copy)."""
+    return [(reference.name, 1)]
 
 
 def transition_energy(system: System, reaction: Reaction, counts: NDArray[np.int64], omega: Array) -> Array:
