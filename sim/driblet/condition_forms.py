@@ -85,12 +85,15 @@ def _few(terms: dict[Key, Fraction]) -> dict[Key, Fraction]:
     return terms
 
 
+_ONE = Polynomial.constant(1)
+
+
 @dataclass(frozen=True)
 class Ratio:
     """numerator / denominator."""
 
     numerator: Polynomial
-    denominator: Polynomial = Polynomial.constant(1)
+    denominator: Polynomial = _ONE
 
     @property
     def constant(self) -> Fraction | None:
@@ -271,7 +274,7 @@ class _Algebra:
 
     def reference(self, node: Reference) -> Ratio | Logs:
         if node.kind == "gibbs":
-            return self.energy(next(r for r in self.system.reactions if r.name == node.name))
+            return self.energy(self.system.reaction(node.name))
         power = -1 if node.kind == "conc" else 0
         total = Polynomial({})
         for name, number in copies_in(self.system, node):

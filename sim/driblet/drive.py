@@ -34,13 +34,14 @@ class EmergentCycle(NamedTuple):
 def runnable(system: System, present: Collection[str] | None = None) -> NDArray[np.bool_]:
     """Which reactions can ever run, bool, shape=(reactions,).
 
-    present : names of the free species there at the start; default all with an amount above zero. Held ones are always
-    there. A one-way reaction runs from its reactants only.
+    present : names of the free species there at the start; default all with an amount above zero, and
+    those added later. Held ones are always there. A one-way reaction runs from its reactants only.
     """
     index = {s.name: i for i, s in enumerate(system.species)}
     here = {i for s, i in zip(system.species, index.values(), strict=True) if s.held}
     if present is None:
         here |= {index[s.name] for s in system.free_species if s.mean_copies(1.0) > 0}
+        here |= {index[addition.species] for addition in system.additions}
     else:
         here |= {index[name] for name in present}
     left = [{index[name] for name, _ in r.equation.reactants} for r in system.reactions]

@@ -60,11 +60,14 @@ def prepare(system: System, seed: int, replicates: Sequence[int], key: int = 0) 
 
 
 def volumes(compartment: Compartment, uniform: Array) -> Array:
-    """Inner volumes in L of a lognormal size spread, from uniform numbers in (0, 1).
+    """Inner volumes in L of a lognormal size spread, or of sizes as measured, from uniform numbers in (0, 1).
 
     A diameter below two walls is no compartment; the build refuses spreads where that is likelier than one in a million,
     and what is left of it is cut off here.
     """
+    if compartment.sizes_L:
+        sizes = np.array(compartment.sizes_L)
+        return np.asarray(sizes[np.minimum((uniform * len(sizes)).astype(np.int64), len(sizes) - 1)])
     sigma = math.sqrt(math.log1p(compartment.cv**2))
     if not sigma:
         return np.full(len(uniform), compartment.volume_L)

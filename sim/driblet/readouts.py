@@ -50,8 +50,7 @@ def extended(system: System, root: Node, counts: NDArray[np.int64], omega: Array
 
     def referred(node: Reference) -> Array:
         if node.kind == "gibbs":
-            reaction = next(r for r in system.reactions if r.name == node.name)
-            return transition_energy(system, reaction, counts, omega)
+            return transition_energy(system, system.reaction(node.name), counts, omega)
         n = sum(
             number * (held[name] * omega if name in held else counts[..., column[name]].astype(float))
             for name, number in copies_in(system, node)
@@ -63,8 +62,15 @@ def extended(system: System, root: Node, counts: NDArray[np.int64], omega: Array
 
 
 def copies_in(system: System, reference: Reference) -> list[tuple[str, int]]:
-    """What a count, a concentration or a total adds up: (species, molecules of it in one copy)."""
-    return [(reference.name, 1)]
+    """What a count, a concentration or a total adds up: (species, molecules of it in one copy).
+
+    A total adds what enzymes hold; that of an enzyme adds its other states.
+    """
+    if reference.kind != "total":
+        return [(reference.name, 1)]
+    name = reference.name
+    found = [(s.name, dict(s.holds).get(name, 0) + (s.enzyme == name)) for s in system.species if s.name != name]
+    return [(name, 1), *((state, int(number)) for state, number in found if number)]
 
 
 def transition_energy(system: System, reaction: Reaction, counts: NDArray[np.int64], omega: Array) -> Array:

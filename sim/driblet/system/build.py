@@ -11,17 +11,20 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import ndtr
 
 from driblet.energetics.cycles import OpenCycle, unclosed_cycles
 from driblet.energetics.reactant_tables import read_reactants
 from driblet.energetics.reference import reference_table
 from driblet.errors import InputError, Problem, one_problem
-from driblet.quantities import QuantityError, copies_per_molar, thermal_energy
+from driblet.quantities import QuantityError, thermal_energy
+from driblet.system.additions import read_addition
+from driblet.system.compartments import CompartmentReader
 from driblet.system.conditions import read_conditions, with_free_magnesium
+from driblet.system.enzymes import EnzymeReader, Expansion, catalysed_reactions
 from driblet.system.equation import NAME, RESERVED, EquationError, read_equation
 from driblet.system.expressions import ExpressionError, Names, read_value
 from driblet.system.model import (
+    Addition,
     Compartment,
     Conditions,
     Reaction,
@@ -36,19 +39,15 @@ from driblet.system.reference_energies import ReferenceEnergies
 from driblet.system.requirements import read_requirement
 from driblet.system.tables import (
     SECTIONS,
-    CompartmentTable,
     EnergiesTable,
     RunTable,
     SpeciesTable,
-    SpreadTable,
     read_table,
     unknown_key,
 )
+from driblet.system.values import with_values
 
 LARGEST_COUNT = 2.0**53
-SMALLEST_INNER_SHARE = 1e-6
-SMALLEST_OMEGA, LARGEST_OMEGA = 1e-6, 1e27  # copies per mol/L: from less than an atom to a cubic metre
-LARGEST_DIAMETER = 1.0  # m
 LARGEST_HELD = 1000.0  # mol/L, above any pure substance
 LARGEST_LOG_RATE = 200.0  # log10 of a propensity constant in 1/s; times (2^53)^3 it is still a double
 HDF5_MAGIC = b"\x89HDF\r\n\x1a\n"
@@ -103,9 +102,10 @@ def build(raw: Mapping[str, Any], text: str, source: str = "system file", *, clo
 
 class _Builder:
     def __init__(self, raw: Mapping[str, Any], text: str, source: str, closure: bool) -> None:
-        self.raw, self.text, self.source, self.closure = raw, text, source, closure
+        self.text, self.source, self.closure = text, source, closure
         self.problems: list[Problem] = []
         self.warnings: list[str] = []
+        self.raw = with_values(raw, self.problems, self.warnings)
 
     def problem(self, key: str, text: str) -> None:
         self.problems.append(Problem(key, text))
@@ -128,15 +128,21 @@ class _Builder:
         unsolved = conditions is not None and conditions.total_magnesium_M is not None and conditions.pMg is None
         energies = ReferenceEnergies(reference, None if unsolved else conditions, self.warnings)
         reactions = self.reactions(energies, conditions)
+        loading = run.loading if run else "nearest"
+        expansions = self.enzymes(species, reactions, conditions, compartment, loading)
+        additions = self.additions(species, expansions, run, loading)
         names = self.names(conditions)
         readouts = self.readouts(names)
         requirements = self.requirements(replace(names, readouts={r.name: r.expression for r in readouts}), run)
         settings = self.settings(run)
         if self.problems or not (conditions and compartment and settings):
             return None
-        self.check_rates(compartment, species, reactions)
         if self.closure:
             self.check_closure(species, reactions)
+        stated = tuple(reactions)
+        species += [one for e in expansions for one in e.species]
+        reactions = [r for r in reactions if r.forward] + [r for e in expansions for r in e.reactions]
+        self.check_rates(compartment, species, reactions)
         return System(
             title.strip(),
             conditions,
@@ -150,6 +156,9 @@ class _Builder:
             tuple(self.warnings),
             reference,
             requirements=tuple(requirements),
+            enzymes=tuple(e.enzyme for e in expansions),
+            stated=stated,
+            additions=tuple(additions),
         )
 
     def entries(self, name: str) -> Mapping[str, Any]:
@@ -180,55 +189,11 @@ class _Builder:
             self.problem("compartments", f"{len(section)} are given; this version simulates exactly one")
         if not section:
             return None
-        name, value = next(iter(section.items()))
-        path = f"compartments.{name}"
-        table = read_table(CompartmentTable, value, path, self.problems)
-        if table is None:
-            return None
-        if (table.volume is None) == (table.diameter is None):
-            self.problem(path, 'exactly one of diameter ("200 nm") and volume ("4.2 aL") is needed')
-            return None
-        if table.volume is not None:
-            if table.wall is not None:
-                self.problem(f"{path}.wall", "a wall goes with a diameter; a volume is already the inner one")
-            volume = self.measure(table.volume, "volume", f"{path}.volume")
-            return Compartment(name, volume, table.volume.cv) if volume and self.fits(volume, path) else None
-        assert table.diameter is not None
-        diameter = self.measure(table.diameter, "length", f"{path}.diameter")
-        if not diameter:
-            return None
-        wall = table.wall or 0.0
-        if diameter <= 2 * wall:
-            self.problem(f"{path}.wall", "two walls leave no room inside this diameter")
-            return None
-        sigma = math.sqrt(math.log1p(table.diameter.cv**2))
-        if sigma and wall and ndtr(math.log(2 * wall / diameter) / sigma) > SMALLEST_INNER_SHARE:
-            self.problem(f"{path}.diameter.cv", "is so wide that some compartments would be all wall")
-            return None
-        volume = math.pi / 6 * (diameter - 2 * wall) ** 3 * 1000.0
-        return Compartment(name, volume, table.diameter.cv, diameter, wall) if self.fits(volume, path) else None
-
-    def measure(self, spread: SpreadTable, kind: str, path: str) -> float | None:
-        try:
-            value = spread.median.to(kind)
-        except QuantityError as error:
-            self.problem(path, str(error))
-            return None
-        if value <= 0:
-            self.problem(path, f'"{spread.median}" leaves no room; it must be above zero')
-            return None
-        if kind == "length" and value > LARGEST_DIAMETER:
-            self.problem(path, f'"{spread.median}" is no compartment where molecules are counted')
-            return None
-        return value
-
-    def fits(self, volume_L: float, path: str) -> bool:
-        omega = copies_per_molar(volume_L)
-        if omega < SMALLEST_OMEGA:
-            self.problem(path, f"{volume_L:.4g} L is smaller than any molecule")
-        if omega > LARGEST_OMEGA:
-            self.problem(path, f"{volume_L:.4g} L is no compartment where molecules are counted")
-        return SMALLEST_OMEGA <= omega <= LARGEST_OMEGA
+        attachments = self.entries("attachments")
+        reader = CompartmentReader(Path(self.source).parent, attachments, self.problems)
+        compartment = reader.read(*next(iter(section.items())))
+        self.text += reader.attached
+        return compartment
 
     def species(self, default_loading: str, compartment: Compartment | None) -> list[Species]:
         species = []
@@ -269,11 +234,46 @@ class _Builder:
         energies = read_table(EnergiesTable, self.raw.get("energies", {}), "energies", self.problems)
         species = self.entries("species")
         held = {n for n, v in species.items() if isinstance(v, Mapping) and v.get("held") is True}
-        reader = ReactionReader(set(species), held, conditions, self.problems, reference)
+        catalysed = catalysed_reactions(self.entries("enzymes"))
+        reader = ReactionReader(set(species), held, conditions, self.problems, reference, catalysed)
         if energies is not None:
             reader.read_energies(energies)
         found = (reader.read(name, value) for name, value in self.section("reactions", required=True).items())
         return [reaction for reaction in found if reaction is not None]
+
+    def enzymes(
+        self,
+        species: list[Species],
+        reactions: list[Reaction],
+        conditions: Conditions | None,
+        compartment: Compartment | None,
+        loading: str,
+    ) -> list[Expansion]:
+        section = self.section("enzymes", required=False)
+        if conditions is None:
+            return []
+        reader = EnzymeReader(
+            {s.name: s for s in species},
+            {r.name: r for r in reactions},
+            self.entries("reactions"),
+            conditions.RT_kJ_per_mol,
+            compartment.omega if compartment else 1.0,
+            loading,
+            self.problems,
+        )
+        found = (reader.read(name, value) for name, value in section.items())
+        return [expansion for expansion in found if expansion is not None]
+
+    def additions(
+        self, species: list[Species], expansions: list[Expansion], run: RunTable | None, loading: str
+    ) -> list[Addition]:
+        known = {s.name: s for s in [*species, *(e.species[0] for e in expansions)]}
+        duration = run.duration if run else None
+        found = (
+            read_addition(name, value, known, duration, loading, self.problems)
+            for name, value in self.section("additions", required=False).items()
+        )
+        return sorted((a for a in found if a is not None), key=lambda a: a.at_s)
 
     def names(self, conditions: Conditions | None) -> Names:
         """What an expression of this file may refer to, the readouts apart."""
@@ -286,7 +286,7 @@ class _Builder:
             except EquationError:
                 continue
         RT = conditions.RT_kJ_per_mol if conditions else thermal_energy(298.15)
-        return Names(list(species), [r for r in reactions if r not in one_way], RT_kJ_per_mol=RT)
+        return Names([*species, *self.entries("enzymes")], [r for r in reactions if r not in one_way], RT_kJ_per_mol=RT)
 
     def readouts(self, names: Names) -> list[Readout]:
         readouts = []

@@ -11,7 +11,7 @@ import re
 from collections.abc import Collection, Mapping
 from dataclasses import dataclass, field
 
-from driblet.quantities import Quantity, QuantityError, read_number, read_unit
+from driblet.quantities import OutOfRangeError, Quantity, QuantityError, read_number, read_unit
 from driblet.system.standard_readouts import STANDARD_NAMES, standard_readout
 
 Dimension = tuple[int, int]
@@ -357,7 +357,12 @@ class _Parser:
             unit = read_unit(unit_text)
         except QuantityError as error:
             raise ExpressionError(str(error)) from error
-        quantity = Quantity(value, unit, f"{token} {unit_text}")
+        try:
+            return self.constant(Quantity(value, unit, f"{token} {unit_text}"))
+        except OutOfRangeError as error:
+            raise ExpressionError(str(error)) from error
+
+    def constant(self, quantity: Quantity) -> Node:
         if quantity.kind == "concentration":
             return Number(quantity.to("concentration"), (1, 0))
         if quantity.kind == "energy":

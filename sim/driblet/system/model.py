@@ -11,14 +11,16 @@ from driblet.energetics.reference import Reference
 from driblet.quantities import copies_per_molar
 from driblet.system.equation import Equation
 from driblet.system.expressions import Condition, Expression
+from driblet.system.mechanisms.enzyme import Enzyme
 
 
 @dataclass(frozen=True)
 class Compartment:
-    """A compartment whose size may differ between replicates (lognormal).
+    """A compartment whose size may differ between replicates: lognormal, or drawn from measured sizes.
 
     Attributes: volume_L : of the median compartment, wall taken off; cv : coefficient of variation of the diameter
-    (`by_diameter`) or of the volume; diameter_m, wall_m : outer diameter of the median compartment and wall thickness.
+    (`by_diameter`) or of the volume; diameter_m, wall_m : outer diameter of the median compartment and wall thickness;
+    sizes_L : inner volumes as measured, rising, each as likely as any other, or empty.
     """
 
     name: str
@@ -26,6 +28,7 @@ class Compartment:
     cv: float = 0.0
     diameter_m: float | None = None
     wall_m: float = 0.0
+    sizes_L: tuple[float, ...] = field(default=(), repr=False)
 
     @property
     def by_diameter(self) -> bool:
@@ -40,7 +43,10 @@ class Compartment:
 
 @dataclass(frozen=True)
 class Species:
-    """A species and its load: a concentration in mol/L or a number of copies, exactly one; held: a concentration."""
+    """A species and its load: a concentration in mol/L or a number of copies, exactly one; held: a concentration.
+
+    enzyme : the enzyme of which this is a state, None for a species of the file; holds : what that state has bound.
+    """
 
     name: str
     label: str
@@ -48,6 +54,8 @@ class Species:
     copies: float | None
     held: bool = False
     loading: str = "nearest"
+    enzyme: str | None = None
+    holds: tuple[tuple[str, int], ...] = ()
 
     def mean_copies(self, omega: float) -> float:
         """Mean copies in a compartment of `omega` copies per mol/L."""
@@ -60,7 +68,8 @@ class Reaction:
 
     Attributes: dG0_kJ_per_mol : dG0', None for one way; K : exp(-dG0'/RT) relative to 1 mol/L; forward, backward : rate
     constants in (mol/L)^(1-m)/s of v = k prod [A_i]^nu_i; energy_from : what in the file set dG0', energy_note : how, where
-    the reference table had a part in it; one_way : the reason.
+    the reference table had a part in it; one_way : the reason. A reaction that enzymes alone carry has rate constants of
+    zero and stands in System.stated only; enzyme : the one whose elementary step this is, else None.
     """
 
     name: str
@@ -74,6 +83,7 @@ class Reaction:
     energy_sd_kJ_per_mol: float | None = None
     one_way: str | None = None
     energy_note: str = ""
+    enzyme: str | None = None
 
 
 @dataclass(frozen=True)
@@ -82,6 +92,22 @@ class Readout:
 
     name: str
     expression: Expression
+
+
+@dataclass(frozen=True)
+class Addition:
+    """Something added in mid-run: to every compartment a concentration in mol/L or a number of copies, exactly one."""
+
+    name: str
+    at_s: float
+    species: str
+    concentration_M: float | None
+    copies: float | None
+    loading: str = "nearest"
+
+    def mean_copies(self, omega: float) -> float:
+        """Mean copies added to a compartment of `omega` copies per mol/L."""
+        return self.copies if self.copies is not None else (self.concentration_M or 0.0) * omega
 
 
 @dataclass(frozen=True)
@@ -127,7 +153,9 @@ class System:
 
     Attributes: title, conditions, compartment, species, reactions, readouts, settings, requirements; text : the system file it
     was read from, kept for provenance; source : its name for messages; warnings : what is doubtful in the file, one line each;
-    reference : the table its energies come from, the file's own reactants included.
+    reference : the table its energies come from, the file's own reactants included; enzymes : what they are, while species
+    and reactions hold the states and steps they expand to, after those of the file; stated : the reactions of the file,
+    those that enzymes alone carry included; additions : in the order they happen.
     """
 
     title: str
@@ -142,6 +170,20 @@ class System:
     source: str = field(default="", repr=False)
     warnings: tuple[str, ...] = ()
     reference: Reference | None = field(default=None, repr=False, compare=False)
+    enzymes: tuple[Enzyme, ...] = field(default=(), kw_only=True)
+    stated: tuple[Reaction, ...] = field(default=(), kw_only=True)
+    additions: tuple[Addition, ...] = field(default=(), kw_only=True)
+
+    def __post_init__(self) -> None:
+        if not self.stated:
+            object.__setattr__(self, "stated", tuple(r for r in self.reactions if r.enzyme is None))
+
+    def reaction(self, name: str) -> Reaction:
+        """A reaction of the file by its name. Raises KeyError for an unknown one."""
+        for reaction in self.stated:
+            if reaction.name == name:
+                return reaction
+        raise KeyError(name)
 
     @property
     def free_species(self) -> tuple[Species, ...]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import replace
 
 from driblet.energetics.gibbs import (
@@ -41,9 +41,11 @@ class ReactionReader:
         conditions: Conditions | None,
         problems: list[Problem],
         reference: ReferenceEnergies,
+        catalysed: Collection[str] = (),
     ) -> None:
+        """catalysed : names of reactions that enzymes carry; they need no rate of their own."""
         self.species, self.held, self.conditions, self.problems = species, held, conditions, problems
-        self.reference = reference
+        self.reference, self.catalysed = reference, catalysed
         self.formation: dict[str, float] = {}
         self.hydrolysis: list[tuple[dict[str, int], float]] = []
 
@@ -160,10 +162,9 @@ class ReactionReader:
             if sd < 0:
                 self._problem(path, "energy.sd", f'"{table.energy.sd}" is negative; a standard deviation cannot be')
                 return None
-        if forward is None and backward is None:
-            self._problem(
-                path, "forward", "is missing: a rate constant, forward or backward, is needed with the energy"
-            )
+        if forward is None and backward is None and name not in self.catalysed:
+            text = "is missing: a rate constant, forward or backward, is needed with the energy, or an enzyme"
+            self._problem(path, "forward", text)
             return None
         if dG0 is None and (forward is None or backward is None):
             self._problem(path, "energy", "is missing: give energy, K or Kd, or both forward and backward")
@@ -207,11 +208,11 @@ class ReactionReader:
                 "K' is out of the range of a double; check the unit",
             )
             return None
+        alone = forward is None and backward is None  # enzymes carry it alone
         if forward is None:
-            assert backward is not None
-            forward = backward * K
+            forward = 0.0 if backward is None else backward * K
         backward = forward / K
-        if not (0 < forward < math.inf and 0 < backward < math.inf):
+        if not alone and not (0 < forward < math.inf and 0 < backward < math.inf):
             self._problem(path, "forward", "the reverse rate constant is out of the range of a double; check the units")
             return None
         origin = "rates" if not given else given[0]

@@ -16,6 +16,7 @@ from driblet.quantities import Quantity, QuantityError, example_of, read_quantit
 ENGINES = ("exact",)
 LOADINGS = ("nearest", "poisson")
 WHEN = ("throughout", "at end", "once", "on average")  # when the condition of a requirement must hold
+COLDEST, HOTTEST = 200.0, 500.0  # K, with room for supercooled droplets and for pressure
 MOST_REPLICATES, LARGEST_SEED = 10_000_000, 2**63 - 1
 SHORTEST_TIME, LONGEST_TIME = 1e-15, 1e15  # s: from faster than a bond vibrates to 30 million years
 ENERGY_WORDS = ("formation", "hydrolysis", "reference")  # where an energy can come from instead of being stated
@@ -38,6 +39,13 @@ def _of_kind(kind: str, allow_zero: bool = True, allow_negative: bool = False) -
         return number
 
     return read
+
+
+def _temperature(value: object) -> float:
+    kelvin = _of_kind("temperature", allow_zero=False)(value)
+    if not COLDEST <= kelvin <= HOTTEST:
+        raise _complain(f'"{value}" is no temperature of liquid water, {COLDEST:g} K to {HOTTEST:g} K; is it in degC?')
+    return kelvin
 
 
 def _time(value: object) -> float:
@@ -137,7 +145,7 @@ Text = Annotated[str, BeforeValidator(_text)]
 AnyQuantity = Annotated[Quantity, BeforeValidator(_quantity)]
 Constant = Annotated[Quantity, BeforeValidator(_constant)]
 Amount = Annotated[Quantity, BeforeValidator(_amount)]
-Temperature = Annotated[float, BeforeValidator(_of_kind("temperature", allow_zero=False))]
+Temperature = Annotated[float, BeforeValidator(_temperature)]
 Time = Annotated[float, BeforeValidator(_time)]
 Length = Annotated[float, BeforeValidator(_of_kind("length"))]
 Concentration = Annotated[float, BeforeValidator(_of_kind("concentration"))]
@@ -175,8 +183,11 @@ class ConditionsTable(Table):
 
 
 class SpreadTable(Table):
-    median: AnyQuantity
+    median: AnyQuantity | None = None
     cv: Annotated[float, BeforeValidator(_plain(0, 3, "a coefficient of variation"))] = 0.0
+    csv: Text | None = None
+    column: Text | None = None
+    unit: Text | None = None
 
 
 def _as_table(key: str) -> BeforeValidator:
@@ -261,8 +272,8 @@ class RunTable(Table):
 
 
 SECTIONS = (
-    "title", "conditions", "compartments", "species", "reactants", "energies", "reactions", "readouts", "requirements",
-    "run",
+    "title", "values", "conditions", "compartments", "species", "reactants", "energies", "reactions", "enzymes",
+    "additions", "readouts", "requirements", "run", "attachments",
 )  # fmt: skip
 TableType = TypeVar("TableType", bound=Table)
 
@@ -284,7 +295,7 @@ def _problem(model: type[Table], value: Mapping[str, Any], path: str, fault: Any
     location = [str(part) for part in fault["loc"]]
     if location[1:2] == ["table"]:
         del location[1]  # pydantic's name for a branch, not a key of the file
-    if location[-1] in ("median", "value") and not isinstance(value.get(location[0]), Mapping):
+    if len(location) > 1 and location[-1] in ("median", "value") and not isinstance(value.get(location[0]), Mapping):
         location.pop()  # a bare value stood for the table
     key = ".".join([path, *location])
     kind = fault["type"]
@@ -302,10 +313,15 @@ def _problem(model: type[Table], value: Mapping[str, Any], path: str, fault: Any
 def _keys_at(model: type[Table], location: list[str]) -> list[str]:
     for part in location:
         annotation = model.model_fields[part].annotation if part in model.model_fields else None
-        nested = [t for t in (SpreadTable, EnergyTable, ConstantTable, BufferTable) if t.__name__ in repr(annotation)]
+        # the annotation names the model of a nested table; the entries of a table of tables have names of their own
+        nested = [t for t in _subclasses(Table) if f".{t.__name__}" in repr(annotation)]
         if nested:
             model = nested[0]
     return list(model.model_fields)
+
+
+def _subclasses(model: type[Table]) -> list[type[Table]]:
+    return [t for child in model.__subclasses__() for t in (child, *_subclasses(child))]
 
 
 def unknown_key(key: str, known: list[str]) -> str:

@@ -92,7 +92,7 @@ class Assembler:
             taken, given = graph.binding, graph.release
             constants = self._given(spec, links, turnovers) if spec.steps is not None else self._square(spec, graph)
         else:
-            chains = self._chains(spec)
+            chains = self._chains(spec.mechanism, spec.substrates, spec.products)
             links = tuple(link for chain in chains for link in chain.links)
             names = [spec.reaction] if len(chains) == 1 else [spec.reaction + FIRST_HALF, spec.reaction]
             turnovers = {chain.turnover: name for chain, name in zip(chains, names, strict=True)}
@@ -125,6 +125,14 @@ class Assembler:
             on, origin = min(1e7, FASTEST / Ki_M), "Ki given; on-rate by default"
         self._place(Link(FREE, (species,), binds=species), f"binds_{species}", _Constants(on, on * Ki_M, origin))
         self.inhibitors.append((species, Ki_M))
+
+    def shared(self, mechanism: str, substrates: tuple[str, ...], products: tuple[str, ...]) -> set[str]:
+        """The ligands of a reaction to be added whose steps have constants from an earlier reaction already."""
+        if mechanism == "random bi bi":
+            return set()
+        chains = self._chains(mechanism, substrates, products)
+        links = [link for chain in chains for link in (*chain.binding, *chain.release)]
+        return {link.binds or link.releases or "" for link in links if self._known(link) is not None}
 
     def holds(self, ligand: str) -> bool:
         """Whether the free enzyme binds `ligand` in some step already."""
@@ -194,10 +202,11 @@ class Assembler:
             return None
         return Pair(*known) if link.binds is not None else Pair(known[1], known[0])
 
-    def _chains(self, spec: ActivitySpec) -> tuple[Chain, ...]:
-        if spec.mechanism == "ping pong bi bi":
-            return ping_pong(spec.substrates, spec.products)  # type: ignore[arg-type]
-        return (Chain(FREE, FREE, spec.substrates, spec.products),)
+    @staticmethod
+    def _chains(mechanism: str, substrates: tuple[str, ...], products: tuple[str, ...]) -> tuple[Chain, ...]:
+        if mechanism == "ping pong bi bi":
+            return ping_pong((substrates[0], substrates[1]), (products[0], products[1]))
+        return (Chain(FREE, FREE, substrates, products),)
 
     def _chained(self, spec: ActivitySpec, chains: Sequence[Chain]) -> dict[Link, _Constants]:
         assert spec.kcat_per_s is not None
@@ -243,9 +252,7 @@ class Assembler:
             name, fixed = chain.substrates[i], self._pair(link)
             KM = spec.KM_M[name] * factor if fixed is None else None
             substrates.append(Substrate(KM, spec.Kd_M.get(name), i < last, fixed))
-        products = [
-            Product(spec.Kd_M.get(link.releases or ""), self._pair(link)) for link in chain.release
-        ]
+        products = [Product(spec.Kd_M.get(link.releases or ""), self._pair(link)) for link in chain.release]
         try:
             found = solve(Problem(kcat, K, tuple(substrates), tuple(products)))
         except MechanismError as error:
@@ -292,7 +299,9 @@ class Assembler:
             out[alone] = _Constants(pair.off, pair.on, "closed square")
         return out
 
-    def _given(self, spec: ActivitySpec, links: Sequence[Link], turnovers: Mapping[Link, str]) -> dict[Link, _Constants]:
+    def _given(
+        self, spec: ActivitySpec, links: Sequence[Link], turnovers: Mapping[Link, str]
+    ) -> dict[Link, _Constants]:
         """Microscopic constants as stated; what is left out follows from closure, and closure is made exact."""
         assert spec.steps is not None
         keys = [turnovers.get(link) or link.key for link in links]
@@ -347,7 +356,9 @@ class Assembler:
         if missing.any():
             if np.linalg.matrix_rank(for_missing) < missing.sum():
                 names = ", ".join(key for key, gap in zip(keys, missing, strict=True) if gap)
-                raise MechanismError(f"{names}: the energy fixes one constant a cycle, not all that are left out", "steps")
+                raise MechanismError(
+                    f"{names}: the energy fixes one constant a cycle, not all that are left out", "steps"
+                )
             all_energies[:-1][missing] = np.linalg.lstsq(for_missing, known, rcond=None)[0]
         excess = basis @ all_energies
         worst = int(np.argmax(np.abs(excess)))

@@ -151,7 +151,9 @@ def _check_encounters(problem: Problem) -> None:
             room = 1.0 - slope / FASTEST_ON
             if Kd * slope >= FASTEST * room:
                 raise MechanismError(
-                    f"with this kcat and K_M it must be below {FASTEST * room / slope / problem.interaction:.3g} M", "Kd", i
+                    f"with this kcat and K_M it must be below {FASTEST * room / slope / problem.interaction:.3g} M",
+                    "Kd",
+                    i,
                 )
 
 

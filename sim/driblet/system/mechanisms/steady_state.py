@@ -30,7 +30,9 @@ class MeasuredConstants:
     KM_M: tuple[float, ...]
 
 
-def generator(enzyme: Enzyme, concentrations: Mapping[str, float] | Array, among: Collection[int] | None = None) -> Array:
+def generator(
+    enzyme: Enzyme, concentrations: Mapping[str, float] | Array, among: Collection[int] | None = None
+) -> Array:
     """Rates between states, 1/s, shape=(states, states): [i, j] from i to j, the diagonal zero.
 
     concentrations : mol/L by species, or one per step, shape=(steps,), for the ligand that the step binds or releases.
