@@ -40,8 +40,8 @@ def audit_facts(system: System) -> dict[str, Any]:
     course = _course(system, network, copies)
     equilibrium = _equilibrium(system, network)
     macroscopic = equilibrium["macroscopic"] if equilibrium else None
-    magnesium = magnesium_facts(system, macroscopic and {name: n / omega for name, n in macroscopic.items()})
-    buffer = buffer_facts(system)
+    there = macroscopic and {name: n / omega for name, n in macroscopic.items()}
+    magnesium, buffer = magnesium_facts(system, there), buffer_facts(system, there)
     warnings = list(system.warnings)
     warnings += condition_warnings(magnesium, buffer)
     warnings += _warnings(system, network, copies, course)

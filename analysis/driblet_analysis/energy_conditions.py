@@ -6,7 +6,7 @@ bind some, and these functions say how far the energies would move if it did.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from typing import Any
 
@@ -28,14 +28,19 @@ def initial_composition(system: System) -> dict[str, float]:
 
 
 def full_conversion(system: System, reaction: Reaction) -> dict[str, float] | None:
-    """The composition once `reaction` alone has run forward until a reactant is exhausted; None when it cannot start."""
+    """The composition once `reaction` alone has run until what it consumes is exhausted; None when it cannot start.
+
+    Forward, or backward where nothing is there to go forward.
+    """
     start = initial_composition(system)
     held = system.held_concentrations()
     change = {name: n for name, n in reaction.equation.change.items() if name not in held}
-    used = [start[name] / -n for name, n in change.items() if n < 0]
-    if not used or min(used) == 0:
-        return None
-    return {name: max(0.0, c + min(used) * change.get(name, 0)) for name, c in start.items()}
+    for direction in (1, -1) if reaction.backward is not None else (1,):
+        used = [start[name] / abs(n) for name, n in change.items() if n * direction < 0]
+        if used and min(used) > 0:
+            extent = direction * min(used)
+            return {name: max(0.0, c + extent * change.get(name, 0)) for name, c in start.items()}
+    return None
 
 
 def sensitivity_facts(system: System, reaction: Reaction) -> dict[str, Any]:
@@ -67,10 +72,10 @@ def magnesium_facts(system: System, equilibrium: Composition | None) -> dict[str
     compositions: dict[str, Composition] = {"start": start}
     if equilibrium is not None:
         compositions["equilibrium"] = {**start, **equilibrium}
-    for reaction in system.reactions:
+    for reaction in system.stated:
         after = full_conversion(system, reaction)
         if after is not None:
-            compositions[f"after {reaction.name}"] = after
+            compositions[reaction.name] = after
     assert conditions.pMg is not None
     at = Potentials.of(conditions, table.magnesium_ion)
     known = {name: r for name in start for r in [table.find(name)] if r is not None}
@@ -92,7 +97,7 @@ def _at_composition(system: System, name: str, composition: Composition, total: 
         return {"at": name, "pMg": None, "dG0_kJ_per_mol": None, "reason": str(error)}
     there = replace(conditions, pMg=pMg)
     energies: dict[str, float | None] = {}
-    for reaction in system.reactions:
+    for reaction in system.stated:
         energies[reaction.name] = reaction.dG0_kJ_per_mol
         if reaction.dG0_kJ_per_mol is not None:
             try:
@@ -104,26 +109,32 @@ def _at_composition(system: System, name: str, composition: Composition, total: 
     return {"at": name, "pMg": pMg, "dG0_kJ_per_mol": energies, "reason": None}
 
 
-def buffer_facts(system: System) -> dict[str, Any] | None:
-    """The pH after each reaction alone has run to full conversion in the stated buffer; None without a buffer."""
+def buffer_facts(system: System, equilibrium: Composition | None) -> dict[str, Any] | None:
+    """The pH at equilibrium, and after each reaction alone has run to full conversion, in the stated buffer.
+
+    equilibrium : as in `magnesium_facts`. None without a buffer.
+    """
     buffer = system.conditions.buffer
     if buffer is None:
         return None
-    return {
-        "name": buffer.name,
-        "concentration_M": buffer.concentration_M,
-        "pH_after": [_pH_after(system, reaction) for reaction in system.reactions],
-    }
+    rows = [
+        _pH_after(system, reaction.name, full_conversion(system, reaction), [reaction]) for reaction in system.stated
+    ]
+    if equilibrium is not None:
+        there = {**initial_composition(system), **equilibrium}
+        rows.insert(0, _pH_after(system, "equilibrium", there, list(system.stated)))
+    return {"name": buffer.name, "concentration_M": buffer.concentration_M, "pH_after": rows}
 
 
-def _pH_after(system: System, reaction: Reaction) -> dict[str, Any]:
+def _pH_after(system: System, name: str, after: Composition | None, reactions: Sequence[Reaction]) -> dict[str, Any]:
     table, conditions = _table(system), system.conditions
-    facts: dict[str, Any] = {"reaction": reaction.name, "pH": None, "change": None, "reason": None}
-    after = full_conversion(system, reaction)
-    held = [name for name in reaction.equation.change if name in system.held_concentrations()]
+    facts: dict[str, Any] = {"after": name, "pH": None, "change": None, "reason": None}
+    turned = dict.fromkeys(name for reaction in reactions for name in reaction.equation.change)
+    held = [name for name in turned if name in system.held_concentrations()]
     missing = conditions.missing(with_magnesium=True)
     try:
-        table.terms(full_change(reaction.equation))
+        for reaction in reactions:
+            table.terms(full_change(reaction.equation))
         if missing:
             facts["reason"] = f"{' and '.join(missing)} not stated"
         elif after is None:
@@ -165,15 +176,15 @@ def condition_warnings(magnesium: Mapping[str, Any] | None, buffer: Mapping[str,
         if row["change"] is not None and abs(row["change"]) > PH_LIMIT:
             found.append(
                 f"the pH is held; {buffer['name']} at {buffer['concentration_M'] * 1e3:g} mM would let it go to "  # type: ignore[index]
-                f"{row['pH']:.2f} by the time {row['reaction']} has run to the end"
+                f"{row['pH']:.2f} {_when(row['after'])}"
             )
         elif row["reason"] and "overrun" in row["reason"]:
-            found.append(f"{row['reaction']} run to the end: {row['reason']}")
+            found.append(f"{_when(row['after'])}: {row['reason']}")
     return found
 
 
 def _when(at: str) -> str:
-    return f"after full conversion by {at.removeprefix('after ')}" if at.startswith("after ") else f"at {at}"
+    return "at equilibrium" if at == "equilibrium" else f"after full conversion by {at}"
 
 
 def _table(system: System) -> Reference:

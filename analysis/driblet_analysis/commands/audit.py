@@ -151,22 +151,22 @@ def _print_conditions(out: Any, facts: dict[str, Any]) -> None:
             markup=False,
         )
         rows = [
-            [row["at"], number(row["pMg"]), *(_energy_at(row, r["name"]) for r in known)]
+            [_composition(row["at"]), number(row["pMg"]), *(_energy_at(row, r["name"]) for r in known)]
             for row in magnesium["compositions"]
         ]
         names = [r["name"] for r in known]
         out.print(table("ΔG°′ if free magnesium were not held, kJ/mol", ["composition", "pMg", *names], rows))
     for row in facts["buffer"]["pH_after"] if facts["buffer"] else ():
-        end = (
-            f"pH {row['pH']:.2f} ({_signed(row['change'])})"
-            if row["pH"] is not None
-            else f"pH unknown: {row['reason']}"
-        )
+        end = f"pH {row['pH']:.2f} ({_signed(row['change'])})" if row["pH"] is not None else f"pH unknown: {row['reason']}"
         out.print(
-            f"{row['reaction']} run to the end in {facts['buffer']['concentration_M'] * 1e3:g} mM "
+            f"{_composition(row['after'])} in {facts['buffer']['concentration_M'] * 1e3:g} mM "
             f"{facts['buffer']['name']}: {end}",
             markup=False,
         )
+
+
+def _composition(at: str) -> str:
+    return at if at in ("start", "equilibrium") else f"after {at} alone"
 
 
 def _signed(value: float | None) -> str:

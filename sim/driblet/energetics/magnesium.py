@@ -39,10 +39,10 @@ def total_magnesium(load: Load, conditions: Conditions, magnesium_ion: IonicSpec
 
 
 def solved_pMg(total: float, load: Load, conditions: Conditions, magnesium_ion: IonicSpecies) -> float:
-    """The pMg at which free and bound magnesium sum to `total`.
+    """The pMg at which free and bound magnesium sum to `total`, mol/L.
 
     conditions : pH and ionic strength stated, their pMg ignored. Returns 14 for a total of zero. Raises CannotBeMetError
-    when the free magnesium alone would bring more ionic strength than is stated.
+    beyond 10 mol/L.
     """
 
     def surplus(pMg: float) -> float:
@@ -52,15 +52,17 @@ def solved_pMg(total: float, load: Load, conditions: Conditions, magnesium_ion: 
         return HIGHEST_PMG
     if surplus(LOWEST_PMG) < 0:
         raise CannotBeMetError(f"{total:g} mol/L is more magnesium than any solution holds")
-    pMg = float(brentq(surplus, LOWEST_PMG, HIGHEST_PMG, xtol=1e-12))
-    assert conditions.ionic_strength_M is not None
+    return float(brentq(surplus, LOWEST_PMG, HIGHEST_PMG, xtol=1e-12))
+
+
+def check_ionic_strength(pMg: float, total: float, ionic_strength: float) -> None:
+    """Raise CannotBeMetError when free magnesium alone would bring more ionic strength than is stated, mol/L."""
     least = 3 * 10.0**-pMg  # half of 4 c for the ion and of 2 c for its counter-ions
-    if least > conditions.ionic_strength_M:
+    if least > ionic_strength:
         raise CannotBeMetError(
             f"{total * 1e3:.4g} mM would leave {10.0**-pMg * 1e3:.4g} mM free, which with its counter-ions alone brings an "
-            f"ionic strength of {least:.3g} M; {conditions.ionic_strength_M:g} M is stated"
+            f"ionic strength of {least:.3g} M; {ionic_strength:g} M is stated"
         )
-    return pMg
 
 
 def buffer_charge(buffer: Buffer, conditions: Conditions) -> float:

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from dataclasses import replace
 
 from driblet.energetics.conditions import Buffer, Conditions
-from driblet.energetics.magnesium import CannotBeMetError, solved_pMg
+from driblet.energetics.magnesium import CannotBeMetError, check_ionic_strength, solved_pMg
 from driblet.energetics.reference import BufferEntry, Reference
 from driblet.errors import Problem
 from driblet.system.model import Compartment, Species
@@ -72,6 +72,7 @@ def with_free_magnesium(
     load = reference.load({s.name: s.mean_copies(compartment.omega) / compartment.omega for s in species})
     try:
         pMg = solved_pMg(conditions.total_magnesium_M, load, conditions, reference.magnesium_ion)
+        check_ionic_strength(pMg, conditions.total_magnesium_M, conditions.ionic_strength_M or 0.0)
     except CannotBeMetError as error:
         problems.append(Problem(path, f"cannot be met: {error}"))
         return conditions
