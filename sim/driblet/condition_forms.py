@@ -182,21 +182,20 @@ def _comparison(system: System, comparison: Comparison, averaged: bool) -> Form:
 def _ratio_sign(difference: Ratio, strict: bool) -> Form:
     above, below = difference.numerator, difference.denominator
     signs = {value > 0 for value in below.terms.values()}
-    if signs == {False}:
-        above, below, signs = -above, -below, {True}
-    if len(signs) == 2:  # of either sign, so the comparison may turn round: times the square it does not
-        above, below = above * below, below * below
-    return _guarded(above, below, strict or below.value is not None)
+    if len(signs) == 1:
+        return _guarded(above, below, strict) if signs == {True} else _guarded(-above, -below, strict)
+    # of either sign, so the comparison may turn round: times the square it does not; at zero the numerator decides
+    square = below * below
+    at_zero = Join("and", Leaf(SIGN, (square,), False), Leaf(SIGN, (above,)))
+    return Join("or", _guarded(above * below, square, strict), at_zero)
 
 
 def _guarded(polynomial: Polynomial, positive: Polynomial, strict: bool) -> Form:
     """polynomial < 0, or <= 0 where `positive`, which is never negative, is above zero."""
-    below = Leaf(SIGN, (polynomial,))
-    if strict and positive.value is None:
-        return below
-    if positive.value is not None:
+    if strict or positive.value is not None:
         return Leaf(SIGN, (polynomial,), strict)
-    return Join("or", below, Join("and", Leaf(SIGN, (polynomial,), False), Leaf(SIGN, (-positive,))))
+    here = Join("and", Leaf(SIGN, (polynomial,), False), Leaf(SIGN, (-positive,)))
+    return Join("or", Leaf(SIGN, (polynomial,)), here)
 
 
 def _ratio_average(difference: Ratio, strict: bool) -> Form:

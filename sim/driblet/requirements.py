@@ -1,0 +1,299 @@
+"""Requirements of a system: compiled for the kernels, judged on the sampling grid where a kernel cannot, and their outcomes.
+
+Judged at every event the outcome is exact. On a grid a failure between two points goes unseen, so the share of compartments
+that hold throughout is then an upper bound (and the share that succeed once a lower one).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from driblet.condition_forms import Form, Leaf, NotInFormError, Polynomial, form_of
+from driblet.engines.judging import AND, AT_END, ONCE, OR, THROUGHOUT, UNDECIDED, Requirements
+from driblet.network import Network
+from driblet.readouts import extended
+from driblet.system.expressions import Comparison, Junction, Negation, Operation, Truth
+from driblet.system.model import Requirement, System
+
+Array = NDArray[np.float64]
+WHEN = {"throughout": THROUGHOUT, "at end": AT_END, "once": ONCE, "on average": AT_END}
+EVENT, LEAP, GRID = "event", "leap", "grid"  # where the truth of a requirement was looked at
+_EXACT_INTEGER = 2**53
+_ROUNDING = 1e-12
+
+
+@dataclass(frozen=True)
+class Outcomes:
+    """What came of Q requirements in R replicates; every array of shape (R, Q).
+
+    met : int8, 1 met, 0 not, -1 undecided because the record ended first; first_failure_s, first_met_s : when the condition
+    first failed and first held within the span, NaN where it never did; time_met_s : time it held; judged_until_s.
+    """
+
+    met: NDArray[np.int8]
+    first_failure_s: Array
+    first_met_s: Array
+    time_met_s: Array
+    judged_until_s: Array
+
+
+@dataclass(frozen=True)
+class CompiledRequirements:
+    """The requirements of a system in the form kernels take, and those that only the grid can judge.
+
+    Attributes: names : in the order of the file; in_kernel : indices of those a kernel judges; by_grid : index -> why not.
+    """
+
+    system: System
+    network: Network
+    duration_s: float
+    in_kernel: tuple[int, ...]
+    forms: tuple[Form, ...]
+    by_grid: dict[int, str]
+
+    @classmethod
+    def of(cls, system: System, network: Network, duration_s: float) -> CompiledRequirements:
+        """Compile the requirements of `system` for a run of `duration_s`."""
+        in_kernel, forms, by_grid = [], [], {}
+        for q, requirement in enumerate(system.requirements):
+            try:
+                forms.append(form_of(system, requirement.must.root, requirement.averaged))
+                in_kernel.append(q)
+            except NotInFormError as error:
+                by_grid[q] = str(error)
+        return cls(system, network, duration_s, tuple(in_kernel), tuple(forms), by_grid)
+
+    def resolutions(self, kernel: str = EVENT) -> tuple[str, ...]:
+        """For each requirement where its truth is looked at; kernel : EVENT or LEAP, what the engine's kernel does."""
+        return tuple(GRID if q in self.by_grid else kernel for q in range(len(self.system.requirements)))
+
+    def recorder(self, omega: Array, stop_when_decided: bool = False) -> Requirements:
+        """The kernel's arrays for replicates of the given copies per mol/L, nothing judged yet.
+
+        A replicate stops early only where every requirement is judged in the kernel.
+        """
+        tables = _Tables(self.network, len(omega))
+        for form, q in zip(self.forms, self.in_kernel, strict=True):
+            tables.add(form, self.system.requirements[q], self.duration_s, omega)
+        return tables.arrays(stop_when_decided and bool(self.in_kernel) and not self.by_grid)
+
+    def outcomes(self, recorded: Requirements, counts: NDArray[np.int64], time_s: Array, omega: Array) -> Outcomes:
+        """Every outcome, those of the kernel as recorded, the others from the sampled counts, (R, G, N)."""
+        shape = (len(omega), len(self.system.requirements))
+        out = Outcomes(np.full(shape, UNDECIDED, dtype=np.int8), *(np.full(shape, np.nan) for _ in range(4)))
+        for k, q in enumerate(self.in_kernel):
+            out.met[:, q] = recorded.outcome[:, k]
+            out.first_failure_s[:, q], out.first_met_s[:, q] = recorded.first_failure[:, k], recorded.first_met[:, k]
+            out.time_met_s[:, q], out.judged_until_s[:, q] = recorded.time_met[:, k], recorded.judged_until[:, k]
+        for q in self.by_grid:
+            _copy(out, q, judge_on_grid(self.system, self.system.requirements[q], counts, time_s, omega))
+        return out
+
+
+def _copy(target: Outcomes, q: int, source: Outcomes) -> None:
+    for name in ("met", "first_failure_s", "first_met_s", "time_met_s", "judged_until_s"):
+        getattr(target, name)[:, q] = getattr(source, name)[:, 0]
+
+
+class _Tables:
+    """Collects requirements into the flat arrays of `Requirements`."""
+
+    def __init__(self, network: Network, replicates: int) -> None:
+        self.network, self.replicates = network, replicates
+        self.species = {name: i for i, name in enumerate(network.species)}
+        self.leaf_start, self.program_start = [0], [0]
+        self.term_start, self.factor_start = [0], [0]
+        self.leaf_kind: list[int] = []
+        self.leaf_strict: list[int] = []
+        self.leaf_polynomial: list[tuple[int, int]] = []
+        self.factor_species: list[int] = []
+        self.factor_offset: list[float] = []
+        self.program: list[int] = []
+        self.coefficient: list[Array] = []
+        self.needed: list[set[int]] = []
+        self.settings: list[tuple[int, tuple[float, float], int, float, int]] = []
+
+    def add(self, form: Form, requirement: Requirement, duration_s: float, omega: Array) -> None:
+        """Add one requirement; omega : (R,)."""
+        self.needed.append(set())
+        self._push(form, omega)
+        self.leaf_start.append(len(self.leaf_kind))
+        self.program_start.append(len(self.program))
+        start, end = requirement.span_s(duration_s)
+        window = requirement.averaged_over_s or end - start
+        windows = max(1, int((end - start) / window * (1 + _ROUNDING)))
+        when = WHEN[requirement.when]
+        self.settings.append((when, (start, min(end, duration_s)), int(requirement.averaged), window, windows))
+
+    def _push(self, form: Form, omega: Array) -> None:
+        if not isinstance(form, Leaf):
+            self._push(form.left, omega)
+            self._push(form.right, omega)
+            self.program.append(AND if form.operator == "and" else OR)
+            return
+        self.program.append(len(self.leaf_kind) - self.leaf_start[-1])
+        first = len(self.term_start) - 1
+        self.leaf_kind.append(form.kind)
+        self.leaf_strict.append(int(form.strict))
+        self.leaf_polynomial.append((first, first + len(form.polynomials) - 1))
+        for polynomial in form.polynomials:
+            for factors, _ in polynomial.terms:
+                self.factor_species += [self.species[name] for name, _ in factors]
+                self.factor_offset += [float(k) for _, k in factors]
+                self.factor_start.append(len(self.factor_species))
+            self.term_start.append(len(self.factor_start) - 1)
+            self.needed[-1] |= {self.species[name] for name in polynomial.species}
+        self.coefficient.append(coefficients(form.polynomials, omega))
+
+    def arrays(self, stop: bool) -> Requirements:
+        """The arrays, nothing judged yet."""
+        affected = [
+            [q for q, needed in enumerate(self.needed) if needed & {i for i, _ in channel.change}]
+            for channel in self.network.channels
+        ]
+        when, span, averaged, window, windows = zip(*self.settings, strict=True) if self.settings else ((),) * 5
+        R, Q, L = self.replicates, len(self.settings), len(self.leaf_kind)
+        return Requirements(
+            whole(np.cumsum([0, *map(len, affected)])),
+            whole([q for row in affected for q in row]),
+            whole(self.leaf_start),
+            whole(self.leaf_kind),
+            whole(self.leaf_strict),
+            whole(self.leaf_polynomial).reshape(-1, 2),
+            whole(self.term_start),
+            whole(self.factor_start),
+            whole(self.factor_species),
+            np.array(self.factor_offset, dtype=float),
+            whole(self.program_start),
+            whole(self.program),
+            whole(when),
+            np.array(span, dtype=float).reshape(Q, 2),
+            whole(averaged),
+            np.array(window, dtype=float),
+            whole(windows),
+            whole([int(stop)]),
+            np.ascontiguousarray(np.hstack([np.zeros((R, 0)), *self.coefficient])),
+            np.zeros((R, L)),
+            np.zeros((R, L)),
+            np.zeros((R, L), dtype=np.int64),
+            np.zeros((R, Q), dtype=np.int64),
+            np.zeros((R, Q)),
+            np.zeros((R, Q), dtype=np.int64),
+            np.zeros((R, Q)),
+            np.full((R, Q), np.nan),
+            np.full((R, Q), np.nan),
+            np.full((R, Q), np.nan),
+            np.full((R, Q), UNDECIDED, dtype=np.int64),
+        )
+
+
+def whole(values: object) -> NDArray[np.int64]:
+    """As a contiguous array of int64."""
+    return np.ascontiguousarray(np.array(values, dtype=np.int64))
+
+
+def coefficients(polynomials: Sequence[Polynomial], omega: Array) -> Array:
+    """The coefficients of all terms in each replicate, shape=(R, T), on one common scale, which no sign depends on.
+
+    Where only counts enter they are whole numbers, so that a count that just meets a decimal threshold does meet it.
+    """
+    values = [value for p in polynomials for value in p.terms.values()]
+    powers = np.array([power for p in polynomials for _, power in p.terms])
+    if not values:
+        return np.zeros((len(omega), 0))
+    common = math.lcm(*(v.denominator for v in values))
+    if common * max(abs(v) for v in values) < _EXACT_INTEGER:
+        values = [v * common for v in values]
+    powers = powers - powers.max()
+    scaled = np.array([float(v) for v in values]) * omega[:, None] ** powers
+    # a power of two takes the largest coefficient to 1 and changes no other bit
+    _, exponent = np.frexp(np.abs(scaled).max(axis=1))
+    return np.asarray(scaled if not powers.any() else np.ldexp(scaled, -exponent[:, None]))
+
+
+def judge_on_grid(
+    system: System, requirement: Requirement, counts: NDArray[np.int64], time_s: Array, omega: Array
+) -> Outcomes:
+    """Outcomes of one requirement as the sampled states show them, each taken to last until the next sample.
+
+    counts : (R, G, N); time_s : (G,); omega : (R,). Arrays of shape (R, 1).
+    """
+    start, end = requirement.span_s(float(time_s[-1]))
+    omega = np.asarray(omega, dtype=float)[:, None]
+    if requirement.averaged:
+        edge = _window_edges(requirement, start, end)
+        mean = _Means(system, counts, time_s, omega, edge)
+        truth = _truth(requirement.must.root, mean.difference)
+        begin, moment = edge[:-1], edge[1:]
+    else:
+        inside = (time_s <= end * (1 + _ROUNDING)) & (np.append(time_s[1:], np.inf) > start)
+        truth = _truth(requirement.must.root, lambda c: extended(system, _minus(c), counts[:, inside], omega))
+        begin = np.maximum(time_s[inside], start)
+        moment = begin
+        edge = np.append(begin, end)
+    spans = np.diff(edge)
+    R = len(truth)
+    first = {}
+    for value in (True, False):
+        hit = truth == value
+        first[value] = np.where(hit.any(axis=1), moment[hit.argmax(axis=1)], np.nan)[:, None]
+    every = {THROUGHOUT: np.all(truth, axis=1), ONCE: np.any(truth, axis=1), AT_END: truth[:, -1]}
+    return Outcomes(
+        np.array(every[WHEN[requirement.when]], dtype=np.int8)[:, None],
+        first[False],
+        first[True],
+        (truth * spans).sum(axis=1)[:, None],
+        np.full((R, 1), end),
+    )
+
+
+def _window_edges(requirement: Requirement, start: float, end: float) -> Array:
+    window = requirement.averaged_over_s or end - start
+    windows = max(1, int((end - start) / window * (1 + _ROUNDING)))
+    return np.append(start + window * np.arange(windows), end)
+
+
+def _minus(comparison: Comparison) -> Operation:
+    return Operation("-", comparison.left, comparison.right, comparison.left.dimension)
+
+
+def _truth(root: Truth, difference) -> NDArray[np.bool_]:  # type: ignore[no-untyped-def]
+    """Truth of a condition; difference : comparison -> left - right. What is undefined meets nothing, under "not" too."""
+
+    def walk(node: Truth, wanted: bool) -> NDArray[np.bool_]:
+        if isinstance(node, Negation):
+            return walk(node.inner, not wanted)
+        if isinstance(node, Junction):
+            left, right = walk(node.left, wanted), walk(node.right, wanted)
+            return left & right if (node.operator == "and") == wanted else left | right
+        value = difference(node)
+        with np.errstate(invalid="ignore"):
+            met = {"<": value < 0, "<=": value <= 0, ">": value > 0, ">=": value >= 0}[node.operator]
+        return np.asarray(met if wanted else ~met & ~np.isnan(value))
+
+    return walk(root, True)
+
+
+class _Means:
+    """Time averages of sampled values over windows, each value lasting until the next sample."""
+
+    def __init__(self, system: System, counts: NDArray[np.int64], time_s: Array, omega: Array, edge: Array) -> None:
+        self.system, self.counts, self.omega = system, counts, omega
+        # overlap of each sampling interval with each window, s, shape=(G, W)
+        ends = np.append(time_s[1:], time_s[-1])
+        low = np.maximum(time_s[:, None], edge[:-1])
+        self.overlap = np.maximum(np.minimum(ends[:, None], edge[1:]) - low, 0.0)
+
+    def difference(self, comparison: Comparison) -> Array:
+        """Mean of left - right over each window, infinite or NaN where a value in it is, shape=(R, W)."""
+        values = extended(self.system, _minus(comparison), self.counts, self.omega)
+        total = np.where(np.isfinite(values), values, 0.0) @ self.overlap
+        for mark in (np.inf, -np.inf, np.nan):
+            there = np.isnan(values) if np.isnan(mark) else values == mark
+            total = np.where(there @ self.overlap > 0, total + mark, total)
+        return np.asarray(total / self.overlap.sum(axis=0))
