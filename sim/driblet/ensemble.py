@@ -22,10 +22,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.errors import InputError, InterruptedRunError, Problem, one_problem
-from driblet.loading import prepare
+from driblet.loading import additions_of, prepare
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.readouts import evaluate
 from driblet.results import Run
+from driblet.segments import begin, keep, segments
 from driblet.store import FORMAT, Block, Layout, RunWriter
 from driblet.system import RunSettings, System
 from driblet.system.tables import ENGINES, LARGEST_SEED, LONGEST_TIME, MOST_REPLICATES, SHORTEST_TIME
@@ -130,6 +131,7 @@ def run(
             return existing
         existing.close()
         raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
+    segments(system, times)  # before anything is written
     writer = RunWriter(path, layout, resume=resume, force=force)
     file = _Ensemble(system, settings, layout, writer, threads or os.cpu_count() or 1, on_progress, key).run()
     return Run(file) if path is None else Run(path)
@@ -189,6 +191,7 @@ class _Unit:
     """One unit of replicates while it is simulated; the arrays are read by the main thread for progress only."""
 
     next_sample: NDArray[np.int64] | None = None
+    before: int = 0  # samples of the segments that are done
     events: int = 0
 
 
@@ -206,9 +209,11 @@ class _Ensemble:
         self.system, self.settings, self.layout, self.writer = system, settings, layout, writer
         self.threads, self.on_progress, self.key = threads, on_progress, key
         self.network = Network.of(system)
+        self.segments = segments(system, layout.time_s)
         self.stop = threading.Event()
         self.running: dict[int, _Unit] = {}
         self.events = 0
+        self.fraction = 0.0
         self.started = time.monotonic()
 
     def run(self) -> Any:
@@ -278,10 +283,15 @@ class _Ensemble:
             return
         grid = len(self.layout.time_s)
         units = list(self.running.values())
-        partial = sum(float(u.next_sample.sum()) / grid for u in units if u.next_sample is not None)
+        partial = sum(
+            min(grid * len(u.next_sample), float(u.next_sample.sum()) + u.before * len(u.next_sample)) / grid
+            for u in units
+            if u.next_sample is not None
+        )
         events = self.events + sum(u.events for u in units)
-        fraction = min(1.0, (finished + partial) / self.layout.replicates)
-        self.on_progress(Progress(fraction, finished, self.layout.replicates, events, time.monotonic() - self.started))
+        # a unit that has just passed an addition can seem to be behind for a moment
+        self.fraction = max(self.fraction, min(1.0, (finished + partial) / self.layout.replicates))
+        self.on_progress(Progress(self.fraction, finished, self.layout.replicates, events, time.monotonic() - self.started))
 
     def _simulate(self, unit: int) -> Block:
         """One unit from start to end, in a worker thread."""
@@ -295,10 +305,16 @@ class _Ensemble:
         state = new_state(start.counts, start.stream, len(self.network.channels))
         samples = new_samples(self.layout.time_s, len(rows), len(self.network.species), len(self.network.channels))
         watched.next_sample = state.next_sample
-        while (state.reason == RUNNING).any():
-            if self.stop.is_set():
-                raise InterruptedRunError("interrupted")
-            watched.events += int(advance(self.network.arrays, rates, state, samples, _BUDGET))
+        added = additions_of(self.system, self.settings.seed, rows, start.omega, self.key)
+        columns = [self.network.species.index(a.species) for a in self.system.additions]
+        for segment in self.segments:
+            part = begin(segment, state, samples, added, columns)
+            while (state.reason == RUNNING).any():
+                if self.stop.is_set():
+                    raise InterruptedRunError("interrupted")
+                watched.events += int(advance(self.network.arrays, rates, state, part, _BUDGET))
+            keep(segment, part, samples)
+            watched.before = segment.grid.stop
         if (state.reason == COUNT_OVERFLOW).any():
             r = int(np.flatnonzero(state.reason == COUNT_OVERFLOW)[0])
             name = self.network.species[int(np.argmax(state.counts[r, :-1]))]

@@ -19,7 +19,7 @@ from driblet.system.model import Compartment, System
 
 Array = NDArray[np.float64]
 _MANY = 1e9
-_PREPARATION = 1  # the spawn key that sets a replicate's preparation apart from its reaction events
+_PREPARATION, _ADDITIONS = 1, 2  # spawn keys that set these draws of a replicate apart from its reaction events
 
 
 @dataclass(frozen=True)
@@ -57,6 +57,22 @@ def prepare(system: System, seed: int, replicates: Sequence[int], key: int = 0) 
         mean = one.concentration_M * omega if one.concentration_M is not None else np.full(len(omega), one.copies)
         counts[:, i] = poisson_quantile(uniform[:, 1 + i], mean) if one.loading == "poisson" else np.rint(mean)
     return Preparation(omega, counts, streams)
+
+
+def additions_of(system: System, seed: int, replicates: Sequence[int], omega: Array, key: int = 0) -> Array:
+    """Copies that each addition brings to the given replicates, shape=(R, additions); omega as in Preparation."""
+    count = len(system.additions)
+    out = np.zeros((len(replicates), count))
+    if not count:
+        return out
+    words = [
+        np.random.SeedSequence(seed, spawn_key=(key, r, _ADDITIONS)).generate_state(count, np.uint64) for r in replicates
+    ]
+    uniform = ((np.array(words, dtype=np.uint64) >> np.uint64(12)).astype(float) + 0.5) * 2.0**-52
+    for i, one in enumerate(system.additions):
+        mean = one.concentration_M * omega if one.concentration_M is not None else np.full(len(omega), one.copies)
+        out[:, i] = poisson_quantile(uniform[:, i], mean) if one.loading == "poisson" else np.rint(mean)
+    return out
 
 
 def volumes(compartment: Compartment, uniform: Array) -> Array:
