@@ -7,10 +7,8 @@ magnesium nor protons. Concentrations in mol/L.
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import replace
-
-from scipy.optimize import brentq
 
 from driblet.energetics.conditions import (
     REFERENCE_TEMPERATURE,
@@ -29,6 +27,12 @@ Load = Sequence[tuple[Reactant, float]]
 
 class CannotBeMetError(ValueError):
     """No free magnesium or pH satisfies what is asked; the text says why."""
+
+
+def _root(function: Callable[[float], float], low: float, high: float, tolerance: float) -> float:
+    from scipy.optimize import brentq  # 0.1 s to import, and most files never come here
+
+    return float(brentq(function, low, high, xtol=tolerance))
 
 
 def total_magnesium(load: Load, conditions: Conditions, magnesium_ion: IonicSpecies) -> float:
@@ -52,7 +56,7 @@ def solved_pMg(total: float, load: Load, conditions: Conditions, magnesium_ion: 
         return HIGHEST_PMG
     if surplus(LOWEST_PMG) < 0:
         raise CannotBeMetError(f"{total:g} mol/L is more magnesium than any solution holds")
-    return float(brentq(surplus, LOWEST_PMG, HIGHEST_PMG, xtol=1e-12))
+    return _root(surplus, LOWEST_PMG, HIGHEST_PMG, 1e-12)
 
 
 def check_ionic_strength(pMg: float, total: float, ionic_strength: float) -> None:
@@ -118,4 +122,4 @@ def pH_after(before: Load, after: Load, buffer: Buffer, conditions: Conditions, 
 
     if surplus(0.0) < 0 or surplus(14.0) > 0:
         raise CannotBeMetError("the buffer is overrun: the pH would leave the range 0 to 14")
-    return float(brentq(surplus, 0.0, 14.0, xtol=1e-9))
+    return _root(surplus, 0.0, 14.0, 1e-9)

@@ -102,6 +102,7 @@ class Reference:
         self.magnesium_ion: IonicSpecies = magnesium
         self.reactants = {r.key: r for r in completed(reactants, magnesium.enthalpy)}
         self.measured, self.buffers, self.ambiguous = tuple(measured), dict(buffers or {}), dict(ambiguous or {})
+        self._unclear = {normal_form(name) for name in self.ambiguous}
         self._by_name: dict[str, Reactant] = {}
         for reactant in self.reactants.values():
             for name in (reactant.key, reactant.name, *reactant.aliases):
@@ -126,7 +127,7 @@ class Reference:
     def find(self, name: str) -> Reactant | None:
         """The reactant of a name or alias; case, underscores and a compartment in brackets do not matter."""
         plain = normal_form(name)
-        return None if plain in map(normal_form, self.ambiguous) else self._by_name.get(plain)
+        return None if plain in self._unclear else self._by_name.get(plain)
 
     def buffer(self, name: str) -> BufferEntry | None:
         """The buffer of that name, or None."""

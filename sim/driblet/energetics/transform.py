@@ -6,7 +6,8 @@ At fixed pH and pMg the species of one reactant (its pseudoisomers) stay in equi
 
 dfG_j(T) = dfG_j T/T0 + dfH_j (1 - T/T0) with T0 = 298.15 K (van 't Hoff), g = -RT ln gamma of a singly charged ion, mu_H and
 mu_Mg the potentials that pH and pMg fix. Source: Alberty, Thermodynamics of Biochemical Reactions (2003), chapter 4;
-for magnesium Alberty, J. Phys. Chem. B 107:12324 (2003). All energies in kJ/mol, c0 = 1 mol/L.
+for magnesium Alberty, J. Phys. Chem. B 107:12324 (2003); names and conventions: Recommendations for nomenclature and tables
+in biochemical thermodynamics (IUPAC-IUBMB 1994). All energies in kJ/mol, c0 = 1 mol/L.
 """
 
 from __future__ import annotations
