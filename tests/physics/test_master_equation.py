@@ -8,6 +8,7 @@ from scipy import linalg, stats
 
 import driblet
 from driblet.drive import emergent_affinities, is_driven, runnable
+from driblet.energetics.equilibrium import NoEquilibriumError
 from driblet.errors import CannotAnswerError
 from driblet.network import Network
 from driblet_analysis.references.count_equilibrium import count_law
@@ -92,6 +93,9 @@ def test_relaxation_times_in_closed_form() -> None:
     assert relaxation_time(supply) == pytest.approx(4.0, rel=1e-12)
     idle = system({"A": '"0 copies"', "B": '"0 copies"'}, {"r": 'equation = "A <=> B", K = 2, forward = "1 /s"'})
     assert relaxation_time(idle) is None
+    leak = system({"A": '"5 copies"'}, {"r": 'equation = "A -> nothing", one_way = "a test", forward = "1 /s"'})
+    with pytest.raises(NoEquilibriumError, match="one-way"):
+        relaxation_time(leak)
 
 
 def test_relaxation_over_twenty_powers_of_ten() -> None:

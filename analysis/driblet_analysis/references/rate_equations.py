@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from driblet.drive import ln_constants, runnable
-from driblet.energetics.equilibrium import equilibrium_composition
+from driblet.energetics.equilibrium import NoEquilibriumError, equilibrium_composition
 from driblet.network import Network
 from driblet.system import System
 from driblet_analysis.references.state_space import channel_matrices
@@ -72,7 +72,8 @@ def relaxation_times(system: System) -> Array:
 
     One per independent reaction that can run; empty when none can. At detailed balance the Jacobian is similar to
     -M M^T with M = C^(-1/2) S V^(1/2) (C concentrations, V one-way fluxes), so the rates are squared singular values, which
-    keeps rates accurate that lie many powers of ten below the fastest. Raises NoEquilibriumError for a driven system.
+    keeps rates accurate that lie many powers of ten below the fastest.
+    Raises NoEquilibriumError for a driven system and for one-way reactions.
     """
     network = Network.of(system)
     active = runnable(system)
@@ -80,10 +81,13 @@ def relaxation_times(system: System) -> Array:
     touched = (S != 0).any(axis=1)
     if not touched.any():
         return np.zeros(0)
+    ln_K = ln_constants(system)[active]
+    if np.isnan(ln_K).any():
+        raise NoEquilibriumError("one-way reactions run, so there is no equilibrium to relax to")
     S = S[touched]
     omega = system.compartment.omega
     load = np.array([s.mean_copies(omega) for s in system.free_species]) / omega
-    load[touched] = equilibrium_composition(S, ln_constants(system)[active], load[touched])
+    load[touched] = equilibrium_composition(S, ln_K, load[touched])
     rates = network.rates(np.array([omega]))[0]
     need, _ = channel_matrices(network)
     forward = network.channel_index(1)[active]

@@ -42,8 +42,8 @@ def enumerate_class(
     need, change = channel_matrices(network)
     if (start > top).any():
         raise ValueError("the initial counts lie above the caps")
-    states = _explore(start, need, change, top, np.zeros(len(start)), np.inf, 0, limit)
-    return states if len(states) else None
+    states, count = _explore(start, need, change, top, np.zeros(len(start)), np.inf, 0, limit)
+    return states[:count].copy() if count else None
 
 
 def enumerate_mass(network: Network, initial_counts: ArrayLike, ln_mean: Array, limit: int = LIMIT) -> States | None:
@@ -55,9 +55,10 @@ def enumerate_mass(network: Network, initial_counts: ArrayLike, ln_mean: Array, 
     top = np.full(len(network.species), _NO_CAP)
     start = _climb(_whole(initial_counts), need, change, ln_mean)
     while True:
-        states = _explore(start, need, change, top, ln_mean, _DEPTH, _SLACK, limit)
-        if not len(states):
+        states, count = _explore(start, need, change, top, ln_mean, _DEPTH, _SLACK, limit)
+        if not count:
             return None
+        states = states[:count].copy()
         # the climb can end on a local peak; then the search has passed a higher one
         weights = poisson_log_weights(states, ln_mean)
         best = int(np.argmax(weights))
@@ -163,6 +164,12 @@ def _enabled(state, need, channel):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE)
+def _copy(row, into):  # type: ignore[no-untyped-def]
+    for i in range(row.size):  # an assignment of whole rows takes numba seconds more to compile
+        into[i] = row[i]
+
+
+@njit(nogil=True, cache=CACHE)
 def _log_weight(row, ln_mean):  # type: ignore[no-untyped-def]
     value = 0.0
     for i in range(row.size):
@@ -176,7 +183,7 @@ def _explore(start, need, change, caps, ln_mean, depth, slack, limit):  # type: 
     channels, species = need.shape
     states = np.empty((64, species), dtype=np.int64)
     below = np.zeros(64, dtype=np.int64)
-    states[0] = start
+    _copy(start, states[0])
     table = _table(states, 1, 256)
     threshold = _log_weight(start, ln_mean) - depth
     row = np.empty(species, dtype=np.int64)
@@ -201,19 +208,21 @@ def _explore(start, need, change, caps, ln_mean, depth, slack, limit):  # type: 
                 if steps > slack:
                     continue
             if count == limit:
-                return states[:0].copy()
+                return states, 0
             if count == states.shape[0]:
                 more, more_below = np.empty((2 * count, species), dtype=np.int64), np.zeros(2 * count, dtype=np.int64)
-                more[:count], more_below[:count] = states, below
+                for known in range(count):
+                    _copy(states[known], more[known])
+                    more_below[known] = below[known]
                 states, below = more, more_below
                 table = _table(states, count, 8 * count)
                 slot = _slot(table, states, row)
-            states[count] = row
+            _copy(row, states[count])
             below[count] = steps
             table[slot] = count
             count += 1
         k += 1
-    return states[:count].copy()
+    return states, count
 
 
 @njit(nogil=True, cache=CACHE)
