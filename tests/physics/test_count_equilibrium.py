@@ -194,6 +194,19 @@ def test_a_class_too_large_is_none() -> None:
     assert count_law(one, [400] * 6, 1.0, limit=5_000) is None
 
 
+def test_a_large_finite_class_is_cut_to_its_mass() -> None:
+    """50,000 isomers, far from equilibrium at first, where 4,000 states will do."""
+    one = isomerisation()
+    law = count_law(one, [50_000, 0], 1.0, limit=4_000)
+    assert law is not None
+    assert not law.complete
+    K = one.reactions[0].K
+    support, pmf = law.marginal(1)
+    expected = stats.binom.pmf(support, 50_000, K / (1 + K))
+    np.testing.assert_allclose(pmf, expected, rtol=1e-7)
+    assert expected.sum() == pytest.approx(1, abs=1e-12)
+
+
 def test_moments_agree_with_the_stationary_master_equation() -> None:
     one = dimerisation()
     law = count_law(one, [12, 0], 1.0)
