@@ -34,12 +34,23 @@ SERIES = ("counts", "firings_forward", "firings_backward")
 
 
 @dataclass(frozen=True)
+class PerReplicate:
+    """An array of any trailing shape per replicate: its path in the file, its shape without replicates, dtype and unit."""
+
+    path: str
+    shape: tuple[int, ...]
+    dtype: Any
+    unit: str
+
+
+@dataclass(frozen=True)
 class Layout:
     """What a run file holds besides numbers.
 
     Attributes: species, reactions, readouts : names; readout_units; time_s : (G,); replicates : planned number; unit : how
     many replicates make one row of chunks; identity : hash that two files of the same run share; provenance : strings and
-    numbers; system_text : the system file.
+    numbers; system_text : the system file; per_replicate : further arrays of each replicate; fixed : arrays that all
+    replicates share, path -> values.
     """
 
     species: tuple[str, ...]
@@ -52,6 +63,8 @@ class Layout:
     identity: str
     system_text: str
     provenance: Mapping[str, Any] = field(default_factory=dict)
+    per_replicate: tuple[PerReplicate, ...] = ()
+    fixed: Mapping[str, NDArray[Any]] = field(default_factory=dict)
 
     @property
     def units(self) -> int:
@@ -63,7 +76,8 @@ class Layout:
 class Block:
     """Finished replicates of one unit.
 
-    replicate : int64, (R,); volume_L : (R,); reason, events : int64, (R,); series : name -> (R, G, ...) arrays.
+    replicate : int64, (R,); volume_L : (R,); reason, events : int64, (R,); series : name -> (R, G, ...) arrays;
+    values : path -> (R, ...) arrays, the per_replicate ones of the layout.
     """
 
     unit: int
@@ -72,11 +86,12 @@ class Block:
     reason: NDArray[np.int64]
     events: NDArray[np.int64]
     series: Mapping[str, NDArray[Any]]
+    values: Mapping[str, NDArray[Any]] = field(default_factory=dict)
 
     @property
     def nbytes(self) -> int:
-        """Size of the series in memory."""
-        return sum(a.nbytes for a in self.series.values())
+        """Size of the arrays in memory."""
+        return sum(a.nbytes for a in (*self.series.values(), *self.values.values()))
 
 
 def parts_folder(path: Path) -> Path:
@@ -258,6 +273,8 @@ def _frame(file: h5py.File, layout: Layout, replicate: NDArray[np.int64], units:
     group.create_dataset("units", data=np.array(units, dtype=np.int64))
     group.attrs["readout_units"] = json.dumps(dict(zip(layout.readouts, layout.readout_units, strict=True)))
     group.attrs["replicates_per_unit"] = layout.unit
+    for path, values in layout.fixed.items():
+        file.create_dataset(path, data=values)
     for name, value in layout.provenance.items():
         group.attrs[name] = value
 
@@ -299,6 +316,18 @@ def _create_series(file: h5py.File, layout: Layout, rows: int) -> None:
         dataset = file.create_dataset(name, shape=(rows,), dtype=dtype)
         dataset.attrs["units"] = unit
         dataset.dims[0].attach_scale(file["replicate"])
+    for one in layout.per_replicate:
+        plain = 0 in one.shape or not rows
+        dataset = file.create_dataset(
+            one.path,
+            shape=(rows, *one.shape),
+            dtype=one.dtype,
+            chunks=None if plain else (min(rows, layout.unit), *one.shape),
+            compression=None if plain else "gzip",
+            compression_opts=None if plain else 1,
+            shuffle=not plain,
+        )
+        dataset.attrs["units"] = one.unit
 
 
 def _fill(file: h5py.File, layout: Layout, blocks: Sequence[Block]) -> None:
@@ -315,6 +344,9 @@ def _fill(file: h5py.File, layout: Layout, blocks: Sequence[Block]) -> None:
                 file[name][rows] = values
         file["volume"][rows] = block.volume_L
         file["end_reason"][rows] = block.reason
+        for path, array in block.values.items():
+            if array.size:
+                file[path][rows] = array
         file["events"][rows] = block.events
 
 
@@ -324,8 +356,9 @@ def _merge(file: h5py.File, layout: Layout, shards: Sequence[Path]) -> None:
     for shard in shards:
         with open_file(shard) as part:
             replicate = part["replicate"][:]
-            for name in ("volume", "end_reason", "events"):
-                file[name][replicate] = part[name][:]
+            for name in ("volume", "end_reason", "events", *(one.path for one in layout.per_replicate)):
+                if file[name].size:
+                    file[name][replicate] = part[name][:]
             for row, unit in enumerate(part["provenance/units"][:]):
                 for name in _series_shapes(layout):
                     _copy_chunks(part[name], file[name], row * layout.unit, int(unit) * layout.unit)
