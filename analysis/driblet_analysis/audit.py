@@ -19,6 +19,7 @@ from driblet.system import Reaction, System
 from driblet.system.build import stoichiometric_matrix
 from driblet_analysis.course import expected_course
 from driblet_analysis.energy_conditions import buffer_facts, condition_warnings, magnesium_facts, sensitivity_facts
+from driblet_analysis.enzyme_facts import catalysed_rates, disagreements, enzyme_facts
 from driblet_analysis.references.count_equilibrium import count_law
 
 EVENTS_PER_SECOND_AND_CORE = 3e7  # of the exact engine on a current core; for the estimate alone
@@ -42,7 +43,9 @@ def audit_facts(system: System) -> dict[str, Any]:
     macroscopic = equilibrium["macroscopic"] if equilibrium else None
     there = macroscopic and {name: n / omega for name, n in macroscopic.items()}
     magnesium, buffer = magnesium_facts(system, there), buffer_facts(system, there)
+    enzymes, catalysed = enzyme_facts(system), catalysed_rates(system)
     warnings = list(system.warnings)
+    warnings += disagreements(enzymes)
     warnings += condition_warnings(magnesium, buffer)
     warnings += _warnings(system, network, copies, course)
     return {
@@ -71,12 +74,18 @@ def audit_facts(system: System) -> dict[str, Any]:
                 "loading": None if s.held else s.loading,
             }
             for s in system.species
+            if s.enzyme is None
         ],
-        "reactions": [_reaction_facts(system, network, r, copies, rates) for r in range(len(system.reactions))],
-        "conservation_laws": _conservation(network, copies),
+        "reactions": [_reaction_facts(system, network, r, copies, rates, catalysed) for r in system.stated],
+        "enzymes": enzymes,
+        "additions": [
+            {"name": a.name, "at_s": a.at_s, "species": a.species, "mean_copies": a.mean_copies(omega)}
+            for a in system.additions
+        ],
+        "conservation_laws": _conservation(system, network, copies),
         "cycles": _cycle_facts(system),
         "emergent_cycles": [
-            {"reactions": _weights(system, cycle.reactions), "affinity_kJ_per_mol": cycle.affinity_kJ_per_mol}
+            {"reactions": _turned_over(system, cycle.reactions), "affinity_kJ_per_mol": cycle.affinity_kJ_per_mol}
             for cycle in emergent_affinities(system)
         ],
         "driven": is_driven(system),
@@ -88,10 +97,19 @@ def audit_facts(system: System) -> dict[str, Any]:
     }
 
 
-def _reaction_facts(system: System, network: Network, r: int, copies: Array, rates: Array) -> dict[str, Any]:
-    reaction = system.reactions[r]
+def _reaction_facts(
+    system: System,
+    network: Network,
+    reaction: Reaction,
+    copies: Array,
+    rates: Array,
+    catalysed: dict[str, dict[str, float]],
+) -> dict[str, Any]:
+    """Facts about a reaction of the file; constants of its own are None where enzymes alone carry it."""
     propensities = network.propensities(np.round(copies), rates)
-    forward, backward = (network.channel_index(d)[r] for d in (FORWARD, BACKWARD))
+    own = reaction.name in network.reactions
+    r = network.reactions.index(reaction.name) if own else 0
+    forward, backward = (network.channel_index(d)[r] if own else -1 for d in (FORWARD, BACKWARD))
     energy, reason = _initial_energy(system, reaction)
     order_left = sum(n for _, n in reaction.equation.reactants)
     order_right = sum(n for _, n in reaction.equation.products)
@@ -104,17 +122,18 @@ def _reaction_facts(system: System, network: Network, r: int, copies: Array, rat
         "dG_kJ_per_mol": energy,
         "dG_reason": reason,
         "direction": _direction(system, reaction, energy),
-        "forward_constant": reaction.forward,
+        "forward_constant": reaction.forward if own else None,
         "forward_unit": power_unit(1 - order_left, 1),
-        "backward_constant": reaction.backward,
+        "backward_constant": reaction.backward if own else None,
         "backward_unit": power_unit(1 - order_right, 1),
-        "forward_propensity_per_s": float(propensities[forward]),
+        "forward_propensity_per_s": float(propensities[forward]) if forward >= 0 else None,
         "backward_propensity_per_s": float(propensities[backward]) if backward >= 0 else None,
         "energy_from": reaction.energy_from,
         "energy_note": reaction.energy_note,
         "energy_sd_kJ_per_mol": reaction.energy_sd_kJ_per_mol,
         "sensitivity_kJ_per_mol": sensitivity_facts(system, reaction),
         "one_way": reaction.one_way,
+        "by_enzymes_per_s": catalysed.get(reaction.name, {}),
     }
 
 
@@ -149,22 +168,34 @@ def _direction(system: System, reaction: Reaction, energy: float | None) -> str:
     return {(True, False): "forward", (False, True): "backward"}.get((can_forward, can_backward), "neither can start")
 
 
-def _conservation(network: Network, copies: Array) -> list[dict[str, Any]]:
-    return [
-        {
-            "weights": {network.species[i]: int(law[i]) for i in np.flatnonzero(law)},
-            "total_copies": float(law @ copies),
-        }
-        for law in conservation_laws(network.stoichiometry)
-    ]
+def _conservation(system: System, network: Network, copies: Array) -> list[dict[str, Any]]:
+    """Conserved sums; what enzymes hold counts with the species held, and an enzyme with all of its states."""
+    laws = []
+    for law in conservation_laws(network.stoichiometry):
+        weights = {name: int(w) for name, w in zip(network.species, law, strict=True) if w}
+        for species in system.free_species:
+            if species.enzyme is not None and species.name != species.enzyme:
+                implied = weights.get(species.enzyme, 0)
+                implied += sum(number * weights.get(name, 0) for name, number in species.holds)
+                left = weights.pop(species.name, 0) - implied
+                if left:
+                    weights[species.name] = left
+        laws.append({"weights": weights, "total_copies": float(law @ copies)})
+    return laws
 
 
-def _weights(system: System, vector: NDArray[np.int64]) -> dict[str, int]:
-    return {r.name: int(w) for r, w in zip(system.reactions, vector, strict=True) if w}
+def _turned_over(system: System, vector: NDArray[np.int64]) -> dict[str, int]:
+    """A cycle in reactions of the file: what an enzyme's steps turn over, and the others as they are."""
+    weights = {r.name: int(w) for r, w in zip(system.reactions, vector, strict=True) if w}
+    out = {r.name: weights.get(r.name, 0) for r in system.stated}
+    for enzyme in system.enzymes:
+        for activity in enzyme.activities:
+            out[activity.reaction] += activity.direction * weights.get(enzyme.steps[activity.counted].name, 0)
+    return {name: weight for name, weight in out.items() if weight}
 
 
 def _cycle_facts(system: System) -> list[dict[str, Any]]:
-    reversible = [r for r in system.reactions if r.dG0_kJ_per_mol is not None]
+    reversible = [r for r in system.stated if r.dG0_kJ_per_mol is not None]
     matrix = stoichiometric_matrix([s.name for s in system.species], reversible)
     energies = np.array([r.dG0_kJ_per_mol for r in reversible], dtype=float)
     return [
@@ -183,7 +214,8 @@ def _equilibrium(system: System, network: Network) -> dict[str, Any] | None:
         return {"macroscopic": None, "finite_count_mean": None, "reason": why}
     omega = system.compartment.omega
     names = network.species
-    concentrations = np.array([_concentration(system, name) for name in names])
+    added = np.array([sum(a.mean_copies(omega) for a in system.additions if a.species == name) for name in names])
+    concentrations = np.array([_concentration(system, name) for name in names]) + added / omega
     active = runnable(system)
     macroscopic = concentrations.copy()
     touched = np.abs(network.stoichiometry[:, active]).sum(axis=1) > 0
@@ -199,7 +231,7 @@ def _equilibrium(system: System, network: Network) -> dict[str, Any] | None:
         "finite_count_sd": None,
         "reason": None,
     }
-    load = np.array([round(s.mean_copies(omega)) for s in system.free_species], dtype=np.int64)
+    load = np.array([round(s.mean_copies(omega)) for s in system.free_species]) + np.rint(added)
     try:
         law = count_law(system, load, omega)
     except CannotAnswerError as error:
@@ -216,7 +248,19 @@ def _course(system: System, network: Network, copies: Array) -> dict[str, Any] |
     duration = system.settings.duration_s
     if not duration > 0:
         return None
-    firings, final = expected_course(network, copies, system.compartment.omega, duration)
+    omega = system.compartment.omega
+    starts = [0.0, *(a.at_s for a in system.additions if a.at_s < duration)]
+    firings, final = np.zeros(len(network.channels)), copies
+    for k, start in enumerate(starts):
+        end = starts[k + 1] if k + 1 < len(starts) else duration
+        if k:
+            addition = system.additions[k - 1]
+            final = final + np.array(
+                [addition.mean_copies(omega) * (name == addition.species) for name in network.species]
+            )
+        if end > start:
+            more, final = expected_course(network, final, omega, end - start)
+            firings = firings + more
     return {"firings": firings, "final": final, "duration_s": duration}
 
 
@@ -246,15 +290,18 @@ def _warnings(system: System, network: Network, copies: Array, course: dict[str,
             found.append(f"{name} takes part in no reaction")
         elif not stoichiometry[i].any():
             found.append(f"{name} is only a catalyst: its count never changes")
-    for reaction, can_run in zip(system.reactions, runnable(system), strict=True):
-        if not can_run:
+    carried = {e.steps[a.counted].name: a.reaction for e in system.enzymes for a in e.activities}
+    can_run = {carried.get(r.name, r.name) for r, runs in zip(system.reactions, runnable(system), strict=True) if runs}
+    for reaction in system.stated:
+        if reaction.name not in can_run:
             found.append(f"{reaction.name} can never run from this load: something it needs is never made")
     found += _rounding(system)
     final = copies if course is None else course["final"]
+    stated = {s.name for s in system.species if s.enzyme is None}
     few = [
         name
         for i, name in enumerate(network.species)
-        if i in used and 0 < max(copies[i], final[i]) < FEW_MOLECULES and stoichiometry[i].any()
+        if i in used and 0 < max(copies[i], final[i]) < FEW_MOLECULES and stoichiometry[i].any() and name in stated
     ]
     if few:
         found.append(
@@ -284,6 +331,8 @@ def _firing_warnings(system: System, network: Network, course: dict[str, Any]) -
     found = []
     backward = network.channel_index(BACKWARD)
     for r, reaction in enumerate(system.reactions):
+        if reaction.enzyme is not None:
+            continue
         total = float(firings[backward[r]]) * system.settings.replicates if backward[r] >= 0 else math.inf
         if total < 1 and runnable(system)[r]:
             found.append(

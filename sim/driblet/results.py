@@ -83,6 +83,29 @@ class Run:
         """Backward firings since time zero, int64, shape=(replicates, times, reactions)."""
         return self._read("firings_backward")
 
+    def turnovers(self, reaction: str, enzyme: str | None = None) -> NDArray[np.int64]:
+        """Net forward turnovers of a reaction since time zero, int64, shape=(replicates, times).
+
+        By its own rate and by every enzyme that catalyses it, or by one `enzyme` alone. Raises KeyError for unknown names.
+        """
+        system = self.system
+        system.reaction(reaction)
+        counted = [
+            (e.steps[a.counted].name, a.direction)
+            for e in system.enzymes
+            for a in e.activities
+            if a.reaction == reaction and enzyme in (None, e.name)
+        ]
+        if enzyme is None and reaction in self.reactions:
+            counted.append((reaction, 1))
+        if not counted:
+            raise KeyError(f"{enzyme!r} is no enzyme that catalyses {reaction}")
+        total = np.zeros(self.firings_forward.shape[:2], dtype=np.int64)
+        for name, direction in counted:
+            r = self.reactions.index(name)
+            total += direction * (self.firings_forward[:, :, r] - self.firings_backward[:, :, r])
+        return total
+
     @cached_property
     def volume_L(self) -> NDArray[np.float64]:
         """Inner volume of each compartment, L, shape=(replicates,)."""

@@ -63,6 +63,8 @@ def begin(
     state.next_sample[goes_on] = 0
     state.reason[goes_on] = RUNNING
     times = samples.time[segment.grid]
+    if len(times) == len(samples.time):
+        return samples
     if not len(times) or times[-1] != segment.end_s:
         times = np.append(times, segment.end_s)
     part = new_samples(times, len(goes_on), samples.counts.shape[2], samples.firings.shape[2])
@@ -73,6 +75,8 @@ def begin(
 
 def keep(segment: Segment, part: Samples, samples: Samples) -> None:
     """Copy what a segment recorded into the samples of the whole run."""
+    if part is samples:
+        return
     length = segment.grid.stop - segment.grid.start
     samples.counts[:, segment.grid] = part.counts[:, :length]
     samples.firings[:, segment.grid] = part.firings[:, :length]

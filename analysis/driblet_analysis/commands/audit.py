@@ -8,6 +8,7 @@ from typing import Any
 import click
 
 from driblet.commands.screen import CAUTION, console, duration, number, print_json, table
+from driblet_analysis.commands.audit_enzymes import print_enzymes
 
 
 @click.command(short_help="Show what a system's energies imply before anything runs.")
@@ -36,9 +37,12 @@ def _print(facts: dict[str, Any]) -> None:
     out.print(_species(facts))
     out.print(_energies(facts))
     _print_conditions(out, facts)
-    out.print(_rates(facts))
+    if any(r["forward_constant"] is not None for r in facts["reactions"]):
+        out.print(_rates(facts))
+    print_enzymes(out, facts)
+    held = ", bound molecules included" if facts["enzymes"] else ""
     for law in facts["conservation_laws"]:
-        out.print(f"conserved: {_sum(law['weights'])} = {number(law['total_copies'])} copies", markup=False)
+        out.print(f"conserved{held}: {_sum(law['weights'])} = {number(law['total_copies'])} copies", markup=False)
     for cycle in facts["cycles"]:
         out.print(f"closed cycle: {_sum(cycle['reactions'])} = 0 kJ/mol", markup=False)
     for cycle in facts["emergent_cycles"]:
@@ -157,7 +161,11 @@ def _print_conditions(out: Any, facts: dict[str, Any]) -> None:
         names = [r["name"] for r in known]
         out.print(table("ΔG°′ if free magnesium were not held, kJ/mol", ["composition", "pMg", *names], rows))
     for row in facts["buffer"]["pH_after"] if facts["buffer"] else ():
-        end = f"pH {row['pH']:.2f} ({_signed(row['change'])})" if row["pH"] is not None else f"pH unknown: {row['reason']}"
+        end = (
+            f"pH {row['pH']:.2f} ({_signed(row['change'])})"
+            if row["pH"] is not None
+            else f"pH unknown: {row['reason']}"
+        )
         out.print(
             f"{_composition(row['after'])} in {facts['buffer']['concentration_M'] * 1e3:g} mM "
             f"{facts['buffer']['name']}: {end}",
@@ -178,6 +186,7 @@ def _energy_at(row: dict[str, Any], name: str) -> str:
 
 
 def _rates(facts: dict[str, Any]) -> Any:
+    own = [r for r in facts["reactions"] if r["forward_constant"] is not None]
     rows = [
         [
             r["name"],
@@ -188,7 +197,7 @@ def _rates(facts: dict[str, Any]) -> Any:
             number(r["forward_propensity_per_s"]),
             number(r["backward_propensity_per_s"]),
         ]
-        for r in facts["reactions"]
+        for r in own
     ]
     columns = ["reaction", "forward constant", "backward constant", "forward at start (/s)", "backward at start (/s)"]
     return table("rates", columns, rows)

@@ -42,6 +42,7 @@ from driblet.system.mechanisms.graph import (
 
 DISAGREEMENT = 0.01  # kJ/mol by which constants that are all given may miss closure, all of them being rounded
 FIRST_HALF = "_first_half"
+# In the words that say where a constant comes from, " *" marks a default.
 
 
 @dataclass(frozen=True)
@@ -120,9 +121,9 @@ class Assembler:
 
     def inhibit(self, species: str, Ki_M: float, on: float | None = None) -> None:
         """A competitive inhibitor: it binds the free enzyme and nothing else binds then."""
-        origin = "Ki and the on-rate given"
+        origin = "Ki and on-rate"
         if on is None:
-            on, origin = min(1e7, FASTEST / Ki_M), "Ki given; on-rate by default"
+            on, origin = min(1e7, FASTEST / Ki_M), "Ki; on-rate *"
         self._place(Link(FREE, (species,), binds=species), f"binds_{species}", _Constants(on, on * Ki_M, origin))
         self.inhibitors.append((species, Ki_M))
 
@@ -263,11 +264,11 @@ class Assembler:
         out = {chain.turnover: _Constants(found.forward, found.backward, "kcat and the energy")}
         last = len(chain.substrates) - 1
         for i, (link, pair) in enumerate(zip(chain.binding, found.substrates, strict=True)):
-            default = "off-rate = kcat by default" if i == last else "Kd = KM by default"
+            default = "off-rate = kcat *" if i == last else "Kd = KM *"
             stated = "Kd" if chain.substrates[i] in spec.Kd_M else default
             out[link] = _Constants(pair.on, pair.off, f"kcat/KM; {stated}")
         for link, pair in zip(chain.release, found.products, strict=True):
-            stated = "Kd" if link.releases in spec.Kd_M else "as weak as can be, by default"
+            stated = "Kd" if link.releases in spec.Kd_M else "as weak as allowed *"
             out[link] = _Constants(pair.off, pair.on, stated)
         return out
 
@@ -289,12 +290,12 @@ class Assembler:
         out = {graph.turnover: _Constants(found.forward, found.backward, "kcat and the energy")}
         factor = "" if spec.interaction == 1.0 else f"; interaction {spec.interaction:g}"
         for (alone, with_other), pair, name in zip(graph.binding, found.substrates, names, strict=True):
-            origin = f"kcat/KM; {'Kd' if name in spec.Kd_M else 'off-rate = kcat by default'}"
+            origin = f"kcat/KM; {'Kd' if name in spec.Kd_M else 'off-rate = kcat *'}"
             out[with_other] = _Constants(pair.on, pair.off, origin)
             off = min(FASTEST, pair.off / spec.interaction)
             out[alone] = _Constants(off * spec.interaction / pair.Kd, off, f"closed square{factor}")
         for (alone, with_other), pair, name in zip(graph.release, found.products, spec.products, strict=True):
-            stated = "Kd" if name in spec.Kd_M else "as weak as can be, by default"
+            stated = "Kd" if name in spec.Kd_M else "as weak as allowed *"
             out[with_other] = _Constants(pair.off, pair.on, stated)
             out[alone] = _Constants(pair.off, pair.on, "closed square")
         return out
@@ -330,7 +331,7 @@ class Assembler:
             if self._along(link) is not None:
                 continue
             forward, backward = spec.steps[key]
-            origin = "given" if forward is not None and backward is not None else "given; the rest from the energy"
+            origin = "given" if forward is not None and backward is not None else "given; rest from energy"
             if forward is None:
                 assert backward is not None
                 forward = backward * math.exp(-energy / self.RT)

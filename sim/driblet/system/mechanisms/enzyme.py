@@ -19,7 +19,8 @@ class EnzymeStep:
 
     Attributes: name : of the reaction in System.reactions that fires it; source, target : indices of states; binds,
     releases : the species its forward direction takes up or lets go, None for a turnover; forward, backward : /M/s in the
-    direction that binds, else /s; origin : where the constants come from, in words.
+    direction that binds, else /s; origin : where the constants come from, in words,
+    " *" after what is a default.
     """
 
     name: str
