@@ -295,5 +295,6 @@ class _Means:
         total = np.where(np.isfinite(values), values, 0.0) @ self.overlap
         for mark in (np.inf, -np.inf, np.nan):
             there = np.isnan(values) if np.isnan(mark) else values == mark
-            total = np.where(there @ self.overlap > 0, total + mark, total)
+            with np.errstate(invalid="ignore"):  # both infinities in one window: undefined
+                total = np.where(there @ self.overlap > 0, total + mark, total)
         return np.asarray(total / self.overlap.sum(axis=0))

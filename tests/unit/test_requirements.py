@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import bisect
 import itertools
 import math
 from dataclasses import dataclass
@@ -19,9 +20,19 @@ from driblet.network import Network
 from driblet.readouts import extended
 from driblet.requirements import CompiledRequirements, Outcomes, judge_on_grid
 from driblet.system import System
-from driblet.system.expressions import Comparison, Junction, Negation, Operation, Truth
+from driblet.system.expressions import (
+    Comparison,
+    ExpressionError,
+    Named,
+    Names,
+    Negation,
+    Operation,
+    Truth,
+    read_condition,
+    read_value,
+)
 from tests.reference import Step, simulate
-from tests.texts import MIXED, SMALL
+from tests.texts import SMALL, changed
 
 # the constants are odd, so that no energy is zero but for rounding, where logarithms and products may differ
 RELAY = """\
@@ -180,6 +191,9 @@ def plain(system: System, path: Path) -> list[tuple[bool, float, float, float]]:
                     stretches.append((low, high, truth(root, {key: v[k] for key, v in series.items()}) is True))
             firsts = [(a, v) for a, _, v in stretches]
         flags = [v for *_, v in stretches]
+        if requirement.when == "at end" and not requirement.averaged:
+            last = bisect.bisect_right(path.moments, end) - 1
+            flags.append(truth(root, {key: v[last] for key, v in series.items()}) is True)
         met = {"throughout": all(flags), "once": any(flags)}.get(requirement.when, flags[-1])
         out.append(
             (
@@ -278,3 +292,153 @@ def compare(got: Outcomes, expected: list[tuple[bool, float, float, float]]) -> 
         np.testing.assert_allclose(got.first_failure_s[0, q], failure, rtol=1e-12, err_msg=str(q))
         np.testing.assert_allclose(got.first_met_s[0, q], first, rtol=1e-12, err_msg=str(q))
         np.testing.assert_allclose(got.time_met_s[0, q], time_met, rtol=1e-9, atol=1e-12, err_msg=str(q))
+
+
+quantities = st.sampled_from(
+    ["ATP", "ADP", "S", "SP", "charged", "ATP_per_ADP", "energy_charge", "total(S) - 1", "2 * E"]
+)
+numbers = st.sampled_from(["0", "0.3", "0.5", "1", "2", "3.5", "7"])
+conditions = st.recursive(
+    st.tuples(quantities, st.sampled_from(["<", "<=", ">", ">="]), quantities | numbers).map(" ".join),
+    lambda inner: (
+        inner.map(lambda c: f"not ({c})")
+        | st.tuples(inner, st.sampled_from(["and", "or"]), inner).map(lambda t: f"({t[0]}) {t[1]} ({t[2]})")
+    ),
+    max_leaves=5,
+)
+
+
+@settings(max_examples=40, deadline=None)
+@given(conditions, st.sampled_from(["throughout", "once", "at end"]), st.integers(1, 5))
+def test_any_condition_is_judged_as_every_state_says(condition: str, when: str, seed: int) -> None:
+    system = with_requirements(RELAY, [condition], when=f'"{when}"', during='["0.5 s", "5 s"]')
+    path = path_of(system, seed)
+    compare(judged(system, path), plain(system, path))
+
+
+@settings(max_examples=20, deadline=None)
+@given(conditions, st.integers(1, 5))
+def test_every_n_and_either_or_hold_together(condition: str, seed: int) -> None:
+    """A condition and its negation never hold at once, and both fail only where one of its sides is undefined."""
+    system = with_requirements(RELAY, [condition, f"not ({condition})"], when='"throughout"')
+    path = path_of(system, seed)
+    got = judged(system, path)
+    defined = all(np.isfinite(difference(system, c, path)).all() for c in leaves(system.requirements[0].must.root))
+    total = got.time_met_s[0].sum()
+    assert total <= 6.0 + 1e-9
+    if defined:
+        assert total == pytest.approx(6.0)
+
+
+def test_a_decimal_threshold_is_met_by_the_count_that_equals_it() -> None:
+    """3 of 10 is 0.3, although 0.3 times 10 is no whole number in binary; and an energy of zero is not below zero."""
+    system = driblet.loads(
+        changed(SMALL, ('B = "0 copies"', 'B = "3 copies"'), ('A = "10 copies"', 'A = "7 copies"'))
+        + '[requirements.a]\nmust = "part >= 0.3"\nwhen = "at end"\n'
+        + '[requirements.b]\nmust = "part > 0.3"\nwhen = "at end"\n'
+        + '[requirements.c]\nmust = "gibbs(turn) < 0 kJ/mol"\nwhen = "at end"\n'
+        + '[requirements.d]\nmust = "gibbs(turn) <= 0 kJ/mol"\nwhen = "at end"\n'
+    )
+    frozen = Path([0.0], np.array([[7, 3]]), [], system.compartment.omega)
+    assert judged(system, frozen).met.tolist()[0][:2] == [1, 0]
+    balanced = Path([0.0], np.array([[3, 5]]), [], system.compartment.omega)  # K n_A = n_B + 1
+    assert judged(system, balanced).met.tolist()[0][2:] == [0, 1]
+
+
+def test_a_record_that_ends_early_leaves_undecided_what_it_did_not_see() -> None:
+    tables = [
+        ("throughout", "A > 0"),
+        ("throughout", "A > 9"),
+        ("once", "B > 1"),
+        ("once", "B > 8"),
+        ("at end", "A > 0"),
+    ]
+    text = SMALL + "".join(
+        f'[requirements.r{k}]\nmust = "{must}"\nwhen = "{when}"\nduring = ["0.5 s", "2 s"]\n'
+        for k, (when, must) in enumerate(tables)
+    )
+    system = driblet.loads(text)
+    compiled = CompiledRequirements.of(system, Network.of(system), 2.0)
+    recorder = compiled.recorder(np.array([system.compartment.omega]))
+    open_judgement(recorder, 0, np.array([10.0, 0.0, 1.0]))
+    for k, moment in enumerate([0.2, 0.6, 0.8]):
+        judge_firing(recorder, 0, np.uint64(0), np.array([9.0 - k, 1.0 + k, 1.0]), moment)
+    close_judgement(recorder, 0, 1.0)
+    got = compiled.outcomes(recorder, np.zeros((1, 1, 2), dtype=np.int64), np.array([0.0]), np.ones(1))
+    assert got.met[0].tolist() == [-1, 0, 1, -1, -1]
+    assert got.first_failure_s[0, 1] == 0.5  # false since 0.2 s, judged from 0.5 s on
+    assert got.judged_until_s[0].tolist() == [1.0] * 5
+
+
+@pytest.mark.parametrize(
+    ("condition", "averaged", "why"),
+    [
+        ("gibbs(leak) / gibbs(relay) > 0.5", False, "divided by an energy"),
+        ("ATP * gibbs(leak) < -10 kJ/mol", False, "multiplied by something that changes"),
+        ("ATP * ATP * ATP * ATP * ATP * ATP * ATP > 1000", False, "more than 6 counts"),
+        ("gibbs(leak) / 100 - gibbs(relay) * 3 < 0 kJ/mol", False, "too large to multiply out"),
+        ("gibbs(turn) < gibbs(odd)", True, "on both sides"),
+    ],
+)
+def test_what_is_no_polynomial_says_why_and_is_judged_on_the_grid(condition: str, averaged: bool, why: str) -> None:
+    when = '"on average"' if averaged else '"throughout"'
+    system = with_requirements(RELAY, [condition], when=when)
+    with pytest.raises(NotInFormError, match=why):
+        form_of(system, system.requirements[0].must.root, averaged)
+    compiled = CompiledRequirements.of(system, Network.of(system), 6.0)
+    assert compiled.resolutions() == ("grid",)
+    assert why in compiled.by_grid[0]
+
+
+@pytest.mark.parametrize("keys", [*SPANS, {"averaged_over": '"0.8 s"'}])
+@pytest.mark.parametrize("when", ["throughout", "once", "at end"])
+def test_on_a_grid_the_sampled_states_count_alone(when: str, keys: dict[str, str]) -> None:
+    """The grid sees what a trajectory would be that changed at the sampling times only."""
+    conditions = AVERAGED if "averaged_over" in keys else CONDITIONS
+    system = with_requirements(RELAY, conditions, when=f'"{when}"', **keys)
+    path = path_of(system, 4)
+    grid = np.arange(0.0, 6.01, 0.25)
+    index = np.searchsorted(path.moments, grid, side="right") - 1
+    sampled = Path(list(grid), path.counts[index], [], path.omega)
+    expected = plain(system, sampled)
+    for q, requirement in enumerate(system.requirements):
+        got = judge_on_grid(system, requirement, sampled.counts[None], grid, np.array([path.omega]))
+        compare(got, expected[q : q + 1])
+
+
+def test_many_conditions_compile() -> None:
+    """How long it takes is told by tests/benchmarks/requirements.py."""
+    system = with_requirements(RELAY, CONDITIONS * 4, when='"throughout"')
+    assert len(CompiledRequirements.of(system, Network.of(system), 6.0).forms) == 4 * len(CONDITIONS)
+
+
+def test_standard_readouts_follow_their_definitions() -> None:
+    """Atkinson (1968): 1 when all is ATP, 0.5 when all is ADP or half ATP and half AMP, 0 when all is AMP."""
+    system = driblet.loads(RELAY)
+    names = Names([s.name for s in system.species])
+    omega = np.array(1e7)
+
+    def value(text: str, **counts: int) -> float:
+        state = np.array([counts.get(s.name, 0) for s in system.free_species])
+        return float(extended(system, read_value(text, names).root, state, omega))
+
+    assert value("energy_charge", ATP=5) == 1.0
+    assert value("energy_charge", ADP=5) == 0.5
+    assert value("energy_charge", ATP=4, AMP=4) == 0.5
+    assert value("energy_charge", AMP=3) == 0.0
+    assert value("energy_charge", ATP=6, ADP=2, AMP=2) == 0.7
+    assert value("ATP_per_ADP", ATP=6, ADP=4) == 1.5
+    assert value("phosphorylation_potential", ATP=6, ADP=3) == pytest.approx(2 / 5e-3)
+    assert read_value("phosphorylation_potential", names).unit == "M^-1"
+    with pytest.raises(ExpressionError, match="needs the species AMP"):
+        read_value("energy_charge", Names(["ATP", "ADP"]))
+    mine = Names(["ATP", "ADP", "AMP"], readouts={"energy_charge": read_value("ATP / 2", Names(["ATP"]))})
+    assert value_of(mine, "energy_charge > 3") == "ATP / 2"
+
+
+def value_of(names: Names, text: str) -> str:
+    """The text that the left side's readout stands for."""
+    comparison = read_condition(text, names).root
+    assert isinstance(comparison, Comparison)
+    assert isinstance(comparison.left, Named)
+    return next(e.text for e in names.readouts.values() if e.root == comparison.left.node)
