@@ -48,7 +48,6 @@ from driblet.system.tables import (
 from driblet.system.values import with_values
 
 LARGEST_COUNT = 2.0**53
-LARGEST_HELD = 1000.0  # mol/L, above any pure substance
 LARGEST_LOG_RATE = 200.0  # log10 of a propensity constant in 1/s; times (2^53)^3 it is still a double
 HDF5_MAGIC = b"\x89HDF\r\n\x1a\n"
 
@@ -222,11 +221,10 @@ class _Builder:
                 self.problem(path, "a species held at zero would stop its reactions one way; leave it out")
             if copies is not None and loading == "nearest" and copies != round(copies):
                 self.problem(path, f'"{table.amount}" is fractional: only loading = "poisson" takes it as a mean')
-            if table.held and concentration is not None and concentration > LARGEST_HELD:
-                self.problem(path, f'"{table.amount}" is denser than any substance; at most {LARGEST_HELD:g} M is read')
             omega = compartment.omega if compartment else 1.0
             if not table.held and (copies if copies is not None else concentration * omega) > LARGEST_COUNT:  # type: ignore[operator]
                 self.problem(path, f'"{table.amount}" is more than 2^53 copies, too many to count')
+                copies, concentration = 0.0, None  # what follows looks for other problems, with numbers it can hold
             species.append(Species(name, table.label or name, concentration, copies, table.held, loading))
         return species
 
@@ -316,7 +314,11 @@ class _Builder:
         sample_every = run.sample_every or 0.0
         if duration and sample_every > duration:
             self.problem("run.sample_every", "is longer than the run")
-        return RunSettings(run.engine, run.replicates, duration, sample_every, run.seed)
+        if duration and run.burn_in is not None and run.burn_in >= duration:
+            self.problem("run.burn_in", "leaves nothing of the run; it is shorter than duration")
+        return RunSettings(
+            run.engine, run.replicates, duration, sample_every, run.seed, burn_in_s=run.burn_in, record=run.record
+        )
 
     def check_rates(self, compartment: Compartment, species: list[Species], reactions: list[Reaction]) -> None:
         """Refuse rate constants whose propensities a double could not hold."""

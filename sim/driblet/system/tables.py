@@ -15,7 +15,9 @@ from driblet.quantities import Quantity, QuantityError, example_of, read_quantit
 
 ENGINES = ("exact",)
 LOADINGS = ("nearest", "poisson")
+RECORDS = ("summary", "trajectories", "events")  # how much a run file keeps
 WHEN = ("throughout", "at end", "once", "on average")  # when the condition of a requirement must hold
+DENSEST = 1000.0  # mol/L, above any pure substance
 COLDEST, HOTTEST = 200.0, 500.0  # K, with room for supercooled droplets and for pressure
 MOST_REPLICATES, LARGEST_SEED = 10_000_000, 2**63 - 1
 SHORTEST_TIME, LONGEST_TIME = 1e-15, 1e15  # s: from faster than a bond vibrates to 30 million years
@@ -48,6 +50,13 @@ def _temperature(value: object) -> float:
     return kelvin
 
 
+def _concentration(value: object) -> float:
+    molar = _of_kind("concentration")(value)
+    if molar > DENSEST:
+        raise _complain(f'"{value}" is denser than any substance; at most {DENSEST:g} M is read')
+    return molar
+
+
 def _time(value: object) -> float:
     seconds = _of_kind("time", allow_zero=False)(value)
     if not SHORTEST_TIME <= seconds <= LONGEST_TIME:
@@ -75,6 +84,8 @@ def _amount(value: object) -> Quantity:
         raise _complain(f'"{value}" is no amount: a concentration ("4 mM") or a number ("20 copies") is needed')
     if quantity.value < 0:
         raise _complain(f'"{value}" is negative; an amount cannot be')
+    if quantity.kind == "concentration":
+        _concentration(value)
     return quantity
 
 
@@ -147,8 +158,9 @@ Constant = Annotated[Quantity, BeforeValidator(_constant)]
 Amount = Annotated[Quantity, BeforeValidator(_amount)]
 Temperature = Annotated[float, BeforeValidator(_temperature)]
 Time = Annotated[float, BeforeValidator(_time)]
+BurnIn = Annotated[float, BeforeValidator(_of_kind("time"))]
 Length = Annotated[float, BeforeValidator(_of_kind("length"))]
-Concentration = Annotated[float, BeforeValidator(_of_kind("concentration"))]
+Concentration = Annotated[float, BeforeValidator(_concentration)]
 EnergyChange = Annotated[float, BeforeValidator(_of_kind("energy", allow_negative=True))]
 Loading = Annotated[Literal["nearest", "poisson"], BeforeValidator(_one_of(LOADINGS))]
 
@@ -267,6 +279,8 @@ class RunTable(Table):
     replicates: Annotated[int, BeforeValidator(_whole(1, MOST_REPLICATES))] = 100
     duration: Time | None = None
     sample_every: Time | None = None
+    burn_in: BurnIn | None = None
+    record: Annotated[str, BeforeValidator(_one_of(RECORDS))] = "trajectories"
     loading: Loading = "nearest"
     seed: Annotated[int, BeforeValidator(_whole(0, LARGEST_SEED))] = 0
 
