@@ -86,7 +86,7 @@ def laws_of(run: Run) -> list[CountLaw] | None:
     omega = run.volume_L * system.compartment.omega / system.compartment.volume_L
     laws = []
     try:
-        for counts, w in zip(run.initial_counts(), omega, strict=True):
+        for counts, w in zip(run.class_counts(), omega, strict=True):
             law = count_law(system, counts, float(w))
             if law is None:
                 return None
@@ -108,7 +108,8 @@ def overview(run: Run) -> Figure:
 def _overview(run: Run) -> Figure:
     labels = {s.name: s.label for s in run.system.species}
     counts = run.counts
-    changing = [i for i in range(len(run.species)) if np.ptp(counts[:, :, i])]
+    plain = [s.enzyme is None for s in run.system.free_species]
+    changing = [i for i in range(len(run.species)) if plain[i] and np.ptp(counts[:, :, i])]
     rows: list[tuple[str, NDArray[Any], int | None]] = [
         (f"{labels[run.species[i]]} (copies)", counts[:, :, i], i) for i in changing
     ]

@@ -26,7 +26,7 @@ def reconcile(file: Path, as_json: bool) -> None:
     from driblet.system.build import describe_cycle, load, stoichiometric_matrix
 
     system = load(file, closure=False)
-    reactions = [r for r in system.reactions if r.dG0_kJ_per_mol is not None]
+    reactions = [r for r in system.stated if r.dG0_kJ_per_mol is not None]
     matrix = stoichiometric_matrix([s.name for s in system.species], reactions)
     old = np.array([r.dG0_kJ_per_mol for r in reactions], dtype=float)
     sd = np.array([DEFAULT_SD if r.energy_sd_kJ_per_mol is None else r.energy_sd_kJ_per_mol for r in reactions])

@@ -8,7 +8,7 @@ from typing import Any
 
 import click
 
-from driblet.commands.screen import console, duration, number, table, time_option
+from driblet.commands.screen import console, duration, number, species_rows, table, time_option
 
 
 @click.command(short_help="Simulate an ensemble of compartments into a run file.")
@@ -115,16 +115,15 @@ def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-
         markup=False,
     )
     final = result.final_counts()
-    labels = {s.name: s.label for s in system.species}
     rows = [
         [
-            labels[name],
-            number(final[:, i].mean()),
-            number(final[:, i].std(ddof=1)) if len(final) > 1 else "–",
-            number(float(final[:, i].min())),
-            number(float(final[:, i].max())),
+            label,
+            number(copies.mean()),
+            number(copies.std(ddof=1)) if len(final) > 1 else "–",
+            number(float(copies.min())),
+            number(float(copies.max())),
         ]
-        for i, name in enumerate(result.species)
+        for label, copies in species_rows(system, final)
     ]
     out.print(table("copies at the end, over compartments", ["species", "mean", "sd", "least", "most"], rows))
     for warning in getattr(system, "warnings", ()):

@@ -6,7 +6,7 @@ import json
 import math
 import sys
 from collections.abc import Iterable, Sequence
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 from rich import box
@@ -15,6 +15,12 @@ from rich.table import Table
 
 from driblet.errors import one_problem
 from driblet.quantities import QuantityError, read_quantity
+
+if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
+
+    from driblet.system import System
 
 CAUTION = "A simulation is a design aid: confirm by experiment; no basis for medical or dosing decisions."
 
@@ -45,6 +51,19 @@ def number(value: float | None, digits: int = 4) -> str:
     if 1e4 <= abs(value) < 1e7:
         return f"{value:,.0f}".replace("-", "−")
     return f"{value:.{digits}g}".replace("-", "−")
+
+
+def species_rows(system: System, counts: NDArray[np.int64]) -> list[tuple[str, NDArray[np.int64]]]:
+    """(label, copies, shape=(replicates,)) of each species of the file, then of each enzyme in all of its states.
+
+    counts : shape=(replicates, free species).
+    """
+    free = system.free_species
+    rows = [(s.label, counts[:, i]) for i, s in enumerate(free) if s.enzyme is None]
+    for enzyme in system.enzymes:
+        states = [i for i, s in enumerate(free) if s.enzyme == enzyme.name]
+        rows.append((f"{enzyme.label}, all states", counts[:, states].sum(axis=1)))
+    return rows
 
 
 def duration(seconds: float) -> str:

@@ -8,7 +8,7 @@ from typing import Any
 import click
 import numpy as np
 
-from driblet.commands.screen import console, duration, number, print_json, table
+from driblet.commands.screen import console, duration, number, print_json, species_rows, table
 
 
 @click.command(short_help="Print what a run file holds.")
@@ -28,6 +28,8 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
             print(run.system.text, end="")
             return
         final = run.final_counts()
+        in_the_end = species_rows(run.system, final)
+        stated = [reaction.name for reaction in run.system.stated]
         codes, times = np.unique(run.end_reason, return_counts=True)
         facts: dict[str, Any] = {
             "file": str(run_file),
@@ -65,11 +67,14 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
     )
     for reason, n in facts["ended"].items():
         out.print(f"ended because {reason}: {n}", markup=False)
-    rows = [[s["name"], number(s["mean_at_end"]), number(s["sd_at_end"])] for s in facts["species"]]
+    rows = [
+        [label, number(copies.mean()), number(copies.std(ddof=1)) if len(copies) > 1 else "–"]
+        for label, copies in in_the_end
+    ]
     out.print(table("copies at the end", ["species", "mean", "sd"], rows))
     if facts["readouts"]:
         out.print("readouts: " + ", ".join(f"{k} ({v})" for k, v in facts["readouts"].items()), markup=False)
-    out.print("reactions: " + ", ".join(facts["reactions"]), markup=False)
+    out.print("reactions: " + ", ".join(stated), markup=False)
     rows = [
         [k.replace("_", " "), f"{v:.6g}" if isinstance(v, float) else str(v)] for k, v in facts["provenance"].items()
     ]

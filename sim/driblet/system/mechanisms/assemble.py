@@ -264,7 +264,7 @@ class Assembler:
         out = {chain.turnover: _Constants(found.forward, found.backward, "kcat and the energy")}
         last = len(chain.substrates) - 1
         for i, (link, pair) in enumerate(zip(chain.binding, found.substrates, strict=True)):
-            default = "off-rate = kcat *" if i == last else "Kd = KM *"
+            default = "k_off = kcat *" if i == last else "Kd = KM *"
             stated = "Kd" if chain.substrates[i] in spec.Kd_M else default
             out[link] = _Constants(pair.on, pair.off, f"kcat/KM; {stated}")
         for link, pair in zip(chain.release, found.products, strict=True):
@@ -290,7 +290,7 @@ class Assembler:
         out = {graph.turnover: _Constants(found.forward, found.backward, "kcat and the energy")}
         factor = "" if spec.interaction == 1.0 else f"; interaction {spec.interaction:g}"
         for (alone, with_other), pair, name in zip(graph.binding, found.substrates, names, strict=True):
-            origin = f"kcat/KM; {'Kd' if name in spec.Kd_M else 'off-rate = kcat *'}"
+            origin = f"kcat/KM; {'Kd' if name in spec.Kd_M else 'k_off = kcat *'}"
             out[with_other] = _Constants(pair.on, pair.off, origin)
             off = min(FASTEST, pair.off / spec.interaction)
             out[alone] = _Constants(off * spec.interaction / pair.Kd, off, f"closed square{factor}")
