@@ -338,6 +338,7 @@ class _Builder:
                         f"reactions.{reaction.name}",
                         f"its {key} direction would fire 1e{log_rate:.0f} times a second; check the rate and the energy",
                     )
+                    break
 
     def check_closure(self, species: list[Species], reactions: list[Reaction]) -> None:
         reversible = [r for r in reactions if r.dG0_kJ_per_mol is not None]

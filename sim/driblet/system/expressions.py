@@ -420,5 +420,5 @@ def nearest(name: str, known: Collection[str]) -> str:
     """The closing half of a message about an unknown name: what was probably meant."""
     from difflib import get_close_matches
 
-    close = get_close_matches(name, known, 1)
+    close = [k for k in known if k.lower() == name.lower()] or get_close_matches(name, known, 1)
     return f'; did you mean "{close[0]}"?' if close else f"; known: {', '.join(sorted(known)) or 'none'}"

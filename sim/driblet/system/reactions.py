@@ -77,7 +77,7 @@ class ReactionReader:
         path = f"reactions.{name}"
         table = read_table(ReactionTable, value, path, self.problems)
         text = value.get("equation") if isinstance(value, Mapping) else None
-        if not isinstance(text, str):
+        if not isinstance(text, str) or not text.strip():
             return None
         try:
             equation = read_equation(text)

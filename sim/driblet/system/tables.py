@@ -340,6 +340,6 @@ def _subclasses(model: type[Table]) -> list[type[Table]]:
 
 def unknown_key(key: str, known: list[str]) -> str:
     """The text for a key that is not one of `known`."""
-    close = get_close_matches(key, known, 1)
+    close = [k for k in known if k.lower() == key.lower()] or get_close_matches(key, known, 1)
     hint = f'did you mean "{close[0]}"?' if close else f"known here: {', '.join(known)}"
     return f'"{key}" is not a key here; {hint}'
