@@ -6,6 +6,7 @@ import html
 import json
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
+from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 from typing import Any
@@ -17,6 +18,34 @@ from numpy.typing import NDArray
 from driblet.errors import one_problem
 from driblet.store import SERIES, open_run, reading
 from driblet.system import System, loads
+
+
+@dataclass(frozen=True)
+class Sums:
+    """Exact time integrals gathered while running, over windows of time.
+
+    Attributes: edge_s : (windows + 1,); burn_in_s : as stated in the file, None when it is to be found; monomial_time :
+    (replicates, windows, channels), s, integrals of each channel's falling factorials; count_time : (replicates, windows,
+    species), copies times s; window_firings : int64, (replicates, windows + 1, channels), cumulative at each edge;
+    occupancy_time : (replicates, species, bins), s, bin_width : (species,), copies, the last bin holds all above; span_s :
+    when occupancies and covariances were gathered; covariance : (replicates, species, species), from samples.
+    """
+
+    edge_s: NDArray[np.float64]
+    burn_in_s: float | None
+    monomial_time: NDArray[np.float64]
+    count_time: NDArray[np.float64]
+    window_firings: NDArray[np.int64]
+    occupancy_time: NDArray[np.float64]
+    bin_width: NDArray[np.int64]
+    span_s: tuple[float, float]
+    covariance: NDArray[np.float64]
+
+    def mean(self) -> NDArray[np.float64]:
+        """Time-weighted mean counts over the span, shape=(replicates, species)."""
+        first = int(np.searchsorted(self.edge_s, self.span_s[0] * (1 - 1e-12)))
+        span = float(self.edge_s[-1] - self.edge_s[first])
+        return np.asarray(self.count_time[:, first:].sum(axis=1) / span)
 
 
 class Run:
@@ -41,6 +70,8 @@ class Run:
         self.species: tuple[str, ...] = tuple(first["species"].asstr()[:])
         self.reactions: tuple[str, ...] = tuple(first["reaction"].asstr()[:])
         self.replicates_planned = int(first.attrs["replicates_planned"])
+        # a hash of the system file, the settings and the seed: equal for runs that must give the same bits
+        self.identity = str(first.attrs["identity"])
         units: Mapping[str, str] = json.loads(first["provenance"].attrs["readout_units"])
         self.readout_units = dict(units)
 
@@ -48,11 +79,6 @@ class Run:
     def complete(self) -> bool:
         """Whether every planned replicate is there."""
         return len(self.replicate) == self.replicates_planned
-
-    @property
-    def identity(self) -> str:
-        """A hash of the system file, the settings and the seed: equal for runs that must give the same bits."""
-        return str(self._files[0].attrs["identity"])
 
     @contextmanager
     def _opened(self) -> Iterator[list[h5py.File]]:
@@ -107,6 +133,40 @@ class Run:
         return total
 
     @cached_property
+    def sums(self) -> Sums | None:
+        """What was summed up while running; None for a run file without."""
+        with self._opened() as files:
+            if "stationary" not in files[0]:
+                return None
+            burn_in = files[0]["provenance"].attrs.get("burn_in_s")
+            edge_s = files[0]["stationary/window_edge"][:]
+            bin_width = files[0]["stationary/bin_width"][:]
+            begin, end = files[0]["stationary/span"][:]
+        names = ("monomial_time", "count_time", "window_firings", "occupancy_time", "covariance")
+        return Sums(
+            edge_s=edge_s,
+            burn_in_s=None if burn_in is None else float(burn_in),
+            bin_width=bin_width,
+            span_s=(float(begin), float(end)),
+            **{name: self._read(f"stationary/{name}") for name in names},
+        )
+
+    def event_list(self, replicate: int) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+        """Times in s and channels of the events of one replicate, as far as they were kept.
+
+        Channels number the directions of reactions in the order of `Network.channels`. Raises KeyError when the run did
+        not record events (record = "events") or has no such replicate.
+        """
+        found = np.flatnonzero(self.replicate == replicate)
+        if not len(found):
+            raise KeyError(f"replicate {replicate} is not in this run")
+        with self._opened() as files:
+            if "events_kept" not in files[0]:
+                raise KeyError('this run kept no events; run it with record = "events"')
+        times, channels = (self._read(f"events_kept/{name}")[found[0]] for name in ("time", "channel"))
+        return np.asarray(times, dtype=float), np.asarray(channels).astype(np.int64)
+
+    @cached_property
     def volume_L(self) -> NDArray[np.float64]:
         """Inner volume of each compartment, L, shape=(replicates,)."""
         return self._read("volume")
@@ -136,6 +196,17 @@ class Run:
         """Counts at time zero, int64, shape=(replicates, species), without reading the rest."""
         with self._opened() as files:
             return np.concatenate([f["counts"][:, 0] for f in files])[self._order]
+
+    @property
+    def last_addition_s(self) -> float:
+        """When something was added last, s; 0 where nothing was. From then on a compartment's totals are its own."""
+        return max((a.at_s for a in self.system.additions), default=0.0)
+
+    def class_counts(self) -> NDArray[np.int64]:
+        """Counts at the first sample after the last addition, int64, shape=(replicates, species): they fix the class."""
+        first = int(np.searchsorted(self.time_s, self.last_addition_s))
+        with self._opened() as files:
+            return np.concatenate([f["counts"][:, first] for f in files])[self._order]
 
     @cached_property
     def system(self) -> System:
