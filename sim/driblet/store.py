@@ -118,7 +118,7 @@ class RunWriter:
             self._claim(path, parts, resume, force)
         if resume:
             for shard in _shards(parts):
-                with open_file(shard) as file:
+                with open_file(shard) as file, reading(str(shard)):
                     if file.attrs["identity"] != layout.identity:
                         raise one_problem(str(parts), "", "holds parts of another run; --force discards them")
                     self.done.update(int(u) for u in file["provenance/units"][:])
@@ -430,6 +430,8 @@ def open_run(path: str | Path) -> list[h5py.File]:
     if os.path.exists(path) or not shards:
         return [open_file(path)]
     files = [open_file(shard) for shard in shards]
-    if len({file.attrs["identity"] for file in files}) > 1:
+    with reading(str(parts)):
+        identities = {file.attrs["identity"] for file in files}
+    if len(identities) > 1:
         raise InputError(str(parts_folder(path)), [("", "mixes parts of different runs")])
     return files
