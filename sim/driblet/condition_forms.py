@@ -13,12 +13,12 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from fractions import Fraction
 
+from driblet.engines.judging import LOG_DOWN, LOG_MIXED, LOG_UP, RATIO, SIGN
 from driblet.readouts import copies_in
 from driblet.system.expressions import Comparison, Junction, Named, Negation, Node, Number, Reference, Truth
 from driblet.system.model import Reaction, System
 
 MOST_FACTORS, MOST_TERMS = 6, 64
-SIGN, RATIO, LOG_UP, LOG_DOWN, LOG_MIXED = range(5)
 _SWAPPED = {">": "<", ">=": "<="}
 _NEGATED = {"<": ">=", "<=": ">", ">": "<=", ">=": "<"}
 _LARGEST_LOG = 600.0

@@ -1,8 +1,4 @@
-"""Requirements of a system: compiled for the kernels, judged on the sampling grid where a kernel cannot, and their outcomes.
-
-Judged at every event the outcome is exact. On a grid a failure between two points goes unseen, so the share of compartments
-that hold throughout is then an upper bound (and the share that succeed once a lower one).
-"""
+"""Requirements of a system compiled for the kernels, and judged on the sampling grid where a kernel cannot."""
 
 from __future__ import annotations
 
@@ -16,30 +12,15 @@ from numpy.typing import NDArray
 from driblet.condition_forms import Form, Leaf, NotInFormError, Polynomial, form_of
 from driblet.engines.judging import AND, AT_END, ONCE, OR, THROUGHOUT, UNDECIDED, Requirements
 from driblet.network import Network
+from driblet.outcomes import EVENT, GRID, Outcomes
 from driblet.readouts import extended
 from driblet.system.expressions import Comparison, Junction, Negation, Operation, Truth
 from driblet.system.model import Requirement, System
 
 Array = NDArray[np.float64]
 WHEN = {"throughout": THROUGHOUT, "at end": AT_END, "once": ONCE, "on average": AT_END}
-EVENT, LEAP, GRID = "event", "leap", "grid"  # where the truth of a requirement was looked at
 _EXACT_INTEGER = 2**53
 _ROUNDING = 1e-12
-
-
-@dataclass(frozen=True)
-class Outcomes:
-    """What came of Q requirements in R replicates; every array of shape (R, Q).
-
-    met : int8, 1 met, 0 not, -1 undecided because the record ended first; first_failure_s, first_met_s : when the condition
-    first failed and first held within the span, NaN where it never did; time_met_s : time it held; judged_until_s.
-    """
-
-    met: NDArray[np.int8]
-    first_failure_s: Array
-    first_met_s: Array
-    time_met_s: Array
-    judged_until_s: Array
 
 
 @dataclass(frozen=True)
@@ -84,8 +65,7 @@ class CompiledRequirements:
 
     def outcomes(self, recorded: Requirements, counts: NDArray[np.int64], time_s: Array, omega: Array) -> Outcomes:
         """Every outcome, those of the kernel as recorded, the others from the sampled counts, (R, G, N)."""
-        shape = (len(omega), len(self.system.requirements))
-        out = Outcomes(np.full(shape, UNDECIDED, dtype=np.int8), *(np.full(shape, np.nan) for _ in range(4)))
+        out = Outcomes.empty(len(omega), len(self.system.requirements))
         for k, q in enumerate(self.in_kernel):
             out.met[:, q] = recorded.outcome[:, k]
             out.first_failure_s[:, q], out.first_met_s[:, q] = recorded.first_failure[:, k], recorded.first_met[:, k]

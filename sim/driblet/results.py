@@ -16,6 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.errors import one_problem
+from driblet.outcomes import Outcomes
 from driblet.store import SERIES, open_run, reading
 from driblet.system import System, loads
 
@@ -186,6 +187,18 @@ class Run:
         if name not in self.readout_units:
             raise KeyError(f"{name!r} is not a readout of this run; known: {', '.join(self.readout_units) or 'none'}")
         return self._read(f"readout_{name}")
+
+    @cached_property
+    def outcomes(self) -> Outcomes:
+        """What came of each requirement of the system file in each compartment."""
+        if not self.system.requirements:
+            return Outcomes.empty(len(self.replicate), 0)
+        return Outcomes.read(self._read)
+
+    @property
+    def requirement_resolution(self) -> Mapping[str, str]:
+        """Where each requirement was looked at: "event", "leap" or "grid"."""
+        return dict(json.loads(str(self.provenance["requirements_looked_at"])))
 
     def final_counts(self) -> NDArray[np.int64]:
         """Counts at the end, int64, shape=(replicates, species), without reading the rest."""

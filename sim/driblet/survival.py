@@ -97,7 +97,7 @@ def kaplan_meier(time: ArrayLike, failed: ArrayLike, level: float = LEVEL) -> Su
     seen, lost = np.asarray(time, dtype=float), np.asarray(failed, dtype=bool)
     steps, failures = np.unique(seen[lost], return_counts=True)
     at_risk = len(seen) - np.searchsorted(np.sort(seen), steps, side="left")
-    survival: Array = np.cumprod(1.0 - failures / at_risk)
+    survival = np.asarray(np.cumprod(1.0 - failures / at_risk), dtype=np.float64)
     left = at_risk - failures
     with np.errstate(divide="ignore", invalid="ignore"):
         greenwood = np.cumsum(failures / (at_risk * left))

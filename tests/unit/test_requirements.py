@@ -17,8 +17,9 @@ import driblet
 from driblet.condition_forms import NotInFormError, form_of
 from driblet.engines.judging import close_judgement, judge_firing, open_judgement
 from driblet.network import Network
+from driblet.outcomes import Outcomes
 from driblet.readouts import extended
-from driblet.requirements import CompiledRequirements, Outcomes, judge_on_grid
+from driblet.requirements import CompiledRequirements, judge_on_grid
 from driblet.system import System
 from driblet.system.expressions import (
     Comparison,
