@@ -30,6 +30,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "check": ("driblet_analysis.commands.check:check", "Hold a run against the exact equilibrium of its energies."),
     "plot": ("driblet_analysis.commands.plot:plot", "Draw trajectories and histograms of a run."),
     "reference": ("driblet.commands.reference:reference", "List or explain the energies of the reference table."),
+    "sweep": ("driblet_analysis.commands.sweep:sweep", "Simulate many points of a system, here or on a cluster."),
     "export": ("driblet.commands.export:export", "Print a network as JSON, or a run's trajectories as CSV."),
 }
 

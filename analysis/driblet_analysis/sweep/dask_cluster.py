@@ -1,0 +1,237 @@
+"""Dask: a sweep on a running cluster, one shard a task.
+
+Tasks write their shard and return numbers, so that one that is lost with its worker, or run twice, costs time and nothing
+else.
+"""
+
+from __future__ import annotations
+
+import platform
+import secrets
+import threading
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+
+from driblet.errors import DribletError, InputError, one_problem
+from driblet_analysis.sweep.claims import BEAT_SECONDS, FOLDER, standings
+from driblet_analysis.sweep.directory import Plan, read_plan
+from driblet_analysis.sweep.files import writing
+from driblet_analysis.sweep.local import Outcome, Progress, Session, repair
+from driblet_analysis.sweep.work import Stop, Written, do_shard, warm_up
+
+_CONNECT_SECONDS = 15
+_TASKS_PER_THREAD = 3  # in the scheduler's hands at a time
+_POLL_SECONDS = 1.0
+
+
+def work_on_dask(
+    directory: str | Path,
+    address: str,
+    *,
+    retry: bool = False,
+    stop: Stop | None = None,
+    on_progress: Callable[[Progress], None] | None = None,
+) -> Outcome:
+    """Do what is left of a sweep on a Dask cluster whose workers see the directory under the same name.
+
+    address : of the scheduler ("tcp://10.0.0.1:8786"), or the name of its scheduler file. Raises InputError without dask,
+    when the cluster does not answer, and for what its workers find wrong with the directory.
+    """
+    plan = read_plan(directory)
+    plan.check_version()
+    shards = range(plan.shards)
+    notes = repair(plan, shards)
+    session = Session(plan, shards, on_progress)
+    stop = stop or Stop()
+    left = session.shards_to_do(retry)
+    if left:
+        with _client(address) as client, _stop_file(plan) as stop_file:
+            notes += _Driver(session, client, stop, stop_file, retry).run(left)
+    return session.outcome(stop, notes)
+
+
+@contextmanager
+def _client(address: str) -> Iterator[Any]:
+    try:
+        from distributed import Client
+    except ImportError as error:
+        raise one_problem("command line", "--dask", 'needs dask: pip install "driblet[dask]"') from error
+    try:
+        if Path(address).is_file():
+            client = Client(scheduler_file=address, timeout=_CONNECT_SECONDS)
+        else:
+            client = Client(address, timeout=_CONNECT_SECONDS)
+    except (OSError, TimeoutError, ValueError, ImportError) as error:
+        reason = (" ".join(str(error).split()) or type(error).__name__)[:160]
+        raise one_problem("command line", "--dask", f'no Dask scheduler answers at "{address}" ({reason})') from error
+    try:
+        client.wait_for_workers(1, timeout=_CONNECT_SECONDS)
+    except TimeoutError as error:
+        client.close()
+        raise one_problem("command line", "--dask", f'the Dask cluster at "{address}" has no workers') from error
+    try:
+        yield client
+    finally:
+        client.close()
+
+
+@contextmanager
+def _stop_file(plan: Plan) -> Iterator[Path]:
+    """A file whose appearance tells running tasks to stop after the point under way."""
+    path = (plan.directory / FOLDER).absolute() / f".stop-{secrets.token_hex(4)}"
+    try:
+        yield path
+    finally:
+        path.unlink(missing_ok=True)
+
+
+class _Driver:
+    """Keeps the cluster supplied with tasks and takes in what they return."""
+
+    def __init__(self, session: Session, client: Any, stop: Stop, stop_file: Path, retry: bool) -> None:
+        self.session, self.client, self.stop, self.stop_file, self.retry = session, client, stop, stop_file, retry
+        self.directory = str(session.plan.directory.absolute())
+        self.notes: list[str] = []
+        self.fault = ""
+        self.taken: set[int] = set()  # shards that were in another worker's hands
+        self.lost: set[int] = set()  # shards whose tasks died with their workers again and again
+
+    def run(self, left: list[int]) -> list[str]:
+        """Have every shard done; returns notes. Raises InputError with what the workers found wrong."""
+        warm = self.client.submit(_warm_up, self.directory, pure=False)
+        self._drain({warm: -1}, iter(()))
+        while left and not self.ended:
+            self.taken.clear()
+            self._drain({}, iter(left))
+            left = self._given_up()
+        if self.fault:
+            raise one_problem(str(self.session.plan.directory), "", self.fault)
+        return self.notes
+
+    @property
+    def ended(self) -> bool:
+        return bool(self.fault) or self.stop.asked.is_set()
+
+    def _drain(self, running: dict[Any, int], queue: Iterator[int]) -> None:
+        """Keep a few tasks per thread with the scheduler until the queue is empty and all have returned."""
+        from distributed import wait
+
+        while True:
+            threads = max(1, sum(self.client.nthreads().values()))
+            self.session.workers = threads
+            while not self.ended and len(running) < _TASKS_PER_THREAD * threads:
+                shard = next(queue, None)
+                if shard is None:
+                    break
+                future = self.client.submit(
+                    _do_shard, self.directory, shard, self.retry, str(self.stop_file), pure=False, retries=2
+                )
+                running[future] = shard
+            if not running:
+                return
+            if self.ended:
+                self._stop_tasks(running)
+            try:
+                done = wait(list(running), timeout=_POLL_SECONDS, return_when="FIRST_COMPLETED").done
+            except TimeoutError:
+                self.session.tell()
+                continue
+            for future in done:
+                self._take_in(future, running.pop(future))
+
+    def _stop_tasks(self, running: dict[Any, int]) -> None:
+        """Tasks that have not begun are dropped; those that run end after the point under way."""
+        if self.stop_file.exists():
+            return
+        with writing(self.session.plan.directory):
+            self.stop_file.parent.mkdir(exist_ok=True)
+            self.stop_file.touch()
+        self.client.cancel([future for future in running if future.status == "pending" and not self._begun(future)])
+
+    def _begun(self, future: Any) -> bool:
+        return any(future.key in keys for keys in self.client.processing().values())
+
+    def _take_in(self, future: Any, shard: int) -> None:
+        if future.status == "cancelled":
+            return
+        if future.status == "error":
+            error = future.exception()
+            text = " ".join(str(error).split())[:200]
+            if type(error).__name__ == "KilledWorker":
+                self.lost.add(shard)
+                self.notes.append(f"workers died at shard {shard} again and again; it is left")
+            elif isinstance(error, ImportError):
+                self.fault = f"the Dask workers cannot import driblet ({text}); install the same version there"
+            else:
+                self.fault = f"a Dask task failed: {type(error).__name__}: {text}"
+            return
+        result = future.result()
+        if result["fault"]:
+            self.fault = f"{result['fault']} (on Dask worker {result['host']})"
+        elif not result["mine"]:
+            self.taken.add(shard)
+        elif shard >= 0:
+            self.session.written_report(Written(shard, result["done"], result["failed"]))
+
+    def _given_up(self) -> list[int]:
+        """Shards found in other hands that are free after all: waits while their owners may be dead."""
+        seen = time.monotonic()
+        while not self.ended:
+            todo = set(self.session.open_shards()) & self.taken - self.lost
+            claimed = standings(self.session.plan.directory)
+            states = {s: claimed[s].state if s in claimed else "free" for s in todo}
+            free = [s for s, state in states.items() if state in ("free", "done")]
+            patience = time.monotonic() - seen < 2 * BEAT_SECONDS + 5.0
+            if free or not any(state == "silent" or patience for state in states.values()):
+                return free
+            self.stop.asked.wait(_POLL_SECONDS)
+        return []
+
+
+def _warm_up(directory: str) -> dict[str, Any]:
+    def act(plan: Plan) -> bool:
+        warm_up(plan)
+        return True
+
+    return _answering(act, directory, lambda: (0, 0))
+
+
+def _do_shard(directory: str, shard: int, retry: bool, stop_file: str) -> dict[str, Any]:
+    """The task: one shard. Returns plain numbers and texts; the results are on the disk."""
+    stop, ended = Stop(), threading.Event()
+    counts = [0, 0]
+
+    def report(written: Written) -> None:
+        counts[0] += written.done
+        counts[1] += written.failed
+
+    def watch() -> None:
+        while not ended.wait(_POLL_SECONDS):
+            if Path(stop_file).exists():
+                stop.asked.set()
+
+    threading.Thread(target=watch, daemon=True).start()
+    try:
+        return _answering(
+            lambda plan: do_shard(plan, shard, stop, report, retry), directory, lambda: (counts[0], counts[1])
+        )
+    finally:
+        ended.set()
+
+
+def _answering(act: Callable[[Plan], bool], directory: str, counts: Callable[[], tuple[int, int]]) -> dict[str, Any]:
+    """What a task returns: an error as a text, since not every exception survives the way back."""
+    mine, fault = True, ""
+    try:
+        plan = read_plan(directory)
+        plan.check_version()
+        mine = act(plan)
+    except InputError as error:
+        fault = "; ".join(p.text for p in error.problems)
+    except DribletError as error:
+        fault = str(error)
+    done, failed = counts()
+    return {"mine": mine, "fault": fault, "host": platform.node(), "done": done, "failed": failed}

@@ -1,0 +1,228 @@
+"""One worker: takes free shards, simulates their points one after the other, writes what is done, goes on.
+
+Every way of running a sweep (local processes, parts, Slurm tasks, Dask tasks) ends here, so that all give the same bits.
+"""
+
+from __future__ import annotations
+
+import random
+import signal
+import tempfile
+import threading
+import time
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager, suppress
+from pathlib import Path
+from typing import NamedTuple
+
+from driblet.ensemble import Progress, run
+from driblet.errors import DribletError, InterruptedRunError
+from driblet_analysis.sweep.claims import Claim, Standing, standing_of, standings, take
+from driblet_analysis.sweep.directory import Plan, Point
+from driblet_analysis.sweep.shards import Result, ShardFile, is_complete, shard_files, union, write_results
+from driblet_analysis.sweep.summary import summarise
+
+FLUSH_SECONDS = 5.0  # what is simulated is written, and reported, at least this often, points permitting
+_WAIT_SECONDS = 2.0
+_LONGEST_ERROR = 300
+STOP_SIGNALS = (signal.SIGINT, signal.SIGTERM, signal.SIGUSR1)
+
+
+class Written(NamedTuple):
+    """A report of what has just become safe. Attributes: shard; done, failed : points newly on disk."""
+
+    shard: int
+    done: int
+    failed: int
+
+
+class Stop:
+    """Asks a worker to stop at a clean place: what is finished is written, the point under way is given up."""
+
+    def __init__(self) -> None:
+        self.asked = threading.Event()
+        self._simulating = False
+
+    def __call__(self, *_: object) -> None:
+        """Signal handler, in the main thread."""
+        again = self.asked.is_set()
+        self.asked.set()
+        if self._simulating or again:
+            self._simulating = False
+            raise KeyboardInterrupt
+
+    @contextmanager
+    def simulating(self) -> Iterator[None]:
+        """The stretch that may be cut short."""
+        self._simulating = True
+        try:
+            if self.asked.is_set():
+                raise KeyboardInterrupt
+            yield
+        finally:
+            self._simulating = False
+
+
+@contextmanager
+def stopping_on_signals() -> Iterator[Stop]:
+    """A Stop that answers Ctrl-C, a termination and Slurm's warning (USR1). For the main thread alone."""
+    stop = Stop()
+    before = {number: signal.signal(number, stop) for number in STOP_SIGNALS}
+    try:
+        yield stop
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
+
+
+def simulate(plan: Plan, point: Point) -> Result:
+    """Simulate a point on one core and summarise it. An error of the point becomes a result with its text.
+
+    Raises KeyboardInterrupt or InterruptedRunError when stopped.
+    """
+    started = time.monotonic()
+    try:
+        system = plan.system(point)
+        image = None
+        if plan.keep == "trajectories":
+            with tempfile.TemporaryDirectory(prefix="driblet-") as folder:
+                path = Path(folder) / "run.h5"
+                with run(system, path, threads=1, key=point.key) as ensemble:
+                    values = summarise(ensemble, system)
+                image = path.read_bytes()
+        else:
+            with run(system, threads=1, key=point.key) as ensemble:
+                values = summarise(ensemble, system)
+    except (KeyboardInterrupt, InterruptedRunError):
+        raise
+    except Exception as error:
+        text = " ".join(str(error).split())
+        if not isinstance(error, DribletError):
+            text = f"{type(error).__name__}: {text}"
+        return Result(point.number, point.key, {}, text[:_LONGEST_ERROR], time.monotonic() - started)
+    return Result(point.number, point.key, values, "", time.monotonic() - started, image)
+
+
+class Worker:
+    """Works on some shards of a plan until nothing is free there. `report` is told what is safely written."""
+
+    def __init__(
+        self,
+        plan: Plan,
+        shards: Sequence[int],
+        stop: Stop,
+        report: Callable[[Written], None],
+        retry: bool = False,
+    ) -> None:
+        self.plan, self.shards, self.stop, self.report, self.retry = plan, shards, stop, report, retry
+        self._retried: set[int] = set()
+
+    def run(self) -> None:
+        """Take and do shards. Raises InputError when the directory cannot be written."""
+        while not self.stop.asked.is_set():
+            free, silent = self._look()
+            for shard, standing in free:
+                if self.stop.asked.is_set():
+                    return
+                claim = take(self.plan.directory, shard, standing, reopen=self.retry)
+                if claim is not None:
+                    with claim:
+                        self.do(claim)
+            if not free:
+                if not silent:
+                    return
+                self.stop.asked.wait(_WAIT_SECONDS)  # a worker elsewhere may be dead: soon its claims tell
+
+    def _look(self) -> tuple[list[tuple[int, Standing | None]], list[int]]:
+        files, claimed = shard_files(self.plan), standings(self.plan.directory)
+        fresh: list[tuple[int, Standing | None]] = []
+        resumed: list[tuple[int, Standing | None]] = []
+        suspect: list[tuple[int, Standing | None]] = []
+        silent: list[int] = []
+        for shard in self.shards:
+            standing = claimed.get(shard)
+            if is_complete(self.plan, shard, files.get(shard, ())) and not self._to_retry(shard):
+                continue
+            if standing is None:
+                fresh.append((shard, standing))
+            elif standing.state == "free" or (standing.state == "done" and self.retry):
+                (suspect if standing.suspects else resumed).append((shard, standing))
+            elif standing.state == "silent":
+                silent.append(shard)
+        start = random.randrange(len(fresh)) if fresh else 0  # workers that begin together part at once
+        return [*fresh[start:], *fresh[:start], *resumed, *suspect], silent
+
+    def _to_retry(self, shard: int) -> bool:
+        if not self.retry or shard in self._retried:
+            return False
+        results, _, _ = union(self.plan, shard, runs=False)
+        if any(r.error for r in results.values()):
+            return True
+        self._retried.add(shard)
+        return False
+
+    def do(self, claim: Claim) -> None:
+        """Do what is left of a claimed shard."""
+        shard = claim.shard
+        self._retried.add(shard)
+        results, read, _ = union(self.plan, shard)
+        points = self.plan.read(self.plan.shard(shard))
+        left = [p for p in points if p.number not in results or (self.retry and results[p.number].error)]
+        left.sort(key=lambda p: p.number in claim.suspects)  # a point at which workers died waits for the others
+        pending: list[Result] = []
+        flushed = time.monotonic()
+        try:
+            for point in left:
+                if self.stop.asked.is_set() or claim.lost():
+                    break
+                if pending and (point.number in claim.suspects or time.monotonic() - flushed > FLUSH_SECONDS):
+                    read = self._write(shard, results, pending, read)
+                    flushed = time.monotonic()
+                claim.at(point.number)
+                with self.stop.simulating():
+                    result = simulate(self.plan, point)
+                pending.append(result)
+        except (KeyboardInterrupt, InterruptedRunError):
+            self.stop.asked.set()
+        if pending:
+            self._write(shard, results, pending, read)
+        if len(results) == len(points):
+            claim.complete()
+
+    def _write(
+        self, shard: int, results: dict[int, Result], pending: list[Result], read: list[ShardFile]
+    ) -> list[ShardFile]:
+        """Make pending results safe, then drop the files that hold nothing else. Returns the files that now hold the shard."""
+        new = {r.number: r for r in pending}
+        # by its own listing this worker may not know what another has added: what it read is what it may remove
+        written = write_results(self.plan, shard, {**results, **new})
+        results.update(new)
+        for file in read:
+            file.path.unlink(missing_ok=True)
+        self.report(Written(shard, sum(not r.error for r in pending), sum(bool(r.error) for r in pending)))
+        pending.clear()
+        return [written]
+
+
+def do_shard(plan: Plan, shard: int, stop: Stop, report: Callable[[Written], None], retry: bool = False) -> bool:
+    """Do one shard if it is free. Returns False when another worker holds it."""
+    standing = standing_of(plan.directory, shard)
+    if is_complete(plan, shard, shard_files(plan).get(shard, ())) and not retry:
+        return True
+    claim = take(plan.directory, shard, standing, reopen=True)
+    if claim is None:
+        return False
+    with claim:
+        Worker(plan, [shard], stop, report, retry).do(claim)
+    return True
+
+
+def warm_up(plan: Plan) -> None:
+    """Compile what the points need, so that many workers starting together find it compiled. Simulates next to nothing."""
+
+    def enough(progress: Progress) -> None:
+        if progress.events:
+            raise KeyboardInterrupt
+
+    with suppress(KeyboardInterrupt, InterruptedRunError):
+        run(plan.system(plan.read(range(1))[0]), replicates=1, threads=1, on_progress=enough).close()
