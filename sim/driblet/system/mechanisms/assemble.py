@@ -215,11 +215,14 @@ class Assembler:
             return self._chain(spec, chains[0], spec.kcat_per_s, spec.K)
         known = [self._along(chain.turnover) for chain in chains]
         if known == [None, None]:
-            root = math.sqrt(spec.K)
-            try:
-                halves = [self._chain(spec, chain, 2.0 * spec.kcat_per_s, root) for chain in chains]
-            except MechanismError as error:
-                raise error.scaled(lambda rate: 0.5 * rate) from None
+            root, halves, errors = math.sqrt(spec.K), [], []
+            for chain in chains:
+                try:
+                    halves.append(self._chain(spec, chain, 2.0 * spec.kcat_per_s, root))
+                except MechanismError as error:
+                    errors.append(error.scaled(lambda rate: 0.5 * rate))
+            if errors:
+                raise min(errors, key=lambda error: math.inf if error.largest is None else error.largest)
             return {**halves[0], **halves[1]}
         done, other = (chains[0], chains[1]) if known[0] is not None else (chains[1], chains[0])
         time, K = self._finished(done)
