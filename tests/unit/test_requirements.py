@@ -122,10 +122,10 @@ def judged(system: System, path: Path) -> Outcomes:
     assert not compiled.by_grid, compiled.by_grid
     omega = np.array([path.omega])
     recorder = compiled.recorder(omega)
-    padded = np.append(path.counts.astype(float), np.ones((len(path.counts), 1)), axis=1)
-    open_judgement(recorder, 0, padded[0])
+    columns = path.counts.T.astype(float)
+    open_judgement(recorder, 0, columns, 0)
     for k, channel in enumerate(path.channels, start=1):
-        judge_firing(recorder, 0, np.uint64(channel), padded[k], path.moments[k])
+        judge_firing(recorder, 0, np.uint64(channel), columns, k, path.moments[k])
     close_judgement(recorder, 0, system.settings.duration_s)
     return compiled.outcomes(recorder, path.counts[None], np.array([0.0]), omega)
 
@@ -361,9 +361,10 @@ def test_a_record_that_ends_early_leaves_undecided_what_it_did_not_see() -> None
     system = driblet.loads(text)
     compiled = CompiledRequirements.of(system, Network.of(system), 2.0)
     recorder = compiled.recorder(np.array([system.compartment.omega]))
-    open_judgement(recorder, 0, np.array([10.0, 0.0, 1.0]))
-    for k, moment in enumerate([0.2, 0.6, 0.8]):
-        judge_firing(recorder, 0, np.uint64(0), np.array([9.0 - k, 1.0 + k, 1.0]), moment)
+    columns = np.array([[10.0, 9.0, 8.0, 7.0], [0.0, 1.0, 2.0, 3.0]])
+    open_judgement(recorder, 0, columns, 0)
+    for k, moment in enumerate([0.2, 0.6, 0.8], start=1):
+        judge_firing(recorder, 0, np.uint64(0), columns, k, moment)
     close_judgement(recorder, 0, 1.0)
     got = compiled.outcomes(recorder, np.zeros((1, 1, 2), dtype=np.int64), np.array([0.0]), np.ones(1))
     assert got.met[0].tolist() == [-1, 0, 1, -1, -1]

@@ -1,8 +1,8 @@
 """Requirements judged while a replicate runs: truth after every event, time spent true, first failure, first success.
 
 A requirement is a postfix program over leaves, a leaf the sign of a polynomial in counts (or, for time averages, of the
-integral of a value over a window of time). The state is constant between two events, so all of this is exact. `counts` is
-one replicate's, as a row of its arrays or as a column of a pack of lanes.
+integral of a value over a window of time). The state is constant between two events, so all of this is exact. `counts` are
+(thing, column) with one replicate a column, as in recording.py.
 """
 
 from __future__ import annotations
@@ -74,13 +74,13 @@ class Requirements(NamedTuple):
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
-def polynomial(rq, coefficient, p, counts):  # type: ignore[no-untyped-def]
-    """Value of polynomial p; coefficient : (T,) of the replicate."""
+def polynomial(rq, r, p, counts, column):  # type: ignore[no-untyped-def]
+    """Value of polynomial p in replicate r."""
     total = 0.0
     for t in range(np.uint64(rq.term_start[p]), np.uint64(rq.term_start[p + np.uint64(1)])):
-        value = coefficient[t]
+        value = rq.coefficient[r, t]
         for f in range(np.uint64(rq.factor_start[t]), np.uint64(rq.factor_start[t + np.uint64(1)])):
-            value *= counts[np.uint64(rq.factor_species[f])] - rq.factor_offset[f]
+            value *= counts[np.uint64(rq.factor_species[f]), column] - rq.factor_offset[f]
         total += value
     return total
 
@@ -126,14 +126,13 @@ def credit(rq, r, q, until, closed):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def take_values(rq, r, q, counts):  # type: ignore[no-untyped-def]
+def take_values(rq, r, q, counts, column):  # type: ignore[no-untyped-def]
     """The values of the moment that q averages."""
-    coefficient = rq.coefficient[r]
     for leaf in range(rq.leaf_start[q], rq.leaf_start[q + 1]):
         kind = rq.leaf_kind[leaf]
-        value = polynomial(rq, coefficient, np.uint64(rq.leaf_polynomial[leaf, 0]), counts)
+        value = polynomial(rq, r, np.uint64(rq.leaf_polynomial[leaf, 0]), counts, column)
         if kind != SIGN:
-            below = polynomial(rq, coefficient, np.uint64(rq.leaf_polynomial[leaf, 1]), counts)
+            below = polynomial(rq, r, np.uint64(rq.leaf_polynomial[leaf, 1]), counts, column)
             value = value / below if kind == RATIO else log_ratio(kind, value, below)
         rq.leaf_value[r, leaf] = value
 
@@ -183,18 +182,17 @@ def integrate_to(rq, r, q, until):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
-def judge(rq, r, q, counts, clock):  # type: ignore[no-untyped-def]
+def judge(rq, r, q, counts, column, clock):  # type: ignore[no-untyped-def]
     """Take notice that the counts of requirement q may have changed at `clock`; returns whether its truth did."""
     if rq.averaged[q] != 0:
         before = rq.next_window[r, q]
         integrate_to(rq, r, q, clock)
-        take_values(rq, r, q, counts)
+        take_values(rq, r, q, counts, column)
         return rq.next_window[r, q] != before
-    coefficient = rq.coefficient[r]
     changed = np.int64(0)
     for leaf in range(np.uint64(rq.leaf_start[q]), np.uint64(rq.leaf_start[q + np.uint64(1)])):
         p = np.uint64(rq.leaf_polynomial[leaf, 0])
-        truth = meets(polynomial(rq, coefficient, p, counts), rq.leaf_strict[leaf])
+        truth = meets(polynomial(rq, r, p, counts, column), rq.leaf_strict[leaf])
         changed |= truth ^ rq.leaf_truth[r, leaf]
         rq.leaf_truth[r, leaf] = truth
     if changed != 0:
@@ -208,33 +206,32 @@ def judge(rq, r, q, counts, clock):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
-def judge_firing(rq, r, channel, counts, clock):  # type: ignore[no-untyped-def]
+def judge_firing(rq, r, channel, counts, column, clock):  # type: ignore[no-untyped-def]
     """Judge what a firing of `channel` at `clock` can change; returns whether the truth of any requirement did."""
     changed = False
     for k in range(np.uint64(rq.affected_start[channel]), np.uint64(rq.affected_start[channel + np.uint64(1)])):
-        changed |= judge(rq, r, np.uint64(rq.affected[k]), counts, clock)
+        changed |= judge(rq, r, np.uint64(rq.affected[k]), counts, column, clock)
     return changed
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def judge_all(rq, r, counts, clock):  # type: ignore[no-untyped-def]
+def judge_all(rq, r, counts, column, clock):  # type: ignore[no-untyped-def]
     """Judge every requirement: after a leap, or at a grid point."""
     for q in range(rq.when.size):
-        judge(rq, r, np.uint64(q), counts, clock)
+        judge(rq, r, np.uint64(q), counts, column, clock)
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def open_judgement(rq, r, counts):  # type: ignore[no-untyped-def]
+def open_judgement(rq, r, counts, column):  # type: ignore[no-untyped-def]
     """The truth at time zero; `counts` : of the start."""
-    coefficient = rq.coefficient[r]
     for q in range(rq.when.size):
         rq.since[r, q] = 0.0
         if rq.averaged[q] != 0:
-            take_values(rq, r, q, counts)
+            take_values(rq, r, q, counts, column)
             continue
         for leaf in range(rq.leaf_start[q], rq.leaf_start[q + 1]):
             p = np.uint64(rq.leaf_polynomial[leaf, 0])
-            rq.leaf_truth[r, leaf] = meets(polynomial(rq, coefficient, p, counts), rq.leaf_strict[leaf])
+            rq.leaf_truth[r, leaf] = meets(polynomial(rq, r, p, counts, column), rq.leaf_strict[leaf])
         rq.truth[r, q] = conclude(rq, r, q)
 
 
