@@ -1,25 +1,46 @@
-"""The exact engine: which kernel runs a network, and what is laid out for it once. See contract.py."""
+"""The exact engine: which kernel runs a network, and what is laid out for it once. See contract.py.
+
+Both methods give the same bits, so that a choice between them is one of speed alone:
+
+lanes   replicates in lockstep (lanes.py): an event costs time in proportion to the number of channels, shared by 64
+scalar  one replicate after the other (scalar.py): an event costs nearly the same at any number of channels
+"""
 
 from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
 
-from driblet.engines.contract import EnsembleState, NetworkArrays, Recorders, Samples
+from driblet.engines.contract import RUNNING, EnsembleState, NetworkArrays, Recorders, Samples
+from driblet.engines.lanes import LANES, advance_lanes, lane_table, new_lanes
 from driblet.engines.recording import recorders_for
 from driblet.engines.scalar import advance_scalar
 from driblet.engines.sums import refresh_plan, select, sum_rows
 
-__all__ = ["ExactEngine", "advance", "select"]
+__all__ = ["METHODS", "ExactEngine", "advance", "choose_method", "select"]
+
+METHODS = ("lanes", "scalar")
+MOST_CHANNELS_IN_LANES = 300  # measured: above, the scalar kernel is as fast (tests/benchmarks/exact_engine.py)
+FEWEST_LANES = 6  # measured: fewer replicates are faster one after the other
+
+
+def choose_method(channels: int, replicates: int, logging: bool = False) -> str:
+    """The faster method for a network and an ensemble; an event log is kept by the scalar kernel only."""
+    if logging or channels > MOST_CHANNELS_IN_LANES or replicates < FEWEST_LANES:
+        return "scalar"
+    return "lanes"
 
 
 class ExactEngine:
-    """A network laid out for the exact method."""
+    """A network of `species` free species laid out for one method; `method` None lets `choose_method` decide each call."""
 
-    def __init__(self, network: NetworkArrays) -> None:
-        self.network = network
+    def __init__(self, network: NetworkArrays, species: int, method: str | None = None, lanes: int = LANES) -> None:
+        if method not in (None, *METHODS):
+            raise ValueError(f"{method!r} is not a method; known: {', '.join(METHODS)}")
+        self.network, self.method, self.lanes = network, method, lanes
         self.rows = sum_rows(len(network.reactant))
         self.refresh = refresh_plan(network, self.rows)
+        self.table = lane_table(network, species, lanes)
 
     def advance(
         self,
@@ -31,7 +52,32 @@ class ExactEngine:
     ) -> int:
         """See contract.py. rates : float64, (R, M), 1/s per product of falling factorials."""
         recorders = recorders or recorders_for(state)
+        running = int(np.count_nonzero(state.reason == RUNNING))
+        logging = recorders.log.time.shape[1] > 0
+        method = self.method or choose_method(rates.shape[1], running, logging)
         with np.errstate(all="ignore"):  # for kernels that run as plain Python
+            if method == "lanes":
+                if logging:
+                    raise ValueError("an event log is kept by the scalar method only")
+                fewest = 1 if self.method else FEWEST_LANES
+                lanes = new_lanes(state, self.rows, recorders, self.lanes)
+                lanes.common_rate[:] = rates[0]
+                shared = bool((rates == rates[0]).all())
+                return int(
+                    advance_lanes(
+                        self.network,
+                        self.table,
+                        self.rows,
+                        lanes,
+                        shared,
+                        fewest,
+                        rates,
+                        state,
+                        samples,
+                        budget,
+                        recorders,
+                    )
+                )
             return int(advance_scalar(self.network, self.rows, self.refresh, rates, state, samples, budget, recorders))
 
 
@@ -42,6 +88,8 @@ def advance(
     samples: Samples,
     budget: int,
     recorders: Recorders | None = None,
+    method: str | None = None,
 ) -> int:
     """One call of the contract for a network that is not laid out yet."""
-    return ExactEngine(network).advance(rates, state, samples, budget, recorders)
+    engine = ExactEngine(network, state.counts.shape[1] - 1, method)
+    return engine.advance(rates, state, samples, budget, recorders)

@@ -1,7 +1,8 @@
 """What kernels record besides advancing: the grid, windowed time integrals, histograms, conditions, events.
 
-The state is constant between two events, so everything here is exact. `counts`, `firings` and `running` are one
-replicate's, as a row of its arrays or as a column of a pack of lanes.
+The state is constant between two events, so everything here is exact. `counts`, `firings` and `running` are (thing, column)
+with one replicate a column: the arrays of a pack of lanes, or those of the state transposed. Both are passed as views of
+no particular layout, so that one compiled form serves both.
 """
 
 from __future__ import annotations
@@ -131,116 +132,105 @@ def recorders_for(
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
-def monomial(factor, offset, q, counts):  # type: ignore[no-untyped-def]
+def monomial(factor, offset, q, counts, column):  # type: ignore[no-untyped-def]
     """Monomial q of one replicate's counts."""
-    value = counts[np.uint64(factor[q, 0])] - offset[q, 0]
-    value *= counts[np.uint64(factor[q, 1])] - offset[q, 1]
-    return value * (counts[np.uint64(factor[q, 2])] - offset[q, 2])
+    value = counts[np.uint64(factor[q, 0]), column] - offset[q, 0]
+    value *= counts[np.uint64(factor[q, 1]), column] - offset[q, 1]
+    return value * (counts[np.uint64(factor[q, 2]), column] - offset[q, 2])
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
-def next_mark(samples, averages, r, sample):  # type: ignore[no-untyped-def]
+@njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
+def next_mark(time, edge, next_edge, r, sample):  # type: ignore[no-untyped-def]
     """The next time at which replicate r has something to record, inf when there is none."""
-    mark = samples.time[sample] if sample < samples.time.size else np.inf
-    edge = averages.next_edge[r]
-    if edge < averages.edge.size and averages.edge[edge] < mark:
-        mark = averages.edge[edge]
-    return mark
+    grid_point = time[sample] if sample < time.size else np.inf
+    window_edge = edge[next_edge[r]] if next_edge[r] < edge.size else np.inf
+    return min(grid_point, window_edge)
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def integrate(averages, counts, running, span):  # type: ignore[no-untyped-def]
+def sample_until(time, sampled_counts, sampled_firings, r, sample, later, counts, firings, column):  # type: ignore[no-untyped-def]
+    """Record the state on each grid point before `later`; returns the index of the next grid point."""
+    while sample < time.size and not later <= time[sample]:
+        for i in range(sampled_counts.shape[2]):
+            sampled_counts[r, sample, i] = np.int64(counts[np.uint64(i), column])
+        for j in range(sampled_firings.shape[2]):
+            sampled_firings[r, sample, j] = firings[np.uint64(j), column]
+        sample += 1
+    return sample
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
+def integrate(factor, offset, counts, running, column, span):  # type: ignore[no-untyped-def]
     """Add a time span of constant counts to the running integrals."""
-    for q in range(averages.factor.shape[0]):
-        running[q] += monomial(averages.factor, averages.offset, q, counts) * span
+    for q in range(np.uint64(factor.shape[0])):
+        running[q, column] += monomial(factor, offset, q, counts, column) * span
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def close_windows(averages, r, since, later, counts, firings, running):  # type: ignore[no-untyped-def]
+def close_windows(averages, r, since, later, counts, firings, running, column):  # type: ignore[no-untyped-def]
     """Integrate up to each edge before `later` and close its window; returns the time integrated up to."""
     edge = averages.next_edge[r]
     while edge < averages.edge.size and not later <= averages.edge[edge]:
-        integrate(averages, counts, running, averages.edge[edge] - since)
+        integrate(averages.factor, averages.offset, counts, running, column, averages.edge[edge] - since)
         since = averages.edge[edge]
-        for q in range(running.size):
+        for q in range(averages.factor.shape[0]):
             if edge > 0:
-                averages.integral[r, edge - 1, q] = running[q]
-            running[q] = 0.0
-        for j in range(firings.size):
-            averages.firings[r, edge, j] = firings[j]
+                averages.integral[r, edge - 1, q] = running[q, column]
+            running[q, column] = 0.0
+        for j in range(averages.firings.shape[2]):
+            averages.firings[r, edge, j] = firings[j, column]
         edge += 1
     averages.next_edge[r] = edge
     return since
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def sample_until(samples, r, sample, later, counts, firings):  # type: ignore[no-untyped-def]
-    """Record the state on each grid point before `later`; returns the index of the next grid point.
-
-    firings : at least M entries.
-    """
-    while sample < samples.time.size and not later <= samples.time[sample]:
-        for i in range(samples.counts.shape[2]):
-            samples.counts[r, sample, i] = np.int64(counts[i])
-        for j in range(samples.firings.shape[2]):
-            samples.firings[r, sample, j] = firings[j]
-        sample += 1
-    return sample
+def cut_windows(averages, r, since, end, counts, firings, running, column):  # type: ignore[no-untyped-def]
+    """Keep what a replicate that stops at `end` has of its window, and hold its firings at the later edges."""
+    integrate(averages.factor, averages.offset, counts, running, column, end - since)
+    edge = averages.next_edge[r]
+    if 0 < edge < averages.edge.size:
+        for q in range(averages.factor.shape[0]):
+            averages.integral[r, edge - 1, q] = running[q, column]
+    for e in range(edge, averages.edge.size):
+        for j in range(averages.firings.shape[2]):
+            averages.firings[r, e, j] = firings[j, column]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
-def occupy(occupancy, r, s, count, until):  # type: ignore[no-untyped-def]
+def occupy(seconds, since, span, width, r, s, count, until):  # type: ignore[no-untyped-def]
     """Credit followed species s with the time it has stood at `count`, up to `until`."""
-    begin = max(occupancy.since[r, s], occupancy.span[0])
-    end = min(until, occupancy.span[1])
+    begin = max(since[r, s], span[0])
+    end = min(until, span[1])
     if end > begin:
-        b = min(np.int64(count) // occupancy.width[s], np.int64(occupancy.seconds.shape[2] - 1))
-        occupancy.seconds[r, s, b] += end - begin
-    occupancy.since[r, s] = until
+        b = min(np.int64(count) // width[s], np.int64(seconds.shape[2] - 1))
+        seconds[r, s, b] += end - begin
+    since[r, s] = until
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def holds(conditions, r, c, counts):  # type: ignore[no-untyped-def]
-    """Whether condition c is met by these counts."""
-    value = 0.0
-    for t in range(conditions.term_start[c], conditions.term_start[c + 1]):
-        value += conditions.weight[r, t] * monomial(conditions.factor, conditions.offset, t, counts)
-    return value > 0.0
+def settle_histograms(occupancy, r, counts, column, end):  # type: ignore[no-untyped-def]
+    """Credit every followed species with the time up to the end of its replicate."""
+    seconds, since, span, width = occupancy.seconds, occupancy.since, occupancy.span, occupancy.width
+    for s in range(occupancy.species.size):
+        occupy(seconds, since, span, width, r, s, counts[occupancy.species[s], column], end)
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def look_at_conditions(conditions, r, since, later, counts):  # type: ignore[no-untyped-def]
+def look_at_conditions(conditions, r, since, later, counts, column):  # type: ignore[no-untyped-def]
     """Note conditions first met by the state that stands from `since` to `later`; returns when to stop, inf if not."""
     stop = np.inf
     for c in range(conditions.stops.size):
-        if conditions.first_met[r, c] < np.inf:
-            continue
         begin, end = conditions.span[c, 0], conditions.span[c, 1]
-        if not later > begin or since > end or not holds(conditions, r, c, counts):
+        if conditions.first_met[r, c] < np.inf or not later > begin or since > end:
             continue
-        moment = max(since, begin)
-        conditions.first_met[r, c] = moment
-        if conditions.stops[c] != 0 and moment < stop:
-            stop = moment
+        value = 0.0
+        for t in range(conditions.term_start[c], conditions.term_start[c + 1]):
+            term = monomial(conditions.factor, conditions.offset, t, counts, column)
+            value += conditions.weight[r, t] * term
+        if value > 0.0:
+            moment = max(since, begin)
+            conditions.first_met[r, c] = moment
+            if conditions.stops[c] != 0 and moment < stop:
+                stop = moment
     return stop
-
-
-@njit(nogil=True, cache=CACHE, error_model="numpy")
-def close(samples, recorders, r, sample, since, end, stopped, counts, firings, running):  # type: ignore[no-untyped-def]
-    """Finish the record of a replicate that ends at `end`: hold the rest of the grid, close or cut its windows."""
-    averages, occupancy = recorders.averages, recorders.occupancy
-    if stopped:
-        if averages.edge.size > 0:
-            since = close_windows(averages, r, since, end, counts, firings, running)
-            integrate(averages, counts, running, end - since)
-            edge = averages.next_edge[r]
-            if 0 < edge < averages.edge.size:
-                for q in range(running.size):
-                    averages.integral[r, edge - 1, q] = running[q]
-            for e in range(edge, averages.edge.size):
-                for j in range(firings.size):
-                    averages.firings[r, e, j] = firings[j]
-        sample = sample_until(samples, r, sample, np.inf, counts, firings)
-    for s in range(occupancy.species.size):
-        occupy(occupancy, r, s, counts[occupancy.species[s]], end)
-    return sample

@@ -20,13 +20,14 @@ from driblet.engines.contract import (
 )
 from driblet.engines.random_stream import minus_log, next_word, selection_uniform, waiting_uniform
 from driblet.engines.recording import (
-    close,
     close_windows,
+    cut_windows,
     integrate,
     look_at_conditions,
     next_mark,
     occupy,
     sample_until,
+    settle_histograms,
 )
 from driblet.engines.sums import FAN, STRIDE, select, within
 
@@ -102,19 +103,26 @@ def advance_scalar(network, rows, refresh, rates, state, samples, budget, record
     grid_size = samples.time.size
     averaging, watching = averages.edge.size > 0, conditions.stops.size > 0
     following, logging = occupancy.species.size > 0, log.time.shape[1] > 0
+    seconds, standing_since, span = occupancy.seconds, occupancy.since, occupancy.span
+    slot, bin_width = occupancy.slot, occupancy.width
     value = np.empty(rows.end)
     cumulative = np.empty(rows.end)
     left = budget
+    every = 1 if budget > 0 else 2  # no literal: views of no particular layout, see recording.py
+    columns, firing_columns = state.counts.T[::every], state.firings.T[::every]
+    running = averages.running.T[::every]
+    time, edge, next_edge = samples.time, averages.edge, averages.next_edge
+    factor, offset = averages.factor, averages.offset
     for r in range(replicates):
         if state.reason[r] != RUNNING:
             continue
         if left <= 0:
             break
-        counts, constants, firings, running = state.counts[r], rates[r], state.firings[r], averages.running[r]
+        counts, constants, firings = state.counts[r], rates[r], state.firings[r]
         sum_all(network, rows, constants, counts, value, cumulative)
         clock = state.clock[r]
         sample = state.next_sample[r]
-        mark = next_mark(samples, averages, r, sample)
+        mark = next_mark(time, edge, next_edge, r, sample)
         while left > 0:
             if logging and log.used[r] == log.time.shape[1]:
                 state.reason[r] = BUFFER_FULL
@@ -124,31 +132,37 @@ def advance_scalar(network, rows, refresh, rates, state, samples, budget, record
             target = selection_uniform(next_word(state.stream, r)) * total
             later = clock + wait  # inf when nothing can fire, so that the grid below ends the replicate
             since = clock
+            stop = np.inf
             if watching:
-                stop = look_at_conditions(conditions, r, clock, later, counts)
-                if stop < np.inf:
-                    sample = close(samples, recorders, r, sample, since, stop, True, counts, firings, running)
-                    state.reason[r] = STOP_CONDITION
-                    clock = stop
-                    break
+                stop = look_at_conditions(conditions, r, clock, later, columns, r)
+                later = min(later, stop)
             if not later <= mark:
                 if averaging:
-                    since = close_windows(averages, r, since, later, counts, firings, running)
-                sample = sample_until(samples, r, sample, later, counts, firings)
-                if sample == grid_size:
-                    clock = samples.time[grid_size - 1]
-                    close(samples, recorders, r, sample, since, clock, False, counts, firings, running)
-                    state.reason[r] = TIME_REACHED if total > 0.0 else NOTHING_CAN_FIRE
-                    break
-                mark = next_mark(samples, averages, r, sample)
+                    since = close_windows(averages, r, since, later, columns, firing_columns, running, r)
+                sample = sample_until(
+                    time, samples.counts, samples.firings, r, sample, later, columns, firing_columns, r
+                )
+                mark = next_mark(time, edge, next_edge, r, sample)
+            if sample == grid_size or stop < np.inf:
+                clock = time[grid_size - 1] if sample == grid_size else stop
+                state.reason[r] = TIME_REACHED if total > 0.0 else NOTHING_CAN_FIRE
+                settle_histograms(occupancy, r, columns, r, clock)
+                if sample < grid_size:
+                    state.reason[r] = STOP_CONDITION
+                    if averaging:
+                        cut_windows(averages, r, since, clock, columns, firing_columns, running, r)
+                    sample = sample_until(
+                        time, samples.counts, samples.firings, r, sample, np.inf, columns, firing_columns, r
+                    )
+                break
             if averaging:
-                integrate(averages, counts, running, later - since)
+                integrate(factor, offset, columns, running, r, later - since)
             clock = later
             j = find_channel(rows, cumulative, target)
             for k in range(np.uint64(network.change_start[j]), np.uint64(network.change_start[j + _ONE])):
                 i = np.uint64(network.change_species[k])
-                if following and occupancy.slot[i] >= 0:
-                    occupy(occupancy, r, occupancy.slot[i], counts[i], clock)
+                if following and slot[i] >= 0:
+                    occupy(seconds, standing_since, span, bin_width, r, slot[i], counts[i], clock)
                 counts[i] += network.change_amount[k]
             for k in range(np.uint64(network.depend_start[j]), np.uint64(network.depend_start[j + _ONE])):
                 d = np.uint64(network.depend_channel[k])
