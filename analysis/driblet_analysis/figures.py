@@ -129,8 +129,8 @@ def _overview(run: Run) -> Figure:
     for k, (label, values, i) in enumerate(rows):
         colour = COLOURS[k % len(COLOURS)]
         _trajectories(axes[k, 0], run.time_s / divisor, values, label, colour, legend=k == 0)
-        law = None if laws is None or i is None else _mean_marginal(laws, i)
-        _end_states(axes[k, 1], values[:, -1], label, colour, law, legend=k == 0)
+        law = None if laws is None or i is None else mean_marginal(laws, i)
+        draw_end_states(axes[k, 1], values[:, -1], label, colour, law, legend=k == 0)
     axes[-1, 0].set_xlabel(f"time ({unit})")
     figure.align_ylabels(axes[:, 0])
     axes[0, 0].set_title("over time")
@@ -161,9 +161,10 @@ def _quiet() -> Iterator[None]:
         yield
 
 
-def _end_states(
+def draw_end_states(
     ax: Axes, values: Array, label: str, colour: str, law: tuple[Array, Array] | None, legend: bool
 ) -> None:
+    """Histogram of end states, the exact law over it where there is one. law : (counts, probabilities)."""
     values = values[np.isfinite(values)]
     ax.set_ylabel("share")
     ax.set_xlabel(label)
@@ -191,7 +192,7 @@ def _end_states(
         ax.legend(loc="best")
 
 
-def _mean_marginal(laws: list[CountLaw], i: int) -> tuple[Array, Array]:
+def mean_marginal(laws: list[CountLaw], i: int) -> tuple[Array, Array]:
     """Average over compartments of the marginal law of species i: (counts, probabilities)."""
     shared = Counter(id(law) for law in laws)  # compartments of one load and size share their law
     parts = [(law.marginal(i), shared.pop(id(law))) for law in laws if id(law) in shared]

@@ -22,12 +22,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.errors import InputError, InterruptedRunError, Problem, one_problem
+from driblet.events import event_arrays
 from driblet.loading import additions_of, prepare
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.readouts import evaluate
 from driblet.results import Run
 from driblet.segments import begin, keep, segments
 from driblet.store import FORMAT, Block, Layout, RunWriter
+from driblet.sums import SumsPlan
 from driblet.system import RunSettings, System
 from driblet.system.tables import ENGINES, LARGEST_SEED, LONGEST_TIME, MOST_REPLICATES, SHORTEST_TIME
 from driblet.version import __version__
@@ -98,6 +100,8 @@ def run(
     sample_every: float | None = None,
     seed: int | None = None,
     engine: str | None = None,
+    burn_in: float | None = None,
+    record: str | None = None,
     threads: int | None = None,
     key: int = 0,
     resume: bool = False,
@@ -117,13 +121,17 @@ def run(
         "sample_every_s": sample_every,
         "seed": seed,
         "engine": engine,
+        "burn_in_s": burn_in,
+        "record": record,
     }
     given = {k: v for k, v in changes.items() if v is not None}
     _check_arguments(given, threads)
-    plain = {k: v if k == "engine" else float(v) if k.endswith("_s") else int(v) for k, v in given.items()}
+    plain = {k: v if isinstance(v, str) else float(v) if k.endswith("_s") else int(v) for k, v in given.items()}
     settings = replace(system.settings, **plain)  # type: ignore[arg-type]
-    times = sample_times(settings)
-    layout = _layout(system, settings, times, key)
+    network = Network.of(system)
+    sums = SumsPlan.of(system, network, sample_times(settings)[-1], settings.burn_in_s)
+    times = sample_times(settings) if settings.record != "summary" else np.array([0.0, settings.duration_s])
+    layout = _layout(system, settings, times, key, sums)
     path = Path(output) if output is not None else None
     if path is not None and resume and path.is_file():
         existing = Run(path)
@@ -131,13 +139,13 @@ def run(
             return existing
         existing.close()
         raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
-    segments(system, times)  # before anything is written
+    segments(system, times)  # its faults are told before anything is written
     writer = RunWriter(path, layout, resume=resume, force=force)
-    file = _Ensemble(system, settings, layout, writer, threads or os.cpu_count() or 1, on_progress, key).run()
+    file = _Ensemble(system, settings, layout, writer, sums, threads or os.cpu_count() or 1, on_progress, key).run()
     return Run(file) if path is None else Run(path)
 
 
-def _layout(system: System, settings: RunSettings, times: NDArray[np.float64], key: int) -> Layout:
+def _layout(system: System, settings: RunSettings, times: NDArray[np.float64], key: int, sums: SumsPlan) -> Layout:
     species, reactions = len(system.free_species), len(system.reactions)
     row_bytes = 8 * len(times) * max(1, species + 4 * reactions + len(system.readouts))
     unit = max(1, min(-(-settings.replicates // 64), _UNIT_BYTES // row_bytes))
@@ -147,6 +155,8 @@ def _layout(system: System, settings: RunSettings, times: NDArray[np.float64], k
         "replicates": settings.replicates,
         "duration_s": settings.duration_s,
         "sample_every_s": settings.sample_every_s or settings.duration_s / DEFAULT_SAMPLES,
+        "record": settings.record,
+        **({} if settings.burn_in_s is None else {"burn_in_s": settings.burn_in_s}),
         **({"stream_key": key} if key else {}),
     }
     identity = hashlib.sha256(json.dumps([FORMAT, system.text, facts], sort_keys=True).encode()).hexdigest()[:32]
@@ -173,6 +183,8 @@ def _layout(system: System, settings: RunSettings, times: NDArray[np.float64], k
         identity,
         system.text,
         provenance,
+        sums.per_replicate + (event_arrays() if settings.record == "events" else ()),
+        sums.fixed,
     )
 
 
@@ -202,14 +214,19 @@ class _Ensemble:
         settings: RunSettings,
         layout: Layout,
         writer: RunWriter,
+        sums: SumsPlan,
         threads: int,
         on_progress: Callable[[Progress], None] | None,
         key: int = 0,
     ) -> None:
         self.system, self.settings, self.layout, self.writer = system, settings, layout, writer
         self.threads, self.on_progress, self.key = threads, on_progress, key
+        self.sums = sums
         self.network = Network.of(system)
-        self.segments = segments(system, layout.time_s)
+        # a summary keeps two samples, but its covariances are taken from more
+        hidden = settings.record == "summary"
+        self.time_s = np.unique(np.append(sums.hidden_grid(), 0.0)) if hidden else layout.time_s
+        self.segments = segments(system, self.time_s)
         self.stop = threading.Event()
         self.running: dict[int, _Unit] = {}
         self.events = 0
@@ -281,7 +298,7 @@ class _Ensemble:
     def _report(self, finished: int) -> None:
         if self.on_progress is None:
             return
-        grid = len(self.layout.time_s)
+        grid = len(self.time_s)
         units = list(self.running.values())
         partial = sum(
             min(grid * len(u.next_sample), float(u.next_sample.sum()) + u.before * len(u.next_sample)) / grid
@@ -291,34 +308,52 @@ class _Ensemble:
         events = self.events + sum(u.events for u in units)
         # a unit that has just passed an addition can seem to be behind for a moment
         self.fraction = max(self.fraction, min(1.0, (finished + partial) / self.layout.replicates))
-        self.on_progress(Progress(self.fraction, finished, self.layout.replicates, events, time.monotonic() - self.started))
+        self.on_progress(
+            Progress(self.fraction, finished, self.layout.replicates, events, time.monotonic() - self.started)
+        )
 
     def _simulate(self, unit: int) -> Block:
         """One unit from start to end, in a worker thread."""
-        from driblet.engines.contract import COUNT_OVERFLOW, REASONS, RUNNING, new_samples, new_state
+        from driblet.engines.contract import COUNT_OVERFLOW, REASONS, RUNNING, Samples, new_samples, new_state
         from driblet.engines.exact import advance
+        from driblet.events import EventRecord
 
         watched = self.running[unit] = _Unit()
         rows = self._rows(unit)
         start = prepare(self.system, self.settings.seed, rows, self.key)
         rates = self.network.rates(start.omega)
         state = new_state(start.counts, start.stream, len(self.network.channels))
-        samples = new_samples(self.layout.time_s, len(rows), len(self.network.species), len(self.network.channels))
+        samples = new_samples(self.time_s, len(rows), len(self.network.species), len(self.network.channels))
         watched.next_sample = state.next_sample
         added = additions_of(self.system, self.settings.seed, rows, start.omega, self.key)
         columns = [self.network.species.index(a.species) for a in self.system.additions]
+        totals = self.sums.empty(len(rows))
+        events_seen = EventRecord(len(rows)) if self.settings.record == "events" else None
         for segment in self.segments:
             part = begin(segment, state, samples, added, columns)
+            recorders = self.sums.recorders(state, segment.start_s, segment.end_s)
+            if events_seen is not None:
+                recorders = events_seen.attach(recorders)
             while (state.reason == RUNNING).any():
                 if self.stop.is_set():
                     raise InterruptedRunError("interrupted")
-                watched.events += int(advance(self.network.arrays, rates, state, part, _BUDGET))
+                watched.events += int(advance(self.network.arrays, rates, state, part, _BUDGET, recorders))
+                if events_seen is not None:
+                    events_seen.drain(state, recorders)
             keep(segment, part, samples)
+            self.sums.collect(recorders, totals)
             watched.before = segment.grid.stop
+        totals["stationary/covariance"] = self.sums.covariance(self.time_s, samples.counts)
+        if events_seen is not None:
+            totals.update(events_seen.results())
+        if len(self.time_s) != len(self.layout.time_s):
+            samples = Samples(self.layout.time_s, samples.counts[:, [0, -1]], samples.firings[:, [0, -1]])
         if (state.reason == COUNT_OVERFLOW).any():
             r = int(np.flatnonzero(state.reason == COUNT_OVERFLOW)[0])
             name = self.network.species[int(np.argmax(state.counts[r, :-1]))]
-            text = f"{REASONS[COUNT_OVERFLOW]} in replicate {rows[r]}: the system grows without bound, or holds too much"
+            text = (
+                f"{REASONS[COUNT_OVERFLOW]} in replicate {rows[r]}: the system grows without bound, or holds too much"
+            )
             raise one_problem(self.system.source, f"species.{name}", text)
         events = state.firings.sum(axis=1)
         return Block(
@@ -336,6 +371,7 @@ class _Ensemble:
                     for r in self.system.readouts
                 },
             },
+            totals,
         )
 
     def _by_reaction(self, firings: NDArray[np.int64], direction: int) -> NDArray[np.int64]:

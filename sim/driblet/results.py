@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from driblet.errors import one_problem
 from driblet.outcomes import Outcomes
-from driblet.store import SERIES, open_run, reading
+from driblet.store import SERIES, digest, open_run, reading
 from driblet.system import System, loads
 
 
@@ -226,6 +226,8 @@ class Run:
         """The system this run simulated, built anew from the text kept in the file."""
         with self._opened() as files:
             text = files[0]["provenance/system_file"].asstr()[()]
+            if files[0]["provenance"].attrs["system_file_sha256"] != digest(text):
+                raise ValueError("the text of the system file has changed")
         return loads(text, f"system file in {self.name}")
 
     @property

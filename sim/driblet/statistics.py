@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import kolmogorov, stdtr
+from scipy.special import fdtrc, kolmogorov, ndtr, stdtr
 
 Array = NDArray[np.float64]
 
@@ -66,3 +67,38 @@ def uniformity(values: Array) -> tuple[float, float]:
     distance = float(max(np.max(steps - x), np.max(x - steps + 1.0 / n)))
     root = np.sqrt(n)
     return distance, float(kolmogorov((root + 0.12 + 0.11 / root) * distance))
+
+
+class Hotelling(NamedTuple):
+    """T-squared of a mean vector against zero. statistic : T^2; p; dimensions : of the vector, after the rank is found."""
+
+    statistic: float
+    p: float
+    dimensions: int
+
+
+def hotelling(differences: Array) -> Hotelling:
+    """Hotelling's one-sample T-squared against a zero mean (Ann. Math. Stat. 2:360, 1931).
+
+    differences : shape=(samples, dimensions). Directions without variance are left out (their mean must be tested apart).
+    Raises ValueError when there are no more samples than dimensions.
+    """
+    x = np.atleast_2d(np.asarray(differences, dtype=float))
+    n = len(x)
+    scale = x.std(axis=0, ddof=1)
+    x = x[:, scale > 0] / scale[scale > 0]
+    if x.shape[1] == 0:
+        return Hotelling(0.0, 1.0, 0)
+    mean = x.mean(axis=0)
+    values, vectors = np.linalg.eigh(np.atleast_2d(np.cov(x, rowvar=False)))
+    kept = values > 1e-10 * values.max()
+    k = int(kept.sum())
+    if n <= k:
+        raise ValueError(f"{n} samples cannot test {k} dimensions")
+    t2 = float(n * np.sum((vectors[:, kept].T @ mean) ** 2 / values[kept]))
+    return Hotelling(t2, float(fdtrc(k, n - k, t2 * (n - k) / (k * (n - 1)))), k)
+
+
+def normal_p(z: Array) -> Array:
+    """Two-sided p of standard normal scores."""
+    return np.asarray(2.0 * ndtr(-np.abs(z)))

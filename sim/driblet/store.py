@@ -7,6 +7,7 @@ into RUN.h5, again through a temporary name. One unit of replicates is one row o
 
 from __future__ import annotations
 
+import hashlib
 import itertools
 import json
 import os
@@ -35,7 +36,10 @@ SERIES = ("counts", "firings_forward", "firings_backward")
 
 @dataclass(frozen=True)
 class PerReplicate:
-    """An array of any trailing shape per replicate: its path in the file, its shape without replicates, dtype and unit."""
+    """An array of any trailing shape per replicate: its path in the file, its shape without replicates, dtype and unit.
+
+    dtype object stands for doubles of any number in each replicate.
+    """
 
     path: str
     shape: tuple[int, ...]
@@ -92,6 +96,11 @@ class Block:
     def nbytes(self) -> int:
         """Size of the arrays in memory."""
         return sum(a.nbytes for a in (*self.series.values(), *self.values.values()))
+
+
+def digest(text: str) -> str:
+    """SHA-256 of a text, as hexadecimal digits."""
+    return hashlib.sha256(text.encode()).hexdigest()
 
 
 def parts_folder(path: Path) -> Path:
@@ -176,31 +185,26 @@ class RunWriter:
         """
         blocks = sorted(self.waiting, key=lambda b: b.unit)
         if self.path is None:
-            file = h5py.File(
-                f"run in memory {next(_MEMORY_RUNS)}",
-                "w",
-                driver="core",
-                backing_store=False,
-                libver="v110",
-                track_order=True,
-            )
+            file = _memory_file(f"run in memory {next(_MEMORY_RUNS)}")
             _fill(file, self.layout, blocks)
             file["provenance"].attrs.update(closing)
             return file
         parts = parts_folder(self.path)
+        if _shards(parts):
+            self.flush()
         shards = _shards(parts)
 
         def write(file: h5py.File) -> None:
             if shards:
-                self.flush()
-                _merge(file, self.layout, _shards(parts))
+                _merge(file, self.layout, shards)
             else:
                 _fill(file, self.layout, blocks)
             file["provenance"].attrs.update(closing)
 
         with _writing(self.path):
             parts.mkdir(exist_ok=True)
-            _write_atomically(self.path, parts, write)
+            size = sum(shard.stat().st_size for shard in shards)
+            _write_atomically(self.path, parts, write, size + size // 50 + (1 << 20) if shards else None)
         self.waiting = []
         shutil.rmtree(parts, ignore_errors=True)
         return None
@@ -232,15 +236,37 @@ def _writing(path: Path) -> Iterator[None]:
         raise one_problem(str(path), "", f"cannot be written: {reason[:1].lower()}{reason[1:]}") from error
 
 
-def _write_atomically(path: Path, workplace: Path, fill: Any) -> None:
-    """Make a file that is there whole or not at all; `workplace` : a folder on the same disk for the unfinished one."""
+def _memory_file(name: str) -> h5py.File:
+    return h5py.File(name, "w", driver="core", backing_store=False, libver="v110", track_order=True)
+
+
+def _write_atomically(path: Path, workplace: Path, fill: Any, bytes_at_most: int | None = None) -> None:
+    """Make a file that is there whole or not at all; `workplace` : a folder on the same disk for the unfinished one.
+
+    HDF5 does not survive a failed write: it tells of it again and again, and the process may end in a crash. So the file is
+    made in memory and written by ourselves, or, where it would be large (`bytes_at_most` says how large), HDF5 writes it
+    once the disk has shown that there is room.
+    """
     # a name of our own: the longest name a run file may have leaves no room for additions
     temporary = workplace / f"{'shard' if path.parent == workplace else 'run'}.{os.getpid()}.tmp"
     try:
-        with h5py.File(temporary, "w", libver="v110", track_order=True) as file:
-            fill(file)
-            file.flush()
-            os.fsync(file.id.get_vfd_handle())
+        if bytes_at_most is None:
+            with _memory_file(str(temporary)) as file:
+                fill(file)
+                file.flush()
+                image = file.id.get_file_image()
+            with temporary.open("wb") as stream:
+                stream.write(image)
+                stream.flush()
+                os.fsync(stream.fileno())
+        else:
+            with temporary.open("wb") as stream:
+                if hasattr(os, "posix_fallocate"):  # not on macOS
+                    os.posix_fallocate(stream.fileno(), 0, bytes_at_most)
+            with h5py.File(temporary, "w", libver="v110", track_order=True) as file:
+                fill(file)
+                file.flush()
+                os.fsync(file.id.get_vfd_handle())
         os.replace(temporary, path)
     except BaseException:
         temporary.unlink(missing_ok=True)
@@ -265,11 +291,15 @@ def _frame(file: h5py.File, layout: Layout, replicate: NDArray[np.int64], units:
         "reaction": np.array(layout.reactions, dtype=object),
     }
     for name, values in scales.items():
-        dataset = file.create_dataset(name, data=values, dtype=text if values.dtype == object else None)
+        words = values.dtype == object
+        dataset = file.create_dataset(
+            name, data=values, dtype=text if words else None, fletcher32=values.size > 0 and not words
+        )
         dataset.make_scale(name)
     file["time"].attrs["units"] = "s"
     group = file.create_group("provenance")
     group.create_dataset("system_file", data=layout.system_text, dtype=text)
+    group.attrs["system_file_sha256"] = digest(layout.system_text)
     group.create_dataset("units", data=np.array(units, dtype=np.int64))
     group.attrs["readout_units"] = json.dumps(dict(zip(layout.readouts, layout.readout_units, strict=True)))
     group.attrs["replicates_per_unit"] = layout.unit
@@ -313,19 +343,20 @@ def _create_series(file: h5py.File, layout: Layout, rows: int) -> None:
         for axis, scale in enumerate(["replicate", "time", *third]):
             dataset.dims[axis].attach_scale(file[scale])
     for name, dtype, unit in (("volume", np.float64, "L"), ("end_reason", np.int64, "1"), ("events", np.int64, "1")):
-        dataset = file.create_dataset(name, shape=(rows,), dtype=dtype)
+        dataset = file.create_dataset(name, shape=(rows,), dtype=dtype, fletcher32=rows > 0)
         dataset.attrs["units"] = unit
         dataset.dims[0].attach_scale(file["replicate"])
     for one in layout.per_replicate:
-        plain = 0 in one.shape or not rows
+        plain = 0 in one.shape or not rows or one.dtype == object
         dataset = file.create_dataset(
             one.path,
             shape=(rows, *one.shape),
-            dtype=one.dtype,
+            dtype=h5py.vlen_dtype(np.float64) if one.dtype == object else one.dtype,
             chunks=None if plain else (min(rows, layout.unit), *one.shape),
             compression=None if plain else "gzip",
             compression_opts=None if plain else 1,
             shuffle=not plain,
+            fletcher32=not plain,
         )
         dataset.attrs["units"] = one.unit
 

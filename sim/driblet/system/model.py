@@ -138,13 +138,19 @@ class Requirement:
 
 @dataclass(frozen=True)
 class RunSettings:
-    """How a system is run unless the caller says otherwise."""
+    """How a system is run unless the caller says otherwise.
+
+    Attributes: burn_in_s : stated time after which a run counts as stationary, None to have it found; record : "summary",
+    "trajectories" or "events", how much the run file keeps.
+    """
 
     engine: str = "exact"
     replicates: int = 100
     duration_s: float = 0.0
     sample_every_s: float = 0.0
     seed: int = 0
+    burn_in_s: float | None = None
+    record: str = "trajectories"
 
 
 @dataclass(frozen=True)

@@ -1,0 +1,147 @@
+"""What a run sums up while it runs, so that statistics need no dense trajectory.
+
+Exact time integrals over windows of the run, of each channel's monomial (for firings against propensities) and of counts
+(for time-weighted means), and the time spent at each count after the burn-in (histograms). Covariances are taken from
+samples after the burn-in: a sum of every pair of counts at every event would cost more than the simulation.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from driblet.energetics.cycles import conservation_laws
+from driblet.engines.contract import EnsembleState, Recorders
+from driblet.engines.recording import new_averages, new_occupancy, recorders_for
+from driblet.network import Network
+from driblet.store import PerReplicate
+from driblet.system import System
+
+WINDOWS = 10
+BINS = 64
+HIDDEN_SAMPLES = 257
+
+
+@dataclass(frozen=True)
+class SumsPlan:
+    """Which sums a run keeps.
+
+    Attributes: edge_s : (E,), window edges; factor : int64, (Q, 3), offset : (Q, 3), monomials in the order channels,
+    species; bin_width : int64, (N,), counts per bin of the histograms; span_s : when histograms are gathered.
+    """
+
+    edge_s: NDArray[np.float64]
+    factor: NDArray[np.int64]
+    offset: NDArray[np.float64]
+    bin_width: NDArray[np.int64]
+    span_s: tuple[float, float]
+    channels: int
+    species: int
+
+    @classmethod
+    def of(cls, system: System, network: Network, duration_s: float, burn_in_s: float | None) -> SumsPlan:
+        """The sums for a run of `duration_s`; a stated burn-in is an edge of its own."""
+        if burn_in_s is None:
+            edges = np.linspace(0.0, duration_s, WINDOWS + 1)
+            begin = 0.5 * duration_s
+        else:
+            edges = np.concatenate([[0.0], np.linspace(burn_in_s, duration_s, WINDOWS + 1)])
+            begin = burn_in_s
+            if burn_in_s == 0.0:
+                edges = edges[1:]
+        edges[-1] = duration_s
+        n = len(network.species)
+        singles = np.column_stack([np.arange(n), np.full(n, n), np.full(n, n)])
+        arrays = network.arrays
+        return cls(
+            edges,
+            np.vstack([arrays.reactant, singles]).astype(np.int64),
+            np.vstack([arrays.offset, np.zeros((n, 3))]),
+            _bin_widths(system, network),
+            (begin, duration_s),
+            len(network.channels),
+            n,
+        )
+
+    def recorders(self, state: EnsembleState, start_s: float, end_s: float) -> Recorders:
+        """Fresh recorders for the replicates of `state` over a stretch of the run."""
+        replicates = len(state.reason)
+        inside = self.edge_s[(self.edge_s > start_s) & (self.edge_s < end_s)]
+        edges = np.concatenate([[start_s], inside, [end_s]])
+        averages = new_averages(edges, self.factor, self.offset, replicates, self.channels)
+        span = (max(start_s, self.span_s[0]), min(end_s, self.span_s[1]))
+        occupancy = new_occupancy(np.arange(self.species), self.bin_width, BINS, span, replicates, self.species)
+        occupancy.since[:] = start_s
+        return recorders_for(state, averages, occupancy)
+
+    def empty(self, replicates: int) -> dict[str, NDArray[Any]]:
+        """Sums of nothing yet, by the names they have in a run file, replicates first."""
+        return {
+            one.path: np.zeros((replicates, *one.shape), dtype=one.dtype) for one in self.per_replicate if one.shape
+        }
+
+    def collect(self, recorders: Recorders, into: dict[str, NDArray[Any]]) -> None:
+        """Add what the recorders of one stretch gathered."""
+        averages = recorders.averages
+        for k, start in enumerate(averages.edge[:-1]):
+            window = int(np.searchsorted(self.edge_s, start, side="right")) - 1
+            into["stationary/monomial_time"][:, window] += averages.integral[:, k, : self.channels]
+            into["stationary/count_time"][:, window] += averages.integral[:, k, self.channels :]
+        for k, edge in enumerate(averages.edge):
+            for at in np.flatnonzero(self.edge_s == edge):
+                into["stationary/window_firings"][:, int(at)] = averages.firings[:, k]
+        into["stationary/occupancy_time"] += recorders.occupancy.seconds
+
+    @property
+    def per_replicate(self) -> tuple[PerReplicate, ...]:
+        """The arrays as the run file declares them."""
+        edges, n, m = len(self.edge_s), self.species, self.channels
+        return (
+            PerReplicate("stationary/monomial_time", (edges - 1, m), np.float64, "s"),
+            PerReplicate("stationary/count_time", (edges - 1, n), np.float64, "s"),
+            PerReplicate("stationary/window_firings", (edges, m), np.int64, "1"),
+            PerReplicate("stationary/occupancy_time", (n, BINS), np.float64, "s"),
+            PerReplicate("stationary/covariance", (n, n), np.float64, "1"),
+        )
+
+    @property
+    def fixed(self) -> dict[str, NDArray[Any]]:
+        """What all replicates share, as the run file declares it."""
+        return {
+            "stationary/window_edge": self.edge_s,
+            "stationary/bin_width": self.bin_width,
+            "stationary/span": np.array(self.span_s),
+        }
+
+    def hidden_grid(self) -> NDArray[np.float64]:
+        """Times, s, at which a run without trajectories is sampled for its covariances; the end is the last."""
+        return np.linspace(self.span_s[0], self.span_s[1], HIDDEN_SAMPLES)
+
+    def covariance(self, time_s: NDArray[np.float64], counts: NDArray[np.int64]) -> NDArray[np.float64]:
+        """Covariance of counts over the samples within the span, shape=(replicates, species, species)."""
+        part = counts[:, (time_s >= self.span_s[0]) & (time_s <= self.span_s[1])].astype(float)
+        if part.shape[1] < 2:
+            return np.full((len(part), self.species, self.species), np.nan)
+        away = part - part.mean(axis=1, keepdims=True)
+        return np.asarray(np.einsum("rti,rtj->rij", away, away) / part.shape[1])
+
+
+def _bin_widths(system: System, network: Network) -> NDArray[np.int64]:
+    """Counts per bin so that BINS bins hold what a species can reach: its conserved sums, else twice its load and more."""
+    omega = system.compartment.omega * (1.0 + 4.0 * system.compartment.cv) ** (
+        3 if system.compartment.by_diameter else 1
+    )
+    load = np.array([s.mean_copies(omega) for s in system.free_species])
+    poisson = np.array([s.loading == "poisson" for s in system.free_species])
+    load = load + np.where(poisson, 6.0 * np.sqrt(load) + 6.0, 0.0)
+    top = np.full(len(load), np.inf)
+    for law in conservation_laws(network.stoichiometry):
+        if (law >= 0).all():
+            held = law > 0
+            top[held] = np.minimum(top[held], (law @ load) / law[held])
+    open_ended = ~np.isfinite(top)
+    top[open_ended] = 2.0 * load[open_ended] + 50.0
+    return np.maximum(1, np.ceil((top + 1.0) / BINS)).astype(np.int64)
