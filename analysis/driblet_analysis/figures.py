@@ -22,6 +22,7 @@ from numpy.typing import NDArray
 from driblet.errors import CannotAnswerError, one_problem
 from driblet.results import Run
 from driblet_analysis.references.count_equilibrium import CountLaw, count_law
+from driblet_analysis.thresholds import draw_thresholds, judged_rows
 
 Array = NDArray[np.float64]
 COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#6B6B6B")
@@ -115,6 +116,10 @@ def _overview(run: Run) -> Figure:
     ]
     for name, unit in run.readout_units.items():
         rows.append((f"{name} ({unit})" if unit != "1" else name, run.readout(name), None))
+    names = [run.species[i] for i in changing] + list(run.readout_units)
+    for name, label, judged in judged_rows(run, names):
+        names.append(name)
+        rows.append((label, judged, None))
     left_out = max(0, len(rows) - MOST_ROWS)
     rows = rows[:MOST_ROWS]
     laws = laws_of(run)
@@ -131,6 +136,7 @@ def _overview(run: Run) -> Figure:
         _trajectories(axes[k, 0], run.time_s / divisor, values, label, colour, legend=k == 0)
         law = None if laws is None or i is None else mean_marginal(laws, i)
         draw_end_states(axes[k, 1], values[:, -1], label, colour, law, legend=k == 0)
+    draw_thresholds(list(axes[:, 0]), run.system, names)
     axes[-1, 0].set_xlabel(f"time ({unit})")
     figure.align_ylabels(axes[:, 0])
     axes[0, 0].set_title("over time")

@@ -81,13 +81,22 @@ def _print_one(out: Console, one: Lifetime) -> None:
         )
     if one.traits:
         rows = [
-            [f"{t.quantity} ({t.unit})", number(t.failing), number(t.meeting), f"{t.effect:+.2f}".replace("-", "−"), number(t.p, 2)]
+            [
+                f"{t.quantity} ({t.unit})",
+                number(t.failing),
+                number(t.meeting),
+                f"{t.effect:+.2f}".replace("-", "−"),
+                number(t.p, 2),
+            ]
             for t in one.traits
         ]
         columns = ["at the start", "failing, median", "meeting, median", "effect, −1 to 1", "corrected p"]
         out.print(table(f"{one.share.name}: what failing compartments had in common", columns, rows))
     elif one.share.failing:
-        out.print(f"{one.share.name}: nothing told about what failing compartments had in common: {one.traits_missing}", markup=False)
+        out.print(
+            f"{one.share.name}: nothing told about what failing compartments had in common: {one.traits_missing}",
+            markup=False,
+        )
 
 
 def _times(interval: Interval) -> list[str]:

@@ -28,6 +28,10 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "run": ("driblet.commands.run:run", "Simulate an ensemble of compartments into a run file."),
     "show": ("driblet.commands.show:show", "Print what a run file holds."),
     "check": ("driblet_analysis.commands.check:check", "Hold a run against the exact equilibrium of its energies."),
+    "lifetime": (
+        "driblet_analysis.commands.lifetime:lifetime",
+        "Tell how long requirements hold, in how many compartments.",
+    ),
     "plot": ("driblet_analysis.commands.plot:plot", "Draw trajectories and histograms of a run."),
     "reference": ("driblet.commands.reference:reference", "List or explain the energies of the reference table."),
     "sweep": ("driblet_analysis.commands.sweep:sweep", "Simulate many points of a system, here or on a cluster."),

@@ -71,7 +71,9 @@ def requirement_notes(rows: list[ShareRow]) -> list[str]:
             what = "failures" if row.bound == "upper bound" else "successes"
             notes.append(f"{row.name}: {what} between two looks go unseen, so the share is {_article(row.bound)}")
         if row.undecided:
-            notes.append(f"{row.name}: {row.undecided} compartments stopped before it was decided; counted as not meeting it")
+            notes.append(
+                f"{row.name}: {row.undecided} compartments stopped before it was decided; counted as not meeting it"
+            )
     return notes
 
 
