@@ -23,6 +23,7 @@ from driblet_analysis.sweep.local import Session, repair, shards_of_part
 FOLDER = "slurm"
 WARNING_SECONDS = 60  # before its time limit a task is told to stop, which takes it as long as writing one file
 _TASK_SECONDS = 1200.0  # of the tasks that are made where the user does not say how long they should be
+_SHORTEST_SECONDS = 240.0
 _TIMEOUT_SECONDS = 60.0
 _LARGEST_ARRAY = 1001  # Slurm's own default; ids stay below it
 
@@ -103,7 +104,7 @@ def script_text(plan: Plan, options: Options, parts: int, retry: bool) -> str:
     wanted = {"partition": options.partition, "account": options.account, "time": options.time, "mem": options.memory}
     lines += [f"#SBATCH --{name}={value}" for name, value in wanted.items() if value]
     here = shlex.quote(str(plan.directory.absolute()))
-    python = f"{shlex.quote(sys.executable)} -m driblet"
+    program = f"driblet=({shlex.quote(sys.executable)} -m driblet)"
     lines += [
         "",
         f"# Part SLURM_ARRAY_TASK_ID of {parts} of a driblet sweep ({__version__}). Each task runs a worker per allocated core,",
@@ -112,20 +113,16 @@ def script_text(plan: Plan, options: Options, parts: int, retry: bool) -> str:
         "",
         *options.setup,
     ]
+    lines.append(program)
     if options.setup:
-        lines += [
-            f'driblet="{python}"',
-            "command -v driblet >/dev/null && driblet=driblet  # of the environment set up above",
-        ]
-    else:
-        lines.append(f'driblet="{python}"')
+        lines.append("command -v driblet >/dev/null && driblet=(driblet)  # of the environment set up above")
     again = " --retry-failed" if retry else ""
     lines += [
         'if [ -z "${SLURM_ARRAY_TASK_ID:-}" ]; then',
         "  # once, before the array: compiles, so that its tasks do not all compile at the same time",
-        f"  exec $driblet sweep work {here} --warm-up",
+        f'  exec "${{driblet[@]}}" sweep work {here} --warm-up',
         "fi",
-        f'exec $driblet sweep work {here} --part "$SLURM_ARRAY_TASK_ID/{parts}"{again}',
+        f'exec "${{driblet[@]}}" sweep work {here} --part "$SLURM_ARRAY_TASK_ID/{parts}"{again}',
     ]
     return "\n".join(lines) + "\n"
 
@@ -157,8 +154,23 @@ def _check(options: Options) -> None:
         value = getattr(options, name)
         if value is not None and not re.fullmatch(r"[\w.:,@%+-]+", value):
             problems.append(Problem(f"--{name}", f'"{value}" will not do: letters, digits and . : , - _ are read'))
+    seconds = _seconds(options.time) if options.time else None
+    if seconds is not None and seconds < _SHORTEST_SECONDS:
+        text = f'"{options.time}" is too short: Slurm warns a task a minute or two before its limit; give 4 minutes or more'
+        problems.append(Problem("--time", text))
     if problems:
         raise InputError("command line", problems)
+
+
+def _seconds(limit: str) -> float | None:
+    """A time limit as Slurm reads it: minutes, minutes:seconds, hours:minutes:seconds, days-hours[:minutes[:seconds]]."""
+    match = re.fullmatch(r"(?:(\d+)-)?(\d+)(?::(\d+))?(?::(\d+))?", limit)
+    if match is None:
+        return None  # Slurm will say what it thinks of it
+    days, *rest = match.groups()
+    numbers = [int(n) for n in rest if n is not None]
+    weights = (3600, 60, 1) if days is not None or len(numbers) == 3 else (60, 1, 0)
+    return int(days or 0) * 86400 + sum(n * w for n, w in zip(numbers, weights, strict=False))
 
 
 def _parts(plan: Plan, options: Options) -> int:

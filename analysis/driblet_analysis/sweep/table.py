@@ -173,7 +173,7 @@ def _read_hdf5(path: Path) -> Table:
             columns.append(TableColumn(name, str(dataset.attrs["units"]), kind, str(dataset.attrs["role"])))
             values[name] = dataset.asstr()[:] if text else dataset[:].astype(float)
         provenance = {name: d.asstr()[()] for name, d in file["provenance"].items()}
-    return Table(tuple(columns), values, provenance, path.stem)
+    return Table(tuple(columns), values, provenance, str(path))
 
 
 def _read_csv(path: Path) -> Table:
@@ -204,4 +204,4 @@ def _read_csv(path: Path) -> Table:
         if kind == "text":
             values[name] = np.array(cells, dtype=object)
         columns.append(TableColumn(name, unit, kind, role))
-    return Table(tuple(columns), values, provenance, path.stem)
+    return Table(tuple(columns), values, provenance, str(path))
