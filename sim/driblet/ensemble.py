@@ -28,7 +28,7 @@ from driblet.network import BACKWARD, FORWARD, Network
 from driblet.readouts import evaluate
 from driblet.results import Run
 from driblet.segments import begin, keep, segments
-from driblet.store import FORMAT, Block, Layout, RunWriter
+from driblet.store import FORMAT, Block, Layout, RunWriter, discard_parts
 from driblet.sums import SumsPlan
 from driblet.system import RunSettings, System
 from driblet.system.tables import ENGINES, LARGEST_SEED, LONGEST_TIME, MOST_REPLICATES, SHORTEST_TIME
@@ -136,6 +136,7 @@ def run(
     if path is not None and resume and path.is_file():
         existing = Run(path)
         if existing.identity == layout.identity:
+            discard_parts(path)  # of a run that was killed after it was complete
             return existing
         existing.close()
         raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")

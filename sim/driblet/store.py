@@ -108,6 +108,11 @@ def parts_folder(path: Path) -> Path:
     return path.parent / f"{path.name}.parts"  # with_name refuses "." and "/"
 
 
+def discard_parts(path: Path) -> None:
+    """Remove the shards of a run whose run file is complete."""
+    shutil.rmtree(parts_folder(path), ignore_errors=True)
+
+
 class RunWriter:
     """Takes blocks, keeps them safe, and makes the run file at the end.
 
@@ -206,7 +211,7 @@ class RunWriter:
             size = sum(shard.stat().st_size for shard in shards)
             _write_atomically(self.path, parts, write, size + size // 50 + (1 << 20) if shards else None)
         self.waiting = []
-        shutil.rmtree(parts, ignore_errors=True)
+        discard_parts(self.path)
         return None
 
 
