@@ -315,8 +315,8 @@ def collect(directory: Path, output: Path, point: int | None, force: bool) -> No
 
     Points that are not done yet are left out, and said so.
     """
-    from driblet_analysis.sweep.collect import collect as make_table
-    from driblet_analysis.sweep.collect import collect_run
+    from driblet_analysis.sweep.collecting import collect as make_table
+    from driblet_analysis.sweep.collecting import collect_run
 
     out = console()
     if point is not None:

@@ -15,7 +15,7 @@ from driblet.quantities import Quantity, QuantityError, read_number, read_quanti
 from driblet_analysis.sweep.keypaths import Scalar
 
 _TOKEN = re.compile(
-    r"\s*(?:(?P<number>\d+(?:\.\d*)?(?:[eE][+-]?\d+)?)(?:\s+(?P<unit>[A-Za-zµμ°]+(?:/mol)?))?"
+    r"\s*(?:(?P<number>\d+(?:\.\d*)?(?:[eE][+-]?\d+)?)(?:\s+(?P<unit>[A-Za-zµμ°]+(?:/mol)?)(?![\w.]))?"
     r"|(?P<path>[A-Za-z][A-Za-z0-9_]*(?:\.[A-Za-z][A-Za-z0-9_]*)+)|(?P<sign>[-+*/()−]))"
 )
 _DEPTH = 60

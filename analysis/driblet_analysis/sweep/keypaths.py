@@ -14,6 +14,7 @@ Scalar = str | int | float | bool
 
 # sections whose entries carry the user's own names: a name that is not there is a slip, never a new entry
 _NAMED = ("compartments", "species", "reactions", "enzymes", "readouts", "requirements", "additions", "values")
+_OPTIONAL = ("run", "conditions")  # sections that a file may do without
 _NOT_SWEPT = ("title", "attachments")
 # the key that a bare value stands for, by where the value stands
 _MAIN = ("amount", "median", "value")
@@ -75,9 +76,10 @@ def replaced(raw: Mapping[str, Any], changes: Mapping[str, Scalar]) -> dict[str,
         node = result
         for depth, part in enumerate(parts[:-1]):
             child = node.get(part)
-            if isinstance(child, Scalar):
-                child = {_short_for(parts[: depth + 1]): child}  # "4 mM" is short for { amount = "4 mM" }
-            if child is None and depth == 0 and part not in _NAMED:
+            main = _short_for(parts[: depth + 1])
+            if isinstance(child, Scalar) and main is not None:
+                child = {main: child}  # "4 mM" is short for { amount = "4 mM" }
+            if child is None and depth == 0 and part in _OPTIONAL:
                 child = {}
             if not isinstance(child, Mapping):
                 raise KeyPathError(_unknown(raw, path))
@@ -97,10 +99,13 @@ def replaced(raw: Mapping[str, Any], changes: Mapping[str, Scalar]) -> dict[str,
     return result
 
 
-def _short_for(parts: list[str]) -> str:
-    if parts[0] in ("species", "enzymes") and len(parts) == 2:
+def _short_for(parts: list[str]) -> str | None:
+    """The key that a bare value at this place stands for, None where a bare value is all there is."""
+    if len(parts) == 2 and parts[0] in ("species", "enzymes"):
         return "amount"
-    return "median" if parts[0] == "compartments" else "value"
+    if len(parts) == 3 and parts[0] == "compartments" and parts[2] in ("diameter", "volume"):
+        return "median"
+    return "value" if len(parts) == 3 and parts[0] == "reactions" and parts[2] == "energy" else None
 
 
 def _whole_table(path: str, table: Mapping[str, Any]) -> str:
