@@ -32,7 +32,7 @@ def audit(file: Path, as_json: bool) -> None:
 
 def _print(facts: dict[str, Any]) -> None:
     out = console()
-    out.print(f"[bold]{facts['title']}[/bold]")
+    out.print(facts["title"], style="bold")
     out.print(_conditions(facts), markup=False)
     out.print(_species(facts))
     out.print(_energies(facts))

@@ -68,7 +68,7 @@ def check(run_file: Path, against: Path | None, output: Path | None, as_json: bo
 
 def _print(result: CheckResult) -> None:
     out = console()
-    out.print(f"[bold]{result.verdict}[/bold]: ", end="")
+    out.print(f"{result.verdict}: ", style="bold", end="")
     out.print(result.reason, markup=False, soft_wrap=True)
     if result.window_s is not None:
         out.print(

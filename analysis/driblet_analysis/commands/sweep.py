@@ -60,7 +60,8 @@ def _show_report(report: Report, what: str) -> None:
 
     out, made, estimate = console(), report.plan, report.estimate
     assert isinstance(made, Plan)
-    out.print(f"[bold]{made.title}[/bold]: {what}" if "[" not in made.title else f"{made.title}: {what}")
+    out.print(made.title, style="bold", end="")
+    out.print(f": {what}")
     rows = [
         [path, "axis" if i < made.axes else "derived", column.unit or ("words" if column.kind == "text" else "1")]
         for i, (path, column) in enumerate(zip(made.paths, made.columns, strict=True))

@@ -127,7 +127,8 @@ def _print_list(facts: dict[str, Any]) -> None:
 def _print_entry(facts: dict[str, Any]) -> None:
     out = console()
     reactant = facts["reactants"][0]
-    out.print(f"[bold]{reactant['key']}[/bold]: {reactant['name']}")
+    out.print(reactant["key"], style="bold", end="")
+    out.print(f": {reactant['name']}")
     if reactant["aliases"]:
         out.print(f"also {', '.join(reactant['aliases'])}", markup=False)
     rows = [

@@ -104,7 +104,7 @@ def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-
     out = console()
     system = result.system
     events = int(result.events.sum())
-    out.print(f"[bold]{system.title}[/bold]", markup=True)
+    out.print(system.title, style="bold")
     if seconds is None:
         spread = "complete already; nothing was simulated anew"
     else:

@@ -27,7 +27,9 @@ CAUTION = "A simulation is a design aid: confirm by experiment; no basis for med
 
 def console() -> Console:
     """A console on standard output; plain text, 100 columns wide, when that is not a terminal."""
-    return Console(file=sys.stdout, width=None if sys.stdout.isatty() else 100, highlight=False, emoji=False)
+    # no markup: titles and labels are the user's, and a label "[/x]" would be read as a closing tag
+    width = None if sys.stdout.isatty() else 100
+    return Console(file=sys.stdout, width=width, highlight=False, emoji=False, markup=False)
 
 
 def table(title: str, columns: Sequence[str], rows: Iterable[Sequence[str]], left: int = 1) -> Table:

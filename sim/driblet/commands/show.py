@@ -58,7 +58,7 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
         print_json(facts)
         return
     out = console()
-    out.print(f"[bold]{facts['title']}[/bold]")
+    out.print(facts["title"], style="bold")
     state = "complete" if facts["complete"] else f"interrupted, {facts['replicates_planned']} planned"
     out.print(
         f"{facts['replicates']} compartments ({state}), {facts['samples']} samples over "
