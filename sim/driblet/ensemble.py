@@ -13,9 +13,10 @@ import threading
 import time
 from collections.abc import Callable, Mapping
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from numbers import Integral, Real
 from pathlib import Path
+from queue import SimpleQueue
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -23,18 +24,15 @@ from numpy.typing import NDArray
 
 from driblet.errors import InputError, InterruptedRunError, Problem, one_problem
 from driblet.events import event_arrays
-from driblet.loading import additions_of, prepare
-from driblet.network import BACKWARD, FORWARD, Network
-from driblet.readouts import evaluate
+from driblet.network import Network
 from driblet.results import Run
-from driblet.segments import begin, keep, segments
+from driblet.segments import segments
 from driblet.store import FORMAT, Block, Layout, RunWriter, discard_parts
 from driblet.sums import SumsPlan
 from driblet.system import RunSettings, System
 from driblet.system.tables import ENGINES, LARGEST_SEED, LONGEST_TIME, MOST_REPLICATES, SHORTEST_TIME
 from driblet.version import __version__
 
-_BUDGET = 1 << 20  # events an engine fires before it looks up: some 30 ms
 _UNIT_BYTES = 8 << 20
 _POLL_SECONDS = 0.1
 DEFAULT_SAMPLES = 200
@@ -104,6 +102,7 @@ def run(
     record: str | None = None,
     threads: int | None = None,
     key: int = 0,
+    method: str | None = None,
     resume: bool = False,
     force: bool = False,
     on_progress: Callable[[Progress], None] | None = None,
@@ -111,7 +110,8 @@ def run(
     """Simulate an ensemble and return it as a Run, in memory or, with `output`, in a run file.
 
     duration, sample_every : s. What is not given is taken from the system's [run]. key : sets the random streams of the
-    points of a sweep apart, 0 to 2^63 - 1. With `resume`, finished replicates of an
+    points of a sweep apart, 0 to 2^63 - 1. method : "lanes" or "scalar", which kernel of the exact engine runs; left out, the
+    faster one; the bits are the same. With `resume`, finished replicates of an
     interrupted run are kept; a complete run is returned as it is. Raises InputError for bad settings or an output that is
     taken, InterruptedRunError after Ctrl-C.
     """
@@ -128,10 +128,17 @@ def run(
     _check_arguments(given, threads)
     plain = {k: v if isinstance(v, str) else float(v) if k.endswith("_s") else int(v) for k, v in given.items()}
     settings = replace(system.settings, **plain)  # type: ignore[arg-type]
+    from driblet.engines.exact import METHODS, choose_method
+
+    if method not in (None, *METHODS):
+        raise one_problem("run", "method", f'"{method}" is not a method: "lanes" or "scalar" is')
+    if method == "lanes" and settings.record == "events":
+        raise one_problem("run", "method", 'events are recorded by "scalar" only')
     network = Network.of(system)
     sums = SumsPlan.of(system, network, sample_times(settings)[-1], settings.burn_in_s)
     times = sample_times(settings) if settings.record != "summary" else np.array([0.0, settings.duration_s])
-    layout = _layout(system, settings, times, key, sums)
+    chosen = choose_method(len(network.channels), settings.replicates, settings.record == "events")
+    layout = _layout(system, settings, times, key, sums, method or chosen)
     path = Path(output) if output is not None else None
     if path is not None and resume and path.is_file():
         existing = Run(path)
@@ -142,14 +149,22 @@ def run(
         raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
     segments(system, times)  # its faults are told before anything is written
     writer = RunWriter(path, layout, resume=resume, force=force)
-    file = _Ensemble(system, settings, layout, writer, sums, threads or os.cpu_count() or 1, on_progress, key).run()
+    threads = threads or os.cpu_count() or 1
+    file = _Ensemble(system, settings, layout, writer, sums, threads, on_progress, key, method).run()
     return Run(file) if path is None else Run(path)
 
 
-def _layout(system: System, settings: RunSettings, times: NDArray[np.float64], key: int, sums: SumsPlan) -> Layout:
+def _row_bytes(system: System, times: NDArray[np.float64]) -> int:
+    """About what one replicate's samples take in memory while its unit is made."""
     species, reactions = len(system.free_species), len(system.reactions)
-    row_bytes = 8 * len(times) * max(1, species + 4 * reactions + len(system.readouts))
-    unit = max(1, min(-(-settings.replicates // 64), _UNIT_BYTES // row_bytes))
+    return 8 * len(times) * max(1, species + 4 * reactions + len(system.readouts))
+
+
+def _layout(
+    system: System, settings: RunSettings, times: NDArray[np.float64], key: int, sums: SumsPlan, method: str
+) -> Layout:
+    unit = max(1, min(-(-settings.replicates // 64), _UNIT_BYTES // _row_bytes(system, times)))
+    unit = 1 << (unit.bit_length() - 1)  # a power of two, so that whole units fill a pack of lanes
     facts = {
         "engine": settings.engine,
         "seed": settings.seed,
@@ -165,6 +180,7 @@ def _layout(system: System, settings: RunSettings, times: NDArray[np.float64], k
 
     provenance = {
         **facts,
+        "method": method,
         "driblet_version": __version__,
         "numpy_version": np.__version__,
         "numba_version": numba.__version__,
@@ -199,15 +215,6 @@ def _cpu_name() -> str:
     return platform.processor() or platform.machine()
 
 
-@dataclass
-class _Unit:
-    """One unit of replicates while it is simulated; the arrays are read by the main thread for progress only."""
-
-    next_sample: NDArray[np.int64] | None = None
-    before: int = 0  # samples of the segments that are done
-    events: int = 0
-
-
 class _Ensemble:
     def __init__(
         self,
@@ -219,43 +226,39 @@ class _Ensemble:
         threads: int,
         on_progress: Callable[[Progress], None] | None,
         key: int = 0,
+        method: str | None = None,
     ) -> None:
-        self.system, self.settings, self.layout, self.writer = system, settings, layout, writer
-        self.threads, self.on_progress, self.key = threads, on_progress, key
-        self.sums = sums
-        self.network = Network.of(system)
-        # a summary keeps two samples, but its covariances are taken from more
-        hidden = settings.record == "summary"
-        self.time_s = np.unique(np.append(sums.hidden_grid(), 0.0)) if hidden else layout.time_s
-        self.segments = segments(system, self.time_s)
+        from driblet.packs import Pack, PackRunner
+
+        self.layout, self.writer, self.threads, self.on_progress = layout, writer, threads, on_progress
+        self.runner = PackRunner(system, settings, layout, sums, key, method)
         self.stop = threading.Event()
-        self.running: dict[int, _Unit] = {}
+        self.blocks: SimpleQueue[Block] = SimpleQueue()
+        self.packs: list[Pack] = []
+        self.finished = sum(len(self._rows(u)) for u in writer.done)
         self.events = 0
         self.fraction = 0.0
         self.started = time.monotonic()
 
     def run(self) -> Any:
         """Simulate every unit that is not done yet; returns what the writer's finish returns."""
+        from driblet.packs import Pack, next_pack
+
         pending = [u for u in range(self.layout.units) if u not in self.writer.done]
-        finished = sum(len(self._rows(u)) for u in self.writer.done)
-        queue = iter(pending)
-        futures: set[Future[Block]] = set()
+        row_bytes = _row_bytes(self.runner.system, self.runner.time_s)
+        futures: set[Future[None]] = set()
         with ThreadPoolExecutor(max_workers=self.threads) as pool:
             try:
-                while True:
-                    while len(futures) < self.threads + 1 and (unit := next(queue, None)) is not None:
-                        futures.add(pool.submit(self._simulate, unit))
-                    if not futures:
-                        break
+                while pending or futures:
+                    while len(futures) < self.threads and pending:
+                        pack = Pack.of(next_pack(pending, self.layout.unit, self.threads, row_bytes), self.layout)
+                        self.packs.append(pack)
+                        futures.add(pool.submit(self.runner.simulate, pack, self.blocks.put, self.stop.is_set))
+                    self._write()
+                    self._report()
                     done, futures = wait(futures, timeout=_POLL_SECONDS, return_when=FIRST_COMPLETED)
                     for future in done:
-                        block = future.result()
-                        self.writer.add(block)
-                        finished += len(block.replicate)
-                        # taken off here and not in the worker, so that the fraction done never falls
-                        del self.running[block.unit]
-                        self.events += int(block.events.sum())
-                    self._report(finished)
+                        future.result()
             except KeyboardInterrupt:
                 self._stop(futures)
                 raise InterruptedRunError(self._farewell()) from None
@@ -263,7 +266,8 @@ class _Ensemble:
                 self._stop(futures)
                 raise
         try:
-            self._report(finished)
+            self._write()
+            self._report()
             seconds = time.monotonic() - self.started
             closing = {"wall_time_s": seconds, "threads": self.threads, "events_this_session": self.events}
             return self.writer.finish(closing)
@@ -271,13 +275,26 @@ class _Ensemble:
             self.writer.flush()
             raise InterruptedRunError(self._farewell()) from None
 
-    def _stop(self, futures: set[Future[Block]]) -> None:
+    def _write(self) -> None:
+        """Pass on the units that the workers have handed over."""
+        while not self.blocks.empty():
+            block = self.blocks.get()
+            self.writer.add(block)
+            self.finished += len(block.replicate)
+            self.events += int(block.events.sum())
+            for pack in self.packs:
+                if block.unit in pack.units:
+                    # here and not in the worker, so that the fraction done never falls
+                    pack.written[pack.bounds[pack.units.index(block.unit)]] = True
+                    pack.events_written += int(block.events.sum())
+            self.packs = [pack for pack in self.packs if not pack.written.all()]
+
+    def _stop(self, futures: set[Future[None]]) -> None:
         self.stop.set()
         for future in futures:
             future.cancel()
-        for future in wait(futures).done:
-            if not future.cancelled() and future.exception() is None:
-                self.writer.add(future.result())
+        wait(futures)
+        self._write()
         self.writer.flush()
 
     def _farewell(self) -> str:
@@ -296,87 +313,14 @@ class _Ensemble:
         start = unit * self.layout.unit
         return range(start, min(start + self.layout.unit, self.layout.replicates))
 
-    def _report(self, finished: int) -> None:
+    def _report(self) -> None:
         if self.on_progress is None:
             return
-        grid = len(self.time_s)
-        units = list(self.running.values())
-        partial = sum(
-            min(grid * len(u.next_sample), float(u.next_sample.sum()) + u.before * len(u.next_sample)) / grid
-            for u in units
-            if u.next_sample is not None
-        )
-        events = self.events + sum(u.events for u in units)
+        grid = len(self.runner.time_s)
+        partial = sum(pack.samples_done(grid) for pack in self.packs) / grid
+        events = self.events + sum(max(0, pack.events - pack.events_written) for pack in self.packs)
         # a unit that has just passed an addition can seem to be behind for a moment
-        self.fraction = max(self.fraction, min(1.0, (finished + partial) / self.layout.replicates))
+        self.fraction = max(self.fraction, min(1.0, (self.finished + partial) / self.layout.replicates))
         self.on_progress(
-            Progress(self.fraction, finished, self.layout.replicates, events, time.monotonic() - self.started)
+            Progress(self.fraction, self.finished, self.layout.replicates, events, time.monotonic() - self.started)
         )
-
-    def _simulate(self, unit: int) -> Block:
-        """One unit from start to end, in a worker thread."""
-        from driblet.engines.contract import COUNT_OVERFLOW, REASONS, RUNNING, Samples, new_samples, new_state
-        from driblet.engines.exact import advance
-        from driblet.events import EventRecord
-
-        watched = self.running[unit] = _Unit()
-        rows = self._rows(unit)
-        start = prepare(self.system, self.settings.seed, rows, self.key)
-        rates = self.network.rates(start.omega)
-        state = new_state(start.counts, start.stream, len(self.network.channels))
-        samples = new_samples(self.time_s, len(rows), len(self.network.species), len(self.network.channels))
-        watched.next_sample = state.next_sample
-        added = additions_of(self.system, self.settings.seed, rows, start.omega, self.key)
-        columns = [self.network.species.index(a.species) for a in self.system.additions]
-        totals = self.sums.empty(len(rows))
-        events_seen = EventRecord(len(rows)) if self.settings.record == "events" else None
-        for segment in self.segments:
-            part = begin(segment, state, samples, added, columns)
-            recorders = self.sums.recorders(state, segment.start_s, segment.end_s)
-            if events_seen is not None:
-                recorders = events_seen.attach(recorders)
-            while (state.reason == RUNNING).any():
-                if self.stop.is_set():
-                    raise InterruptedRunError("interrupted")
-                watched.events += int(advance(self.network.arrays, rates, state, part, _BUDGET, recorders))
-                if events_seen is not None:
-                    events_seen.drain(state, recorders)
-            keep(segment, part, samples)
-            self.sums.collect(recorders, totals)
-            watched.before = segment.grid.stop
-        totals["stationary/covariance"] = self.sums.covariance(self.time_s, samples.counts)
-        if events_seen is not None:
-            totals.update(events_seen.results())
-        if len(self.time_s) != len(self.layout.time_s):
-            samples = Samples(self.layout.time_s, samples.counts[:, [0, -1]], samples.firings[:, [0, -1]])
-        if (state.reason == COUNT_OVERFLOW).any():
-            r = int(np.flatnonzero(state.reason == COUNT_OVERFLOW)[0])
-            name = self.network.species[int(np.argmax(state.counts[r, :-1]))]
-            text = (
-                f"{REASONS[COUNT_OVERFLOW]} in replicate {rows[r]}: the system grows without bound, or holds too much"
-            )
-            raise one_problem(self.system.source, f"species.{name}", text)
-        events = state.firings.sum(axis=1)
-        return Block(
-            unit,
-            np.array(rows, dtype=np.int64),
-            start.volume_L,
-            state.reason.copy(),
-            events,
-            {
-                "counts": samples.counts,
-                "firings_forward": self._by_reaction(samples.firings, FORWARD),
-                "firings_backward": self._by_reaction(samples.firings, BACKWARD),
-                **{
-                    f"readout_{r.name}": evaluate(self.system, r.expression, samples.counts, start.omega[:, None])
-                    for r in self.system.readouts
-                },
-            },
-            totals,
-        )
-
-    def _by_reaction(self, firings: NDArray[np.int64], direction: int) -> NDArray[np.int64]:
-        index = self.network.channel_index(direction)
-        out = firings[..., index]
-        out[..., index < 0] = 0
-        return out

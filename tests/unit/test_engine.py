@@ -15,7 +15,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 import driblet
-from driblet import ensemble
+from driblet import ensemble, packs
 from driblet.engines.contract import (
     COUNT_OVERFLOW,
     NOTHING_CAN_FIRE,
@@ -298,7 +298,7 @@ def test_threads_and_units_never_change_a_bit(threads: int, unit_bytes: int, mon
     system = driblet.loads(MIXED)
     plain = driblet.run(system, replicates=9, threads=1)
     monkeypatch.setattr(ensemble, "_UNIT_BYTES", unit_bytes)
-    monkeypatch.setattr(ensemble, "_BUDGET", 97)
+    monkeypatch.setattr(packs, "_BUDGET", 97)
     other = driblet.run(system, replicates=9, threads=threads)
     assert digest(plain) == digest(other)
 
