@@ -16,6 +16,7 @@ import matplotlib
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from matplotlib.text import Text
 from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
@@ -64,6 +65,7 @@ def save(figure: Figure, path: str | Path) -> Path:
     if path.suffix.lower() not in FORMATS:
         raise one_problem(str(path), "", f"is no figure name: it ends in {', '.join(FORMATS)}")
     temporary = path.with_name(f".{path.stem}.tmp{path.suffix}")
+    _take_texts_as_they_stand(figure)
     try:
         figure.savefig(temporary)
         temporary.replace(path)
@@ -71,6 +73,15 @@ def save(figure: Figure, path: str | Path) -> Path:
         temporary.unlink(missing_ok=True)
         raise one_problem(str(path), "", f"cannot be written: {(error.strerror or str(error)).lower()}") from error
     return path
+
+
+def _take_texts_as_they_stand(figure: Figure) -> None:
+    """Titles and labels are the user's: a "$" in them starts no formula. Numbers at ticks stay matplotlib's own."""
+    axes = [axis for ax in figure.axes for axis in (ax.xaxis, ax.yaxis)]
+    ticks = {id(text) for axis in axes for text in axis.get_ticklabels(which="both")}
+    for text in figure.findobj(Text):
+        if id(text) not in ticks:
+            text.set_parse_math(False)
 
 
 def time_axis(duration_s: float) -> tuple[float, str]:
