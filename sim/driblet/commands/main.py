@@ -27,7 +27,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "reconcile": ("driblet.commands.reconcile:reconcile", "Show the nearest energies that close every cycle."),
     "run": ("driblet.commands.run:run", "Simulate an ensemble of compartments into a run file."),
     "show": ("driblet.commands.show:show", "Print what a run file holds."),
-    "check": ("driblet_analysis.commands.check:check", "Hold a run against the exact equilibrium of its energies."),
+    "check": ("driblet_analysis.commands.check:check", "Hold a run against the energies of its system."),
     "lifetime": (
         "driblet_analysis.commands.lifetime:lifetime",
         "Tell how long requirements hold, in how many compartments.",
