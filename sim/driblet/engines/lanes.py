@@ -32,7 +32,6 @@ from driblet.engines.recording import (
     cut_windows,
     look_at_conditions,
     next_mark,
-    occupy,
     sample_until,
     settle_histograms,
 )
@@ -337,37 +336,47 @@ def conditions_met(conditions, lanes, width):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
-def integrate_lanes(averages, lanes, width):  # type: ignore[no-untyped-def]
-    """Add the time since the last record to every running integral."""
-    counts, running, clock, since = lanes.counts, lanes.running, lanes.clock, lanes.since
+def integrate_lanes(factor, offset, counts, running, clock, since, span, width):  # type: ignore[no-untyped-def]
+    """Add the time since the last record to every running integral; `span` takes that time. Factors of 1 are left out."""
     dummy = counts.shape[0] - 2
-    for q in range(averages.factor.shape[0]):
-        a, b, c = U(averages.factor[q, 0]), U(averages.factor[q, 1]), U(averages.factor[q, 2])
-        m, o, p = averages.offset[q, 0], averages.offset[q, 1], averages.offset[q, 2]
-        if averages.factor[q, 1] == dummy and averages.factor[q, 2] == dummy and o == 0.0 and p == 0.0:
-            for lane in range(width):
-                running[q, lane] += (counts[a, lane] - m) * (clock[lane] - since[lane])
-        elif averages.factor[q, 2] == dummy and p == 0.0:
-            for lane in range(width):
-                value = (counts[a, lane] - m) * (counts[b, lane] - o)
-                running[q, lane] += value * (clock[lane] - since[lane])
-        else:
+    for lane in range(width):
+        span[lane] = clock[lane] - since[lane]
+    for q in range(factor.shape[0]):
+        a, b, c = U(factor[q, 0]), U(factor[q, 1]), U(factor[q, 2])
+        m, o, p = offset[q, 0], offset[q, 1], offset[q, 2]
+        third = factor[q, 2] != dummy or p != 0.0
+        if third:
             for lane in range(width):
                 value = (counts[a, lane] - m) * (counts[b, lane] - o) * (counts[c, lane] - p)
-                running[q, lane] += value * (clock[lane] - since[lane])
+                running[q, lane] += value * span[lane]
+        elif factor[q, 1] != dummy or o != 0.0:
+            for lane in range(width):
+                running[q, lane] += (counts[a, lane] - m) * (counts[b, lane] - o) * span[lane]
+        else:
+            for lane in range(width):
+                running[q, lane] += (counts[a, lane] - m) * span[lane]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def follow(table, lanes, occupancy, active):  # type: ignore[no-untyped-def]
-    """Credit the species that are about to change with the time they stood."""
-    seconds, since, span, width = occupancy.seconds, occupancy.since, occupancy.span, occupancy.width
+def follow(chosen, clock, row, flat_counts, flat_slot, flat_place, changes, per_width, span, since, seconds, active):  # type: ignore[no-untyped-def]
+    """Credit the species that are about to change with the time they stood; see recording.occupy.
+
+    flat_slot : int64, by channel and change, the row of the changed species in `seconds` or -1; per_width : 1 / width.
+    Half a count more than there is keeps the quotient off the whole numbers.
+    """
+    separate_arrays_wide_vectors()
+    begin, end, last = span[0], span[1], seconds.shape[2] - 1
     for lane in range(active):
-        j = np.int64(lanes.chosen[lane])
-        for k in range(table.changes):
-            s = occupancy.slot[table.species[j, k]]
-            if s >= 0:
-                count = lanes.counts[table.species[j, k], lane]
-                occupy(seconds, since, span, width, lanes.row[lane], s, count, lanes.clock[lane])
+        j = U(np.int64(chosen[lane]))
+        r, until = U(row[lane]), clock[lane]
+        for k in range(j * changes, j * changes + changes):
+            if flat_slot[k] >= 0:
+                s = U(flat_slot[k])
+                low, high = max(since[r, s], begin), min(until, end)
+                if high > low:
+                    b = min(np.int64((flat_counts[flat_place[k] + U(lane)] + 0.5) * per_width[s]), last)
+                    seconds[r, s, U(b)] += high - low
+                since[r, s] = until
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
@@ -408,6 +417,8 @@ def advance_lanes(network, table, rows, lanes, shared, fewest, rates, state, sam
     every = 1 if budget > 0 else 2  # no literal: views of no particular layout, see recording.py
     counts, firings, running = lanes.counts[::every], lanes.firings[::every], lanes.running[::every]
     sampled_counts, sampled_firings = samples.counts, samples.firings
+    per_width, span, standing_since, seconds = 1.0 / occupancy.width, occupancy.span, occupancy.since, occupancy.seconds
+    flat_slot = occupancy.slot[table.species.reshape(table.species.size)]
     time, edge, next_edge = samples.time, averages.edge, averages.next_edge
     stride = U(lanes.counts.shape[1])
     flat_sums = lanes.sums.reshape(lanes.sums.size)
@@ -493,10 +504,15 @@ def advance_lanes(network, table, rows, lanes, shared, fewest, rates, state, sam
                     else:
                         empty(lanes, lane)
         if following:
-            follow(table, lanes, occupancy, active)
+            follow(
+                chosen, clock, lane_row, flat_counts, flat_slot, flat_place, U(table.changes),
+                per_width, span, standing_since, seconds, active,
+            )  # fmt: skip
         if timed:
             if averaging:
-                integrate_lanes(averages, lanes, width)
+                integrate_lanes(
+                    averages.factor, averages.offset, lanes.counts, lanes.running, clock, since, lanes.uniform, width
+                )
             for lane in range(width):
                 since[lane] = clock[lane]
         fire(table, lanes, flat_counts, flat_firings, flat_place, flat_amount, stride, width)

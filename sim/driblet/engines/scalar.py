@@ -22,7 +22,6 @@ from driblet.engines.random_stream import minus_log, next_word, selection_unifor
 from driblet.engines.recording import (
     close_windows,
     cut_windows,
-    integrate,
     look_at_conditions,
     next_mark,
     occupy,
@@ -95,6 +94,18 @@ def find_channel(rows, cumulative, target):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
+def integrate_row(factor, offset, dummy, counts, running, span):  # type: ignore[no-untyped-def]
+    """recording.integrate for a row of counts, without the factors that are 1."""
+    for q in range(np.uint64(factor.shape[0])):
+        value = counts[np.uint64(factor[q, 0])] - offset[q, 0]
+        if factor[q, 1] != dummy or offset[q, 1] != 0.0:
+            value *= counts[np.uint64(factor[q, 1])] - offset[q, 1]
+        if factor[q, 2] != dummy or offset[q, 2] != 0.0:
+            value *= counts[np.uint64(factor[q, 2])] - offset[q, 2]
+        running[q] += value * span
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
 def advance_scalar(network, rows, refresh, rates, state, samples, budget, recorders):  # type: ignore[no-untyped-def]
     """See contract.py. rates : float64, (R, M), 1/s per product of falling factorials."""
     averages, occupancy, conditions, log = recorders
@@ -112,13 +123,13 @@ def advance_scalar(network, rows, refresh, rates, state, samples, budget, record
     columns, firing_columns = state.counts.T[::every], state.firings.T[::every]
     running = averages.running.T[::every]
     time, edge, next_edge = samples.time, averages.edge, averages.next_edge
-    factor, offset = averages.factor, averages.offset
+    factor, offset, dummy = averages.factor, averages.offset, species
     for r in range(replicates):
         if state.reason[r] != RUNNING:
             continue
         if left <= 0:
             break
-        counts, constants, firings = state.counts[r], rates[r], state.firings[r]
+        counts, constants, firings, running_row = state.counts[r], rates[r], state.firings[r], averages.running[r]
         sum_all(network, rows, constants, counts, value, cumulative)
         clock = state.clock[r]
         sample = state.next_sample[r]
@@ -156,7 +167,7 @@ def advance_scalar(network, rows, refresh, rates, state, samples, budget, record
                     )
                 break
             if averaging:
-                integrate(factor, offset, columns, running, r, later - since)
+                integrate_row(factor, offset, dummy, counts, running_row, later - since)
             clock = later
             j = find_channel(rows, cumulative, target)
             for k in range(np.uint64(network.change_start[j]), np.uint64(network.change_start[j + _ONE])):
