@@ -13,8 +13,8 @@ the rates of release. Then
     kcat/K_A = k_on g / (k_off + g),   and the Haldane relation reads  prod K_product * kf/kr = K' prod K_substrate,
 
 K of a ligand its dissociation constant. What is not stated is chosen so: a substrate's off-rate is kcat (for the leading
-one of an ordered mechanism that makes K_i = K_M); products bind alike and as weakly as the limits below allow; what is
-released first leaves as fast as they allow, what is released later at the geometric mean of kcat and the fastest rate.
+one of an ordered mechanism that makes K_i = K_M); products bind alike and as weakly as the limits below allow; they leave
+at the geometric mean of kcat and the fastest rate, the first one faster where the limits need it.
 """
 
 from __future__ import annotations
@@ -160,12 +160,28 @@ def _check_encounters(problem: Problem) -> None:
 class _Trial(NamedTuple):
     constants: ChainConstants | None
     margin: float  # ln of kf/kr over the least it may be; below zero the trial breaks a limit
+    g: float = math.inf
+    chemistry: float = 0.0  # kf/kr
 
 
 _BROKEN = _Trial(None, -math.inf)
 
 
-def _try(problem: Problem, kcat: float, weak: float) -> _Trial:
+def _eased(problem: Problem, kcat: float, weak: float) -> ChainConstants | None:
+    """Constants as by `_try`, the first product leaving no faster than it must: fewer events, the same energies.
+
+    At the geometric mean of kcat and the fastest rate, or faster so that a central complex turns back no more often than
+    it goes on.
+    """
+    fast = _try(problem, kcat, weak)
+    if fast.margin < -_ROUNDING:
+        return None
+    rate = max(math.sqrt(FASTEST * kcat), (1.0 if problem.random else 2.0) * fast.g / fast.chemistry)
+    trial = _try(problem, kcat, weak, rate)
+    return trial.constants if trial.margin >= 0 else fast.constants
+
+
+def _try(problem: Problem, kcat: float, weak: float, fastest_release: float = FASTEST) -> _Trial:
     """Constants when every product without a stated Kd dissociates at `weak` mol/L."""
     products = []
     for j, product in enumerate(problem.products):
@@ -173,7 +189,7 @@ def _try(problem: Problem, kcat: float, weak: float) -> _Trial:
             products.append(product.fixed)
             continue
         Kd = product.Kd if product.Kd is not None else weak
-        rate = min(FASTEST, FASTEST_ON * Kd)
+        rate = min(fastest_release, FASTEST_ON * Kd)
         if j and not problem.random:
             rate = min(rate, math.sqrt(FASTEST * kcat))
         products.append(Pair(rate / Kd, rate))
@@ -200,7 +216,7 @@ def _try(problem: Problem, kcat: float, weak: float) -> _Trial:
         return _BROKEN
     backward = g / (chemistry - g / first) if chemistry > g / first else math.inf
     constants = ChainConstants(pairs, tuple(products), chemistry * backward, backward)
-    return _Trial(constants, math.log(chemistry) - math.log(least))
+    return _Trial(constants, math.log(chemistry) - math.log(least), g, chemistry)
 
 
 def _substrate(substrate: Substrate, kcat: float, g: float, interaction: float) -> Pair | None:
@@ -229,12 +245,11 @@ def _weakest_products(problem: Problem, kcat: float | None = None) -> ChainConst
         return _try(problem, rate, math.exp(ln_weak)).margin
 
     if all(p.fixed is not None or p.Kd is not None for p in problem.products):
-        trial = _try(problem, rate, WEAKEST)
-        return trial.constants if trial.margin >= -_ROUNDING else None
+        return _eased(problem, rate, WEAKEST)
     grid = np.linspace(math.log(_TIGHTEST), math.log(WEAKEST), _GRID)
     margins = np.array([margin(x) for x in grid])
     if margins[-1] >= 0:
-        return _try(problem, rate, WEAKEST).constants
+        return _eased(problem, rate, WEAKEST)
     inside = np.flatnonzero(margins >= 0)
     if len(inside):
         low = float(grid[inside[-1]])
@@ -253,7 +268,7 @@ def _weakest_products(problem: Problem, kcat: float | None = None) -> ChainConst
         root = brentq(lambda x: max(margin(x), -1.0), low, high, xtol=1e-14, rtol=1e-15)
         while margin(root) < 0:
             root -= 1e-14 * max(1.0, abs(root))
-    return _try(problem, rate, math.exp(root)).constants
+    return _eased(problem, rate, math.exp(root))
 
 
 def _largest_kcat(problem: Problem) -> float:
