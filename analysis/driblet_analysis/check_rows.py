@@ -34,7 +34,8 @@ class EnergyRow(NamedTuple):
     """One reaction's energy as its firings show it, kJ/mol; None where it fired too rarely.
 
     stated : of the file; measured +- standard_error by this reaction alone; closed_error : under closed cycles, None where
-    the run is blind to this energy; detectable : the smallest error that this run would have exposed.
+    the run is blind to this energy; number_error : the standard error with which the mere number of firings tells it;
+    detectable : the smallest error that this run would have exposed.
     """
 
     name: str
@@ -42,6 +43,7 @@ class EnergyRow(NamedTuple):
     measured: float | None
     standard_error: float | None
     closed_error: float | None
+    number_error: float | None = None
     detectable_kJ_per_mol: float | None = None
 
 

@@ -10,11 +10,12 @@ error RT sqrt(1/F + 1/B). (F against B alone could not fail: their difference is
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import ndtri
+from scipy.special import ndtr, ndtri
 
 from driblet.drive import runnable
 from driblet.energetics.cycles import cycles
@@ -117,6 +118,7 @@ def measured_energies(system: System, network: Network, firings: Firings) -> Ene
             None if np.isnan(shift[k]) else float(reaction.dG0_kJ_per_mol) + float(shift[k]),  # type: ignore[arg-type]
             None if np.isnan(shift[k]) else float(error[k]),
             None if not np.isfinite(closed_error[k]) else float(closed_error[k]),
+            _number_error(RT, firings.fired[forward[index[k]]], firings.fired[backward[index[k]]]),
         )
         for k, reaction in enumerate(reactions)
     )
@@ -171,9 +173,28 @@ def _closure_tests(
     return rows
 
 
-def detectable_error(standard_error: float, tests: int, false_alarm_rate: float) -> float:
-    """Smallest error of an energy that `tests` Holm-corrected tests would have exposed with 90 % power, kJ/mol."""
-    return float((ndtri(1.0 - false_alarm_rate / (2 * tests)) + ndtri(POWER)) * standard_error)
+def _number_error(RT: float, F: float, B: float) -> float | None:
+    """An error e of the energy makes the backward firings wrong by B e/RT, against a spread sqrt(F + B) of all firings."""
+    return RT * math.sqrt(F + B) / B if B >= FEWEST_FIRINGS else None
+
+
+def detectable_error(standard_errors: Sequence[float], tests: int, false_alarm_rate: float) -> float:
+    """Smallest error of an energy that one of `tests` Holm-corrected tests would have exposed with 90 % power, kJ/mol.
+
+    standard_errors : of the independent tests that see this energy: its measurement, and the number of its firings.
+    With one test this is (z_(1-alpha/2m) + z_0.9) times the standard error.
+    """
+    threshold = float(ndtri(1.0 - false_alarm_rate / (2 * tests)))
+
+    def missed(error: float) -> float:
+        away = error / np.asarray(standard_errors)
+        return float(np.prod(ndtr(threshold - away) - ndtr(-threshold - away)))
+
+    low, high = 0.0, (threshold + float(ndtri(POWER))) * min(standard_errors)
+    while high - low > 1e-6 * high:  # bisection: the root finders of scipy take longer to import than the check takes
+        middle = 0.5 * (low + high)
+        low, high = (middle, high) if missed(middle) > 1.0 - POWER else (low, middle)
+    return high
 
 
 def never_fired(system: System, network: Network, firings: Firings) -> list[str]:

@@ -144,12 +144,13 @@ def _reason(tests: tuple[CheckRow, ...]) -> str:
 
 
 def _with_detectable(rows: tuple[EnergyRow, ...], tests: int) -> tuple[EnergyRow, ...]:
-    return tuple(
-        row
-        if row.closed_error is None
-        else row._replace(detectable_kJ_per_mol=detectable_error(row.closed_error, tests, FALSE_ALARM_RATE))
-        for row in rows
-    )
+    out = []
+    for row in rows:
+        if row.closed_error is not None:
+            errors = [row.closed_error] + ([] if row.number_error is None else [row.number_error])
+            row = row._replace(detectable_kJ_per_mol=detectable_error(errors, tests, FALSE_ALARM_RATE))
+        out.append(row)
+    return tuple(out)
 
 
 def _ratios(system: System, network: Network, averages: Array, means: Array, run: Run) -> tuple[RatioRow, ...]:
