@@ -135,7 +135,8 @@ def run(
     if method == "lanes" and settings.record == "events":
         raise one_problem("run", "method", 'events are recorded by "scalar" only')
     network = Network.of(system)
-    sums = SumsPlan.of(system, network, sample_times(settings)[-1], settings.burn_in_s)
+    histograms = settings.record != "trajectories"
+    sums = SumsPlan.of(system, network, sample_times(settings)[-1], settings.burn_in_s, histograms)
     times = sample_times(settings) if settings.record != "summary" else np.array([0.0, settings.duration_s])
     chosen = choose_method(len(network.channels), settings.replicates, settings.record == "events")
     layout = _layout(system, settings, times, key, sums, method or chosen)

@@ -197,6 +197,8 @@ class PackRunner:
             )
             raise one_problem(self.system.source, f"species.{name}", text)
         totals["stationary/covariance"] = self.sums.covariance(self.time_s, samples.counts)
+        if not self.sums.histograms:
+            totals["stationary/occupancy_time"] = self.sums.sampled_occupancy(self.time_s, samples.counts)
         if len(self.time_s) != len(self.layout.time_s):
             samples = Samples(self.layout.time_s, samples.counts[:, [0, -1]], samples.firings[:, [0, -1]])
         series: dict[str, NDArray[Any]] = {

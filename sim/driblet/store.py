@@ -191,7 +191,8 @@ class RunWriter:
         blocks = sorted(self.waiting, key=lambda b: b.unit)
         if self.path is None:
             file = _memory_file(f"run in memory {next(_MEMORY_RUNS)}")
-            _fill(file, self.layout, blocks)
+            # packing would save nothing here, and takes longer than a short run
+            _fill(file, self.layout, blocks, packed=False)
             file["provenance"].attrs.update(closing)
             return file
         parts = parts_folder(self.path)
@@ -327,7 +328,7 @@ def _series_shapes(layout: Layout) -> dict[str, tuple[tuple[int, ...], Any, str]
     return shapes
 
 
-def _create_series(file: h5py.File, layout: Layout, rows: int) -> None:
+def _create_series(file: h5py.File, layout: Layout, rows: int, packed: bool = True) -> None:
     for name, (shape, dtype, unit) in _series_shapes(layout).items():
         per_time = 8 * layout.unit * int(np.prod(shape[1:]))
         times = max(1, min(shape[0], _CHUNK_BYTES // max(1, per_time)))
@@ -338,10 +339,10 @@ def _create_series(file: h5py.File, layout: Layout, rows: int) -> None:
             maxshape=None if empty else (None, *shape),
             dtype=dtype,
             chunks=None if empty else (layout.unit, times, *shape[1:]),
-            compression=None if empty else "gzip",
-            compression_opts=None if empty else 1,
-            shuffle=not empty,
-            fletcher32=not empty,
+            compression="gzip" if packed and not empty else None,
+            compression_opts=1 if packed and not empty else None,
+            shuffle=packed and not empty,
+            fletcher32=packed and not empty,
         )
         dataset.attrs["units"] = unit
         third = ["species" if name == "counts" else "reaction"] if len(shape) == 2 else []
@@ -358,32 +359,43 @@ def _create_series(file: h5py.File, layout: Layout, rows: int) -> None:
             shape=(rows, *one.shape),
             dtype=h5py.vlen_dtype(np.float64) if one.dtype == object else one.dtype,
             chunks=None if plain else (min(rows, layout.unit), *one.shape),
-            compression=None if plain else "gzip",
-            compression_opts=None if plain else 1,
-            shuffle=not plain,
-            fletcher32=not plain,
+            compression="gzip" if packed and not plain else None,
+            compression_opts=1 if packed and not plain else None,
+            shuffle=packed and not plain,
+            fletcher32=packed and not plain,
         )
         dataset.attrs["units"] = one.unit
 
 
-def _fill(file: h5py.File, layout: Layout, blocks: Sequence[Block]) -> None:
-    """A file of the given blocks; the unit that is not full, if any, comes last."""
+def _fill(file: h5py.File, layout: Layout, blocks: Sequence[Block], packed: bool = True) -> None:
+    """A file of the given blocks; the unit that is not full, if any, comes last. packed : compressed and with checksums."""
     replicate = np.concatenate([b.replicate for b in blocks]) if blocks else np.zeros(0, dtype=np.int64)
     _frame(file, layout, replicate, [b.unit for b in blocks])
-    _create_series(file, layout, len(replicate))
-    row = 0
-    for block in blocks:
-        rows = slice(row, row + len(block.replicate))
-        row = rows.stop
-        for name, values in block.series.items():
-            if values.size:
-                file[name][rows] = values
-        file["volume"][rows] = block.volume_L
-        file["end_reason"][rows] = block.reason
-        for path, array in block.values.items():
-            if array.size:
-                file[path][rows] = array
-        file["events"][rows] = block.events
+    _create_series(file, layout, len(replicate), packed)
+    if not blocks:
+        return
+    for name in blocks[0].series:
+        _write_rows(file[name], [b.series[name] for b in blocks])
+    for path in blocks[0].values:
+        _write_rows(file[path], [b.values[path] for b in blocks])
+    for name, arrays in (
+        ("volume", [b.volume_L for b in blocks]),
+        ("end_reason", [b.reason for b in blocks]),
+        ("events", [b.events for b in blocks]),
+    ):
+        _write_rows(file[name], arrays)
+
+
+def _write_rows(dataset: h5py.Dataset, arrays: Sequence[NDArray[Any]]) -> None:
+    """Write arrays one below the other, several at a time: a write costs as much as the simulation of a short replicate."""
+    row = first = size = 0
+    for k, array in enumerate(arrays):
+        size += array.nbytes
+        if size > _FLUSH_BYTES or k == len(arrays) - 1:
+            part = arrays[first] if first == k else np.concatenate(arrays[first : k + 1])
+            if part.size:
+                dataset[row : row + len(part)] = part
+            row, first, size = row + len(part), k + 1, 0
 
 
 def _merge(file: h5py.File, layout: Layout, shards: Sequence[Path]) -> None:

@@ -1,8 +1,9 @@
 """What a run sums up while it runs, so that statistics need no dense trajectory.
 
 Exact time integrals over windows of the run, of each channel's monomial (for firings against propensities) and of counts
-(for time-weighted means), and the time spent at each count after the burn-in (histograms). Covariances are taken from
-samples after the burn-in: a sum of every pair of counts at every event would cost more than the simulation.
+(for time-weighted means), and the time spent at each count after the burn-in (histograms). A run that keeps trajectories
+takes its histograms from their samples. Covariances are always taken from samples after the burn-in: a sum of every pair
+of counts at every event would cost more than the simulation.
 """
 
 from __future__ import annotations
@@ -29,20 +30,26 @@ HIDDEN_SAMPLES = 257
 class SumsPlan:
     """Which sums a run keeps.
 
-    Attributes: edge_s : (E,), window edges; factor : int64, (Q, 3), offset : (Q, 3), monomials in the order channels,
-    species; bin_width : int64, (N,), counts per bin of the histograms; span_s : when histograms are gathered.
+    Attributes: edge_s : (E,), window edges; factor : int64, (Q, 3), offset : (Q, 3), the distinct monomials; row : int64,
+    which of them each channel and then each species has; histograms : whether time is counted at every event, which can
+    cost more than the simulation itself, or taken from the samples; bin_width : int64, (N,), counts per bin of the
+    histograms; span_s : when histograms are gathered.
     """
 
     edge_s: NDArray[np.float64]
     factor: NDArray[np.int64]
     offset: NDArray[np.float64]
+    row: NDArray[np.int64]
+    histograms: bool
     bin_width: NDArray[np.int64]
     span_s: tuple[float, float]
     channels: int
     species: int
 
     @classmethod
-    def of(cls, system: System, network: Network, duration_s: float, burn_in_s: float | None) -> SumsPlan:
+    def of(
+        cls, system: System, network: Network, duration_s: float, burn_in_s: float | None, histograms: bool = True
+    ) -> SumsPlan:
         """The sums for a run of `duration_s`; a stated burn-in is an edge of its own."""
         if burn_in_s is None:
             edges = np.linspace(0.0, duration_s, WINDOWS + 1)
@@ -56,10 +63,14 @@ class SumsPlan:
         n = len(network.species)
         singles = np.column_stack([np.arange(n), np.full(n, n), np.full(n, n)])
         arrays = network.arrays
+        factor, offset = np.vstack([arrays.reactant, singles]), np.vstack([arrays.offset, np.zeros((n, 3))])
+        distinct, row = np.unique(np.hstack([factor, offset]), axis=0, return_inverse=True)
         return cls(
             edges,
-            np.vstack([arrays.reactant, singles]).astype(np.int64),
-            np.vstack([arrays.offset, np.zeros((n, 3))]),
+            distinct[:, :3].astype(np.int64),
+            distinct[:, 3:],
+            row.reshape(-1),
+            histograms,
             _bin_widths(system, network),
             (begin, duration_s),
             len(network.channels),
@@ -73,6 +84,8 @@ class SumsPlan:
         edges = np.concatenate([[start_s], inside, [end_s]])
         averages = new_averages(edges, self.factor, self.offset, replicates, self.channels)
         span = (max(start_s, self.span_s[0]), min(end_s, self.span_s[1]))
+        if not self.histograms:
+            return recorders_for(state, averages)
         occupancy = new_occupancy(np.arange(self.species), self.bin_width, BINS, span, replicates, self.species)
         occupancy.since[:] = start_s
         return recorders_for(state, averages, occupancy)
@@ -88,12 +101,13 @@ class SumsPlan:
         averages = recorders.averages
         for k, start in enumerate(averages.edge[:-1]):
             window = int(np.searchsorted(self.edge_s, start, side="right")) - 1
-            into["stationary/monomial_time"][:, window] += averages.integral[:, k, : self.channels]
-            into["stationary/count_time"][:, window] += averages.integral[:, k, self.channels :]
+            into["stationary/monomial_time"][:, window] += averages.integral[:, k, self.row[: self.channels]]
+            into["stationary/count_time"][:, window] += averages.integral[:, k, self.row[self.channels :]]
         for k, edge in enumerate(averages.edge):
             for at in np.flatnonzero(self.edge_s == edge):
                 into["stationary/window_firings"][:, int(at)] = averages.firings[:, k]
-        into["stationary/occupancy_time"] += recorders.occupancy.seconds
+        if self.histograms:
+            into["stationary/occupancy_time"] += recorders.occupancy.seconds
 
     @property
     def per_replicate(self) -> tuple[PerReplicate, ...]:
@@ -119,6 +133,15 @@ class SumsPlan:
     def hidden_grid(self) -> NDArray[np.float64]:
         """Times, s, at which a run without trajectories is sampled for its covariances; the end is the last."""
         return np.linspace(self.span_s[0], self.span_s[1], HIDDEN_SAMPLES)
+
+    def sampled_occupancy(self, time_s: NDArray[np.float64], counts: NDArray[np.int64]) -> NDArray[np.float64]:
+        """Time at each count as the samples within the span have it, s, shape=(replicates, species, bins)."""
+        part = counts[:, (time_s >= self.span_s[0]) & (time_s <= self.span_s[1])]
+        replicates, samples, species = part.shape
+        bins = np.minimum(part // self.bin_width, BINS - 1)
+        place = (np.arange(replicates)[:, None, None] * species + np.arange(species)) * BINS + bins
+        number = np.bincount(place.ravel(), minlength=replicates * species * BINS).reshape(replicates, species, BINS)
+        return np.asarray(number * ((self.span_s[1] - self.span_s[0]) / max(1, samples)))
 
     def covariance(self, time_s: NDArray[np.float64], counts: NDArray[np.int64]) -> NDArray[np.float64]:
         """Covariance of counts over the samples within the span, shape=(replicates, species, species)."""

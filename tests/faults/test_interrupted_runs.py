@@ -130,14 +130,14 @@ def test_a_check_of_lost_rows_would_fail(tmp_path: Path, undisturbed: dict[str, 
 
 WORKER = """\
 import sys, driblet
-from driblet import ensemble, store
-store._FLUSH_SECONDS, ensemble._UNIT_BYTES = 0.0, 1
+from driblet import ensemble, packs, store
+store._FLUSH_SECONDS, ensemble._UNIT_BYTES, packs._BUDGET = 0.0, 1, 2000
 system = driblet.loads(sys.stdin.read())
 def told(progress):
     if progress.finished >= 5:
         print("some", flush=True)
 try:
-    driblet.run(system, sys.argv[1], resume=True, threads=1, on_progress=told)
+    driblet.run(system, sys.argv[1], resume=True, threads=1, method="scalar", on_progress=told)
 except driblet.InterruptedRunError as error:
     print(error, flush=True)
     sys.exit(error.exit_status)
@@ -146,7 +146,7 @@ except driblet.InterruptedRunError as error:
 
 def test_ctrl_c_leaves_readable_shards(tmp_path: Path, undisturbed: dict[str, np.ndarray]) -> None:
     """SIGINT to a process of its own, once some replicates are finished; then resumed to the same bits."""
-    slow = changed(TEXT, ('duration = "4 s"', 'duration = "60 s"'), ('sample_every = "0.5 s"', 'sample_every = "10 s"'))
+    slow = changed(TEXT, ('duration = "4 s"', 'duration = "500 s"'), ('sample_every = "0.5 s"', 'sample_every = "100 s"'))
     path = tmp_path / "run.h5"
     process = subprocess.Popen(
         [sys.executable, "-c", WORKER, str(path)],
