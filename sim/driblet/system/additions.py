@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 
 from driblet.errors import Problem
 from driblet.quantities import QuantityError
@@ -16,13 +16,15 @@ def read_addition(
     name: str,
     value: object,
     species: Mapping[str, Species],
+    declared: Collection[str],
     duration_s: float | None,
     loading: str,
     problems: list[Problem],
 ) -> Addition | None:
     """One addition, or None after adding what is wrong to the problems.
 
-    species : all that can be named, enzymes (as their free form) included; duration_s : None when the file states none.
+    species : all that can be named, enzymes (as their free form) included, that are sound; declared : the names of those
+    that are not, too; duration_s : None when the file states none.
     """
     path = f"additions.{name}"
     table = read_table(AdditionTable, value, path, problems)
@@ -34,6 +36,8 @@ def read_addition(
         problems.append(Problem(f"{path}.{key}", text))
 
     one = species.get(table.species)
+    if one is None and table.species in declared:
+        return None  # its own fault has been told
     if one is None:
         problem("species", f'"{table.species}" is not in [species]{nearest(table.species, species)}')
     elif one.held:

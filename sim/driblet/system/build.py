@@ -266,9 +266,10 @@ class _Builder:
         self, species: list[Species], expansions: list[Expansion], run: RunTable | None, loading: str
     ) -> list[Addition]:
         known = {s.name: s for s in [*species, *(e.species[0] for e in expansions)]}
+        declared = [*self.entries("species"), *self.entries("enzymes")]
         duration = run.duration if run else None
         found = (
-            read_addition(name, value, known, duration, loading, self.problems)
+            read_addition(name, value, known, declared, duration, loading, self.problems)
             for name, value in self.section("additions", required=False).items()
         )
         return sorted((a for a in found if a is not None), key=lambda a: a.at_s)

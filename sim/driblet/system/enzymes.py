@@ -90,8 +90,10 @@ class EnzymeReader:
                 self._problem(f"{path}.also", reaction, "is catalysed by this enzyme already")
             tables.setdefault(reaction, (f"{path}.also.{reaction}", activity))
         for reaction, (where, activity) in tables.items():
+            # after a fault it is not known which constants an earlier reaction would have fixed
+            certain = len(self.problems) == before
             try:
-                spec = self._activity(reaction, activity, table, assembler)
+                spec = self._activity(reaction, activity, table, assembler, certain)
                 if spec is not None:
                     assembler.add(spec)
             except _Fault as fault:
@@ -150,7 +152,7 @@ class EnzymeReader:
         return result
 
     def _activity(
-        self, name: str, table: ActivityTable, enzyme: EnzymeTable, assembler: Assembler
+        self, name: str, table: ActivityTable, enzyme: EnzymeTable, assembler: Assembler, certain: bool
     ) -> ActivitySpec | None:
         reaction = self.known.get(name)
         if reaction is None:
@@ -189,6 +191,8 @@ class EnzymeReader:
             for ligand in shared & set(values):
                 raise _Fault(f"{key}.{ligand}", "is fixed by an earlier reaction of this enzyme, which binds it too")
         missing = [n for n in dict.fromkeys(substrates) if n not in KM and n not in shared]
+        if missing and not certain:
+            return None
         if missing:
             raise _Fault("KM", f"the K_M of {', '.join(missing)} is missing")
         return ActivitySpec(name, mechanism, direction, substrates, products, K, kcat, KM, Kd, table.interaction or 1.0)

@@ -126,7 +126,7 @@ def solve(problem: Problem) -> ChainConstants:
     found = _weakest_products(problem)
     if found is None:
         largest = _largest_kcat(problem)
-        limits = f"on-rates at most {FASTEST_ON:g} /M/s, the other constants {FASTEST:g} /s"
+        limits = "on-rates at most 1e9 /M/s and the other constants 1e6 /s"
         raise MechanismError(f"is more than this energy allows with {limits}", "kcat", largest=largest)
     return found
 
@@ -139,19 +139,18 @@ def _check_encounters(problem: Problem) -> None:
         slope = problem.kcat / substrate.KM
         if slope >= FASTEST_ON:
             raise MechanismError(
-                f"kcat/K_M is {slope:.3g} /M/s, more than molecules meet: it must be below {FASTEST_ON:g} /M/s", "KM", i
+                f"kcat/K_M is {slope:.3g} /M/s, faster than molecules meet: it must be below 1e9 /M/s", "KM", i
             )
         if substrate.leading and substrate.Kd is not None and slope * substrate.Kd > FASTEST:
             raise MechanismError(
                 f"it would leave at {slope * substrate.Kd:.3g} /s; at most {FASTEST / slope:.3g} M is possible", "Kd", i
             )
         if not substrate.leading and substrate.Kd is not None:
-            Kd = substrate.Kd * problem.interaction
-            # kcat/K_M = k_on g/(k_off + g) with g > kcat and k_on at most the fastest needs g above this
-            room = 1.0 - slope / FASTEST_ON
-            if Kd * slope >= FASTEST * room:
+            # k_off = Kd kcat/K_M g/(g - Kd kcat/K_M) with g hardly above kcat, products leaving fast
+            limit = substrate.KM / problem.interaction
+            if substrate.Kd >= limit:
                 raise MechanismError(
-                    f"with this kcat and K_M it must be below {FASTEST * room / slope / problem.interaction:.3g} M",
+                    f"must be below {limit:.3g} M for this K_M; an enzyme that lets its product go slowly needs steps",
                     "Kd",
                     i,
                 )
