@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.drive import emergent_affinities, is_driven, ln_constants, runnable
-from driblet.energetics.cycles import conservation_laws, cycles
+from driblet.energetics.cycles import conservation_laws, cycles, dependencies
 from driblet.energetics.equilibrium import NoEquilibriumError, equilibrium_composition
 from driblet.ensemble import sample_times
 from driblet.errors import CannotAnswerError, InputError
@@ -168,10 +168,30 @@ def _direction(system: System, reaction: Reaction, energy: float | None) -> str:
     return {(True, False): "forward", (False, True): "backward"}.get((can_forward, can_backward), "neither can start")
 
 
+def _readable_laws(system: System, network: Network) -> list[NDArray[np.int64]]:
+    """A basis of the conserved sums: each enzyme's own copies first, and the other sums freed of them."""
+    stoichiometry = network.stoichiometry
+    laws = list(conservation_laws(stoichiometry))
+    own = [np.array([s.enzyme == e.name for s in system.free_species], dtype=np.int64) for e in system.enzymes]
+    own = [law for law in own if not (law @ stoichiometry).any()]
+    if not own:
+        return laws
+    freed = []
+    for law in laws:
+        for copies_of in own:
+            law = law - int(law[np.flatnonzero(copies_of)[0]]) * copies_of
+        freed.append(-law if law.sum() < 0 else law)
+    kept: list[NDArray[np.int64]] = []
+    for law in own + sorted(freed, key=lambda law: int(np.count_nonzero(law))):
+        if law.any() and len(dependencies(np.array([*kept, law]))) == 0:
+            kept.append(law)
+    return kept
+
+
 def _conservation(system: System, network: Network, copies: Array) -> list[dict[str, Any]]:
     """Conserved sums; what enzymes hold counts with the species held, and an enzyme with all of its states."""
     laws = []
-    for law in conservation_laws(network.stoichiometry):
+    for law in _readable_laws(system, network):
         weights = {name: int(w) for name, w in zip(network.species, law, strict=True) if w}
         for species in system.free_species:
             if species.enzyme is not None and species.name != species.enzyme:
