@@ -179,7 +179,7 @@ def _quiet() -> Iterator[None]:
 
 
 def draw_end_states(
-    ax: Axes, values: Array, label: str, colour: str, law: tuple[Array, Array] | None, legend: bool
+    ax: Axes, values: NDArray[Any], label: str, colour: str, law: tuple[Array, Array] | None, legend: bool
 ) -> None:
     """Histogram of end states, the exact law over it where there is one. law : (counts, probabilities)."""
     values = values[np.isfinite(values)]
