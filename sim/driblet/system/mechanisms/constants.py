@@ -25,7 +25,6 @@ from dataclasses import dataclass
 from typing import NamedTuple
 
 import numpy as np
-from scipy.optimize import brentq, minimize_scalar
 
 FASTEST_ON = 1e9  # /M/s, about what diffusion allows; common practice, no source
 FASTEST = 1e6  # /s, for every derived constant that is not an on-rate; common practice, no source
@@ -258,12 +257,16 @@ def _weakest_products(problem: Problem, kcat: float | None = None) -> ChainConst
         if not math.isfinite(margins[best]):
             return None
         bounds = (float(grid[max(best - 1, 0)]), float(grid[min(best + 1, _GRID - 1)]))
+        from scipy.optimize import minimize_scalar  # takes long to import, and most files never come here
+
         peak = minimize_scalar(lambda x: -margin(x), bounds=bounds, method="bounded", options={"xatol": 1e-9})
         if -peak.fun < 0:
             return None
         low, high = float(peak.x), bounds[1]
     root = low
     if margin(low) > 0:
+        from scipy.optimize import brentq
+
         root = brentq(lambda x: max(margin(x), -1.0), low, high, xtol=1e-14, rtol=1e-15)
         while margin(root) < 0:
             root -= 1e-14 * max(1.0, abs(root))
