@@ -41,7 +41,7 @@ def audit_facts(system: System) -> dict[str, Any]:
     course = _course(system, network, copies)
     equilibrium = _equilibrium(system, network)
     macroscopic = equilibrium["macroscopic"] if equilibrium else None
-    there = macroscopic and {name: n / omega for name, n in macroscopic.items()}
+    there = macroscopic and _totals(system, macroscopic)
     magnesium, buffer = magnesium_facts(system, there), buffer_facts(system, there)
     enzymes, catalysed = enzyme_facts(system), catalysed_rates(system)
     warnings = list(system.warnings)
@@ -95,6 +95,16 @@ def audit_facts(system: System) -> dict[str, Any]:
         "run": _run_facts(system, course),
         "warnings": warnings,
     }
+
+
+def _totals(system: System, copies: dict[str, float]) -> dict[str, float]:
+    """Concentrations of the file's free species, what enzymes hold added, mol/L; copies : of every free species."""
+    totals = {s.name: copies[s.name] for s in system.free_species if s.enzyme is None}
+    for species in system.free_species:
+        for name, number in species.holds:
+            if name in totals:
+                totals[name] += number * copies[species.name]
+    return {name: n / system.compartment.omega for name, n in totals.items()}
 
 
 def _reaction_facts(
@@ -359,6 +369,10 @@ def _firing_warnings(system: System, network: Network, course: dict[str, Any]) -
                 f"the reverse of {reaction.name} is expected to fire {total:.2g} times in the whole run: too rarely for "
                 "the run to show its energy"
             )
+    # the many small ways in which one enzyme inactivates are no part of what a run is for
+    dying = [system.reactions[c.reaction].enzyme is not None and c.direction == FORWARD
+             and system.reactions[c.reaction].one_way is not None for c in network.channels]  # fmt: skip
+    firings = np.where(dying, 0.0, firings)
     positive = firings[firings > 0]
     if len(positive) and positive.max() / positive.min() > WIDE_RANGE:
         slow, fast = (network.channels[int(np.flatnonzero(firings == f)[0])] for f in (positive.min(), positive.max()))

@@ -22,9 +22,9 @@ Composition = Mapping[str, float]  # species -> mol/L
 
 
 def initial_composition(system: System) -> dict[str, float]:
-    """Concentrations at the start in the median compartment, mol/L, held species included."""
+    """Concentrations at the start in the median compartment, mol/L, held species included, enzymes left out."""
     omega = system.compartment.omega
-    return {s.name: s.mean_copies(omega) / omega for s in system.species}
+    return {s.name: s.mean_copies(omega) / omega for s in system.species if s.enzyme is None}
 
 
 def full_conversion(system: System, reaction: Reaction) -> dict[str, float] | None:

@@ -116,7 +116,7 @@ def _sampled(system: System, initial: NDArray[np.int64], omega: Array, seed: int
 def refuse_without_equilibrium(system: System) -> None:
     """Raises CannotAnswerError for one-way reactions that can run; driven systems are told apart by the caller."""
     if is_driven(system) is None:
-        names = ", ".join(r.name for r in system.reactions if r.one_way)
+        names = ", ".join(system.one_way_names())
         raise CannotAnswerError(f"one-way reactions ({names}) have no equilibrium; give them an energy and <=>")
 
 

@@ -267,6 +267,17 @@ def test_products_bind_as_weakly_as_the_limits_allow() -> None:
         Assembler("E", RT).add(weaker)
 
 
+def test_products_hardly_inhibit_by_default() -> None:
+    """With a K' of 750 there is room for products that bind at half a molar: 1 mM of one slows the enzyme by under 1 %."""
+    assembler = Assembler("E", RT)
+    assembler.add(ActivitySpec("r", "ordered bi bi", 1, ("A", "B"), ("P", "Q"), 750.0, 14.0, {"A": 2e-4, "B": 1e-4}))
+    enzyme = assembler.enzyme("E")
+    here = {"A": 1e-3, "B": 1e-3, "P": 0.0, "Q": 0.0}
+    alone = turnover_rates(enzyme, here)["r"]
+    for product in "PQ":
+        assert 0.99 < turnover_rates(enzyme, {**here, product: 1e-3})["r"] / alone < 1
+
+
 def test_leading_substrate_defaults_of_an_ordered_mechanism() -> None:
     """k_on of the leading substrate is kcat/K_M (Cleland 1963), and its K_i is its K_M by default."""
     assembler = Assembler("E", RT)

@@ -75,6 +75,7 @@ def _steps(enzyme: dict[str, Any]) -> Any:
         for step in enzyme["steps"]
     ]
     made = table(f"steps of {enzyme['name']} (* by default)", ["step", "forward", "backward", "Kd", "from"], rows)
+    made.columns[0].no_wrap = True
     made.columns[-1].justify = "left"
     return made
 

@@ -89,7 +89,7 @@ def equilibrium_weights(system: System, present: frozenset[str]) -> tuple[Array,
     one-way reactions that can run.
     """
     can_run = np.flatnonzero(runnable(system, present))
-    one_way = [system.reactions[r].name for r in can_run if system.reactions[r].backward is None]
+    one_way = system.one_way_names(set(can_run.tolist()))
     if one_way:
         raise CannotAnswerError(f"no equilibrium to hold it against: {', '.join(one_way)} runs one way")
     for cycle in emergent_affinities(system, present):

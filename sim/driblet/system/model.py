@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import html
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass, field
 
 from driblet.energetics.conditions import Conditions
@@ -190,6 +190,15 @@ class System:
             if reaction.name == name:
                 return reaction
         raise KeyError(name)
+
+    def one_way_names(self, among: Collection[int] | None = None) -> list[str]:
+        """Names for the one-way reactions (of those with these indices), the inactivation of an enzyme as one."""
+        named = {
+            r.name if r.enzyme is None else f"inactivation of {r.enzyme}": None
+            for i, r in enumerate(self.reactions)
+            if r.backward is None and (among is None or i in among)
+        }
+        return list(named)
 
     @property
     def free_species(self) -> tuple[Species, ...]:

@@ -14,7 +14,8 @@ the rates of release. Then
 
 K of a ligand its dissociation constant. What is not stated is chosen so: a substrate's off-rate is kcat (for the leading
 one of an ordered mechanism that makes K_i = K_M); products bind alike and as weakly as the limits below allow; they leave
-at the geometric mean of kcat and the fastest rate, the first one faster where the limits need it.
+at the geometric mean of kcat and the fastest rate, or faster where the limits need it: the first as fast as it must,
+later ones at least a tenth as fast.
 """
 
 from __future__ import annotations
@@ -30,6 +31,7 @@ FASTEST_ON = 1e9  # /M/s, about what diffusion allows; common practice, no sourc
 FASTEST = 1e6  # /s, for every derived constant that is not an on-rate; common practice, no source
 WEAKEST = 1.0  # mol/L: a product that binds more weakly than this does not bind
 _ROUNDING = 1e-12
+_LATER = 0.1
 _TIGHTEST, _GRID = 1e-15, 400
 
 
@@ -189,7 +191,9 @@ def _try(problem: Problem, kcat: float, weak: float, fastest_release: float = FA
         Kd = product.Kd if product.Kd is not None else weak
         rate = min(fastest_release, FASTEST_ON * Kd)
         if j and not problem.random:
-            rate = min(rate, math.sqrt(FASTEST * kcat))
+            # slower, or the last product would come and go at every free moment; slower still, and the first one would
+            # find its complex again and inhibit far below its Kd
+            rate = min(rate, max(math.sqrt(FASTEST * kcat), _LATER * products[0].off))
         products.append(Pair(rate / Kd, rate))
     rates = [pair.off for pair in products]
     if problem.random:
