@@ -21,7 +21,7 @@ from driblet.engines.contract import (
     new_samples,
     new_state,
 )
-from driblet.engines.exact import FEWEST_LANES, METHODS, ExactEngine, choose_method
+from driblet.engines.exact import METHODS, ExactEngine, choose_method, fewest_lanes
 from driblet.engines.recording import new_log, recorders_for
 from tests.unit.engine_cases import (
     Pack,
@@ -241,7 +241,10 @@ def test_networks_without_channels_or_species() -> None:
 def test_the_choice() -> None:
     assert choose_method(14, 100) == "lanes"
     assert choose_method(14, 100, logging=True) == "scalar"
-    assert choose_method(14, FEWEST_LANES - 1) == "scalar"
+    assert choose_method(14, fewest_lanes(14)) == "lanes"
+    assert choose_method(14, fewest_lanes(14) - 1) == "scalar"
+    assert choose_method(300, 1000) == "lanes"
+    assert choose_method(600, 1000) == "scalar"
     assert choose_method(10_000, 100) == "scalar"
     network, _ = random_network(1, 3)
     with pytest.raises(ValueError, match="'vector' is not a method; known: lanes, scalar"):

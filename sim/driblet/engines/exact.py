@@ -8,6 +8,8 @@ scalar  one replicate after the other (scalar.py): an event costs nearly the sam
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -17,18 +19,23 @@ from driblet.engines.recording import recorders_for
 from driblet.engines.scalar import advance_scalar
 from driblet.engines.sums import refresh_plan, select, sum_rows
 
-__all__ = ["METHODS", "ExactEngine", "advance", "choose_method", "select"]
+__all__ = ["METHODS", "ExactEngine", "advance", "choose_method", "fewest_lanes", "select"]
 
 METHODS = ("lanes", "scalar")
-MOST_CHANNELS_IN_LANES = 300  # measured: above, the scalar kernel is as fast (tests/benchmarks/exact_engine.py)
-FEWEST_LANES = 6  # measured: fewer replicates are faster one after the other
+
+
+def fewest_lanes(channels: int) -> int:
+    """The least number of replicates in lockstep that are faster than one after the other.
+
+    Measured with tests/benchmarks/exact_engine.py: 3 at 2 channels, 4 at 14, 6 at 60, 9 at 120, 24 to 29 at 300; about
+    500 channels are past what 64 lanes make up for.
+    """
+    return math.ceil(3.0 + channels / 25.0 + (channels / 80.0) ** 2)
 
 
 def choose_method(channels: int, replicates: int, logging: bool = False) -> str:
     """The faster method for a network and an ensemble; an event log is kept by the scalar kernel only."""
-    if logging or channels > MOST_CHANNELS_IN_LANES or replicates < FEWEST_LANES:
-        return "scalar"
-    return "lanes"
+    return "scalar" if logging or fewest_lanes(channels) > min(replicates, LANES) else "lanes"
 
 
 class ExactEngine:
@@ -59,7 +66,7 @@ class ExactEngine:
             if method == "lanes":
                 if logging:
                     raise ValueError("an event log is kept by the scalar method only")
-                fewest = 1 if self.method else FEWEST_LANES
+                fewest = 1 if self.method else fewest_lanes(rates.shape[1])
                 lanes = new_lanes(state, self.rows, recorders, self.lanes)
                 lanes.common_rate[:] = rates[0]
                 shared = bool((rates == rates[0]).all())
