@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.errors import one_problem
-from driblet.outcomes import Outcomes
+from driblet.outcomes import GRID, Outcomes
 from driblet.store import SERIES, digest, open_run, reading
 from driblet.system import System, loads
 
@@ -193,11 +193,28 @@ class Run:
         """What came of each requirement of the system file in each compartment."""
         if not self.system.requirements:
             return Outcomes.empty(len(self.replicate), 0)
+        if not self._judged_while_running:
+            return self._judged_on_samples()
         return Outcomes.read(self._read)
+
+    @property
+    def _judged_while_running(self) -> bool:
+        return "requirements_looked_at" in self.provenance
+
+    def _judged_on_samples(self) -> Outcomes:
+        from driblet.quantities import copies_per_molar
+        from driblet.requirements import judge_on_grid
+
+        omega = copies_per_molar(1.0) * self.volume_L
+        each = [judge_on_grid(self.system, one, self.counts, self.time_s, omega) for one in self.system.requirements]
+        parts = [outcomes.values() for outcomes in each]
+        return Outcomes.read({path: np.hstack([part[path] for part in parts]) for path in parts[0]})
 
     @property
     def requirement_resolution(self) -> Mapping[str, str]:
         """Where each requirement was looked at: "event", "leap" or "grid"."""
+        if not self._judged_while_running:
+            return {one.name: GRID for one in self.system.requirements}
         return dict(json.loads(str(self.provenance["requirements_looked_at"])))
 
     def final_counts(self) -> NDArray[np.int64]:

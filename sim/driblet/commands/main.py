@@ -35,6 +35,7 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "plot": ("driblet_analysis.commands.plot:plot", "Draw trajectories and histograms of a run."),
     "reference": ("driblet.commands.reference:reference", "List or explain the energies of the reference table."),
     "sweep": ("driblet_analysis.commands.sweep:sweep", "Simulate many points of a system, here or on a cluster."),
+    "size": ("driblet_analysis.commands.size:size", "Find the least or greatest value that meets a requirement."),
     "export": ("driblet.commands.export:export", "Print a network as JSON, or a run's trajectories as CSV."),
 }
 
