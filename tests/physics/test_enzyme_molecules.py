@@ -263,6 +263,36 @@ def test_check_agrees_with_a_right_run_and_exposes_a_constant_off_by_half_a_kilo
     assert check_run(driblet.run(driblet.loads(text))).verdict == "inconsistent"
 
 
+def by_hand(off_kJ_per_mol: float) -> str:
+    """The closed system with its steps typed as ordinary reactions, the product's binding off by so much."""
+    system = driblet.loads(CLOSED)
+    lines = ['EA = "0 copies"', 'EAB = "0 copies"', 'EPQ = "0 copies"', 'EQ = "0 copies"', 'E = "2 copies"']
+    names = dict(zip((s.name for s in system.enzymes[0].states), ("E", "EA", "EAB", "EPQ", "EQ"), strict=True))
+    reactions = []
+    for k, reaction in enumerate(r for r in system.reactions if r.enzyme):
+        energy = reaction.dG0_kJ_per_mol or 0.0
+        if reaction.name == "kinase.releases_sugarP_with_ADP":
+            energy += off_kJ_per_mol
+        sides = [
+            " + ".join(names.get(name, name) for name, _ in side)
+            for side in (reaction.equation.reactants, reaction.equation.products)
+        ]
+        unit = "/M/s" if len(reaction.equation.reactants) == 2 else "/s"
+        reactions.append(
+            f'[reactions.step{k}]\nequation = "{" <=> ".join(sides)}"\nenergy = "{energy!r} kJ/mol"\n'
+            f'forward = "{reaction.forward!r} {unit}"'
+        )
+    top = CLOSED[: CLOSED.index("[reactions.relay]")]
+    return "\n".join([top, *lines, *reactions, CLOSED[CLOSED.index("[run]") :].replace("400", "800")])
+
+
+def test_an_enzyme_built_by_hand_with_a_wrong_constant_is_exposed_by_check() -> None:
+    """The steps close whatever their constants, so only counts can tell: half a kilojoule off against the right file."""
+    right, wrong = driblet.loads(by_hand(0.0)), driblet.loads(by_hand(0.5))
+    assert check_run(driblet.run(right), right).verdict == "consistent"
+    assert check_run(driblet.run(wrong), right).verdict == "inconsistent"
+
+
 def test_adenylate_kinase_at_equilibrium() -> None:
     """2 ADP <=> ATP + AMP, one copy of enzyme that binds two ADP: end states against the exact law; false alarms 1e-3."""
     text = """

@@ -81,6 +81,9 @@ def network_facts(file: Path) -> dict[str, object]:
             }
             for j, c in enumerate(network.channels)
         ],
+        "additions": [
+            {"time_s": a.at_s, "species": a.species, "copies": a.mean_copies(omega)} for a in system.additions
+        ],
     }
 
 

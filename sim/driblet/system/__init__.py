@@ -1,6 +1,19 @@
 """The system file: its schema, its equations and expressions, and the System they build."""
 
 from driblet.system.build import load, loads
-from driblet.system.model import Compartment, Conditions, Reaction, Readout, RunSettings, Species, System
+from driblet.system.mechanisms.enzyme import Enzyme
+from driblet.system.model import Addition, Compartment, Conditions, Reaction, Readout, RunSettings, Species, System
 
-__all__ = ["Compartment", "Conditions", "Reaction", "Readout", "RunSettings", "Species", "System", "load", "loads"]
+__all__ = [
+    "Addition",
+    "Compartment",
+    "Conditions",
+    "Enzyme",
+    "Reaction",
+    "Readout",
+    "RunSettings",
+    "Species",
+    "System",
+    "load",
+    "loads",
+]

@@ -241,6 +241,8 @@ def _substrate(substrate: Substrate, kcat: float, g: float, interaction: float) 
 
 def _weakest_products(problem: Problem, kcat: float | None = None) -> ChainConstants | None:
     """The constants with the weakest products that break no limit, or None."""
+    from scipy.optimize import brentq, minimize_scalar  # slow to import, and needed by systems with enzymes only
+
     rate = problem.kcat if kcat is None else kcat
 
     def margin(ln_weak: float) -> float:
