@@ -28,6 +28,7 @@ from functools import lru_cache
 from pathlib import Path
 from typing import Any, NamedTuple
 
+from driblet.errors import InputError
 from driblet_analysis.sweep.files import writing
 
 FOLDER = "claims"
@@ -70,7 +71,8 @@ class Claim:
     def at(self, point: int) -> None:
         """Note the point that is worked on, so that whoever takes over knows what was deadly."""
         self._facts["at"] = point
-        self._write()
+        with contextlib.suppress(OSError):  # a disk that is full will be told when results are written
+            self._write()
 
     def complete(self) -> None:
         """Note that nothing is left to do in this shard."""
@@ -86,13 +88,18 @@ class Claim:
         self._thread.join()
         done = self._facts["state"] == "done"
         self._facts.update(state="done" if done else "released", at=None)
-        self._write()
+        with writing(self.path.parent.parent):
+            self._write()
 
     def _write(self) -> None:
         """Replace the contents; without fsync: after a power cut there is no owner, and any contents will do."""
         temporary = self.path.with_name(f".{secrets.token_hex(4)}.tmp")
-        temporary.write_text(json.dumps(self._facts), encoding="utf-8")
-        os.replace(temporary, self.path)
+        try:
+            temporary.write_text(json.dumps(self._facts), encoding="utf-8")
+            os.replace(temporary, self.path)
+        except OSError:
+            temporary.unlink(missing_ok=True)
+            raise
 
     def __enter__(self) -> Claim:
         return self
@@ -100,8 +107,8 @@ class Claim:
     def __exit__(self, kind: object, *_: object) -> None:
         try:
             self.release()
-        except OSError:
-            if kind is None:
+        except InputError:
+            if kind is None:  # else the first fault is the one to tell
                 raise
 
 

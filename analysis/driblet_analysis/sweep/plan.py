@@ -160,5 +160,5 @@ def _check_columns(plan: Plan, rows: Sequence[Sequence[object]], sweep: Sweep) -
             column_of(row[i] for row in rows)  # type: ignore[misc]
         except AxisError as error:
             problems.append(Problem(place(sweep, path), f"{error} (the directory's points included)"))
-    if problems:
-        raise InputError(sweep.source, problems)
+    if problems:  # of the first only: derived values follow their axes
+        raise InputError(sweep.source, problems[:1])

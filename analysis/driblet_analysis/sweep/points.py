@@ -56,7 +56,7 @@ def make_points(sweep: Sweep) -> Points:
         except KeyPathError as error:
             faults.add(number, row, Problem("axes", str(error)))
         except InputError as error:
-            for problem in error.problems:
+            for problem in _causes(sweep, error.problems):
                 faults.add(number, row, problem)
     faults.raise_any()
     paths = (*sweep.paths, *sweep.formulas)
@@ -68,6 +68,13 @@ def make_points(sweep: Sweep) -> Points:
             raise InputError(sweep.source, [Problem(place(sweep, path), str(error))]) from error
     hashes = [stream_key(sweep.paths, row) for row in values]
     return Points(paths, rows, tuple(columns), np.array(hashes, dtype=np.uint64))
+
+
+def _causes(sweep: Sweep, problems: Sequence[Problem]) -> list[Problem]:
+    """Problems without those of derived values that only repeat what is wrong with an axis."""
+    wrong = {path for path in sweep.paths if any(_touches(path, p.key) for p in problems)}
+    follows = [path for path, formula in sweep.formulas.items() if wrong & set(formula.paths)]
+    return [p for p in problems if not any(p.key and _touches(path, p.key) for path in follows)]
 
 
 def point_system(raw: Mapping[str, Any], changes: Mapping[str, Scalar], source: str, text: str = "") -> System:
@@ -133,21 +140,32 @@ class _Faults:
         self.values[number] = row
 
     def raise_any(self) -> None:
-        if self.found:
-            problems = list(itertools.islice(self._lines(), _MOST_PROBLEMS))
-            left = len(self.found) - len(problems)
-            if left > 0:
-                problems.append(Problem("", f"and {left} more problems in other points"))
-            raise InputError(self.sweep.source, problems)
+        """Raise what was found, the first of it."""
+        lines = list(self._lines())
+        if lines:
+            left = len(lines) - _MOST_PROBLEMS
+            more = [Problem("", f"and {left} more problems in other points")] if left > 0 else []
+            raise InputError(self.sweep.source, lines[:_MOST_PROBLEMS] + more)
 
     def _lines(self) -> Iterator[Problem]:
+        told: set[str] = set()
         for problem, numbers in self.found.items():
-            others = f" and {len(numbers) - 1} more" if len(numbers) > 1 else ""
-            where = f"point {numbers[0]} ({describe(self.sweep.paths, self.values[numbers[0]])}){others}"
-            path = next((p for p in (*self.sweep.paths, *self.sweep.formulas) if _touches(p, problem.key)), None)
+            path = self._path(problem)
             text = problem.text if path == problem.key or not problem.key else f"{problem.key}: {problem.text}"
-            yield Problem(place(self.sweep, path), f"{text}; in {where}") if path else Problem(where, text)
+            if path is None:
+                yield Problem(self._where(numbers), text)
+            elif path not in told:  # one line an axis, though every value may have words of its own
+                told.add(path)
+                alike = {n for other, ns in self.found.items() if self._path(other) == path for n in ns}
+                yield Problem(place(self.sweep, path), f"{text}; in {self._where(sorted(alike))}")
+
+    def _path(self, problem: Problem) -> str | None:
+        return next((p for p in (*self.sweep.paths, *self.sweep.formulas) if _touches(p, problem.key)), None)
+
+    def _where(self, numbers: list[int]) -> str:
+        others = f" and {len(numbers) - 1} more" if len(numbers) > 1 else ""
+        return f"point {numbers[0]} ({describe(self.sweep.paths, self.values[numbers[0]])}){others}"
 
 
 def _touches(path: str, key: str) -> bool:
-    return key == path or key.startswith(f"{path}.") or path.startswith(f"{key}.")
+    return bool(key) and (key == path or key.startswith(f"{path}.") or path.startswith(f"{key}."))

@@ -99,7 +99,7 @@ def submit(directory: str | Path, options: Options, *, retry: bool = False) -> S
 def script_text(plan: Plan, options: Options, parts: int, retry: bool) -> str:
     """The job script: without an array it warms up, as task K of an array it does part K."""
     folder = (plan.directory / FOLDER).absolute()
-    lines = ["#!/bin/bash", f"#SBATCH --job-name={_job_name(plan)}", f"#SBATCH --output={_log(folder, '%A_%a')}"]
+    lines = ["#!/bin/bash", f"#SBATCH --job-name={_job_name(plan)}", f'#SBATCH --output="{_log(folder, "%A_%a")}"']
     lines += [f"#SBATCH --cpus-per-task={options.cpus}", f"#SBATCH --signal=B:USR1@{WARNING_SECONDS}"]
     wanted = {"partition": options.partition, "account": options.account, "time": options.time, "mem": options.memory}
     lines += [f"#SBATCH --{name}={value}" for name, value in wanted.items() if value]
@@ -207,8 +207,7 @@ def _job_name(plan: Plan) -> str:
 
 def _log(folder: Path, name: str) -> str:
     """A log's name for Slurm, which replaces what follows a percent sign."""
-    path = str(folder.absolute()).replace("%", "%%")
-    return f'"{path}/{name}.log"' if " " in path else f"{path}/{name}.log"
+    return f"{str(folder.absolute()).replace('%', '%%')}/{name}.log"
 
 
 def _sbatch(arguments: list[str]) -> str:

@@ -178,6 +178,8 @@ def _axes(
             if key in raw:
                 problems.append(Problem(key, "does not go with points_from, which gives every point in full"))
         name = raw["points_from"]
+        if problems:
+            return (), None
         if not isinstance(name, str) or not name.strip():
             problems.append(Problem("points_from", 'the name of a CSV file is needed, such as "points.csv"'))
             return (), None
@@ -248,13 +250,16 @@ def _formulas(
                 raise DerivedError('a formula in quotes is needed, such as "0.05 * species.ATP"')
             replaced(base, {path: "1"})
             formula = read_formula(text)
-            for used in formula.paths:
-                if used not in paths and used not in formulas:
-                    lookup(base, used)
+            _check_used(base, [p for p in formula.paths if p not in paths and p not in formulas])
             formulas[path] = formula
-        except DerivedError as error:
+        except (DerivedError, KeyPathError) as error:
             problems.append(Problem(key, str(error)))
-        except KeyPathError as error:
-            unknown = path if not isinstance(text, str) else text
-            problems.append(Problem(key, f'"{unknown}" {error}' if unknown != path else str(error)))
     return formulas
+
+
+def _check_used(base: Mapping[str, Any], paths: list[str]) -> None:
+    for path in paths:
+        try:
+            lookup(base, path)
+        except KeyPathError as error:
+            raise DerivedError(f'"{path}" {error}') from error

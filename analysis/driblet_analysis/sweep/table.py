@@ -152,7 +152,7 @@ def read_table(path: str | Path) -> Table:
     except OSError as error:
         reason = (error.strerror or "is not HDF5").lower()
         raise one_problem(str(path), "", f"cannot be read: {reason}") from error
-    except (ValueError, KeyError, RuntimeError) as error:
+    except (ValueError, KeyError, RuntimeError, IndexError) as error:
         if hasattr(error, "problems"):
             raise
         raise one_problem(str(path), "", "is no table of a sweep; `driblet sweep collect` makes one") from error

@@ -5,7 +5,6 @@ Every way of running a sweep (local processes, parts, Slurm tasks, Dask tasks) e
 
 from __future__ import annotations
 
-import random
 import signal
 import tempfile
 import threading
@@ -149,8 +148,7 @@ class Worker:
                 (suspect if standing.suspects else resumed).append((shard, standing))
             elif standing.state == "silent":
                 silent.append(shard)
-        start = random.randrange(len(fresh)) if fresh else 0  # workers that begin together part at once
-        return [*fresh[start:], *fresh[:start], *resumed, *suspect], silent
+        return [*fresh, *resumed, *suspect], silent
 
     def _to_retry(self, shard: int) -> bool:
         if not self.retry or shard in self._retried:
