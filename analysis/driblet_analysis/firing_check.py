@@ -43,8 +43,10 @@ class Firings:
 
 
 def sum_firings(fired: NDArray[np.int64], monomial_time: Array, rates: Array) -> Firings:
-    """Sum over replicates. fired, rates, monomial_time : shape=(replicates, channels); rates 1/s per monomial."""
-    return Firings(fired.sum(axis=0).astype(float), (rates * monomial_time).sum(axis=0), len(fired))
+    """Sum over replicates. fired, rates, monomial_time : shape=(replicates, channels); rates as Network.rates."""
+    return Firings(
+        fired.sum(axis=0).astype(float), (rates[:, : fired.shape[1]] * monomial_time).sum(axis=0), len(fired)
+    )
 
 
 def kinetic_tests(system: System, network: Network, firings: Firings) -> list[CheckRow]:

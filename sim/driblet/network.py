@@ -3,10 +3,11 @@
 A rate constant k of molecularity m has the units of v = k prod [A_i]^nu_i. With Omega = N_A V (copies per mol/L) a channel
 fires with propensity
 
-    w(n) = k Omega prod_free (n_i)_nu_i / Omega^nu_i prod_held c_i^nu_i,
+    w(n) = k Omega prod_free (n_i)_nu_i / Omega^nu_i prod_held c_i^nu_i f,
 
 (n)_k the falling factorial, and the backward constant is k / K', K' = exp(-dG0'/RT): then w+(n)/w-(n + nu) = exp(-dG/RT)
-for every single transition (van Kampen, Phys. Lett. A 59:333, 1976).
+for every single transition (van Kampen, Phys. Lett. A 59:333, 1976). f is 1 for mass action; a lumped or saturable law has
+a ratio of polynomials, taken at the state common to both directions, so that the ratio above holds as it does without.
 """
 
 from __future__ import annotations
@@ -20,6 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.engines.contract import NetworkArrays
+from driblet.factor_nodes import FactorNodes, factor_nodes
 from driblet.system.model import Reaction, System
 
 FORWARD, BACKWARD = 1, -1
@@ -31,7 +33,8 @@ class Channel:
     """One direction of one reaction.
 
     Attributes: reaction : index; direction : FORWARD or BACKWARD; reactants : (free species index, multiplicity);
-    change : (free species index, molecules); constant : propensity constant at Omega = 1; order : counted molecules.
+    change : (free species index, molecules); constant : propensity constant at Omega = 1; order : counted molecules;
+    factor : what multiplies the law of mass action, None for nothing.
     """
 
     reaction: int
@@ -40,6 +43,7 @@ class Channel:
     change: tuple[tuple[int, int], ...]
     constant: float
     order: int
+    factor: FactorNodes | None = None
 
 
 @dataclass(frozen=True)
@@ -67,11 +71,43 @@ class Network:
     def rates(self, omega: NDArray[np.float64]) -> NDArray[np.float64]:
         """Propensity constants, 1/s per product of falling factorials, shape=(replicates, channels).
 
-        omega : copies per mol/L of each replicate, shape=(replicates,).
+        omega : copies per mol/L of each replicate, shape=(replicates,). Where channels have factors, the coefficients of
+        their nodes follow: all denominators', then all numerators', shape=(replicates, channels + 2 nodes).
         """
         constant = np.array([c.constant for c in self.channels])
         power = np.array([1 - c.order for c in self.channels])
-        return np.ascontiguousarray(constant * np.asarray(omega, dtype=float)[:, None] ** power)
+        constants = constant * np.asarray(omega, dtype=float)[:, None] ** power
+        parts = [c.factor.coefficients(omega) for c in self.channels if c.factor is not None]
+        return np.ascontiguousarray(np.hstack([constants, *(p[0] for p in parts), *(p[1] for p in parts)]))
+
+    @cached_property
+    def factored(self) -> dict[int, slice]:
+        """For each channel with a factor where its nodes lie among those of all."""
+        found, start = {}, 0
+        for j, channel in enumerate(self.channels):
+            if channel.factor is not None:
+                end = start + len(channel.factor.parent)
+                found[j] = slice(start, end)
+                start = end
+        return found
+
+    def factors(
+        self, counts: NDArray[np.float64], rates: NDArray[np.float64], exact: bool = True
+    ) -> NDArray[np.float64]:
+        """What multiplies mass action in each channel, shape=(..., channels). Arguments as for `propensities`.
+
+        exact=False : as in large volumes, where one molecule more or less does not matter.
+        """
+        n, rates, channels = np.asarray(counts, dtype=float), np.asarray(rates), len(self.channels)
+        out = np.ones((*np.broadcast_shapes(n.shape[:-1], rates.shape[:-1]), channels))
+        nodes = (rates.shape[-1] - channels) // 2
+        for j, place in self.factored.items():
+            factor = self.channels[j].factor
+            assert factor is not None
+            below = rates[..., channels : channels + nodes][..., place]
+            above = rates[..., channels + nodes :][..., place]
+            out[..., j] = factor.value(n, below, above, exact)
+        return out
 
     @property
     def stoichiometry(self) -> NDArray[np.int64]:
@@ -92,14 +128,14 @@ class Network:
         return found
 
     def propensities(self, counts: NDArray[np.float64], rates: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Propensities of states, 1/s. counts : (..., species); rates : (channels,) or (..., channels)."""
+        """Propensities of states, 1/s. counts : (..., species); rates : as `rates` gives them, (..., channels) or more."""
         n = np.asarray(counts, dtype=float)
-        out = np.broadcast_to(rates, (*n.shape[:-1], len(self.channels))).copy()
+        out = np.broadcast_to(rates[..., : len(self.channels)], (*n.shape[:-1], len(self.channels))).copy()
         for j, channel in enumerate(self.channels):
             for i, multiplicity in channel.reactants:
                 for k in range(multiplicity):
                     out[..., j] *= n[..., i] - k
-        return out
+        return out * self.factors(n, rates) if self.factored else out
 
     @cached_property
     def arrays(self) -> NetworkArrays:
@@ -115,6 +151,9 @@ class Network:
                 for k in range(multiplicity):
                     reactant[j, slot], offset[j, slot] = i, k
                     slot += 1
+            if channel.factor is not None:
+                for i in {i for i in channel.factor.species if i < n} - {i for i, _ in channel.reactants}:
+                    needed_by[i].append(j)
         dependents = [sorted({d for i, _ in c.change for d in needed_by[i]}) for c in self.channels]
         change_start, change = _csr([list(c.change) for c in self.channels])
         depend_start, depend = _csr(dependents)
@@ -128,7 +167,23 @@ class Network:
             depend_start,
             np.array(depend, dtype=np.int64),
             np.array([d[0] if d else m for d in dependents], dtype=np.int64),
+            *self._factor_arrays(),
         )
+
+    def _factor_arrays(self) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.int64], NDArray[np.float64]]:
+        """factor_start, node_parent, node_species and node_offset of the contract."""
+        start = np.zeros((len(self.channels), 3), dtype=np.int64)
+        parent: list[int] = []
+        species: list[int] = []
+        offset: list[float] = []
+        for j, place in self.factored.items():
+            factor = self.channels[j].factor
+            assert factor is not None
+            start[j] = place.start, place.start + factor.numerator_nodes, place.stop
+            parent += [p + 1 for p in factor.parent]
+            species += factor.species
+            offset += factor.offset
+        return start, np.array(parent, dtype=np.int64), np.array(species, dtype=np.int64), np.array(offset, dtype=float)
 
 
 def _csr(rows: Iterable[list[T]]) -> tuple[NDArray[np.int64], list[T]]:
@@ -150,5 +205,8 @@ def _channels_of(r: int, reaction: Reaction, index: dict[str, int], held: Mappin
                 constant *= held[name] ** number
         reactants = tuple((index[name], number) for name, number in terms if name in index)
         change = tuple((index[n], direction * d) for n, d in equation.change.items() if n in index)
-        channels.append(Channel(r, direction, reactants, change, constant, sum(k for _, k in reactants)))
+        factor = None
+        if reaction.factor is not None:
+            factor = factor_nodes(reaction.factor, dict(terms), index, held)
+        channels.append(Channel(r, direction, reactants, change, constant, sum(k for _, k in reactants), factor))
     return channels

@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from driblet.energetics.cycles import conservation_laws
 from driblet.engines.contract import EnsembleState, Recorders
+from driblet.engines.factors import factored_channels
 from driblet.engines.recording import new_averages, new_occupancy, recorders_for
 from driblet.network import Network
 from driblet.store import PerReplicate
@@ -33,7 +34,8 @@ class SumsPlan:
     Attributes: edge_s : (E,), window edges; factor : int64, (Q, 3), offset : (Q, 3), the distinct monomials; row : int64,
     which of them each channel and then each species has; histograms : whether time is counted at every event, which can
     cost more than the simulation itself, or taken from the samples; bin_width : int64, (N,), counts per bin of the
-    histograms; span_s : when histograms are gathered.
+    histograms; span_s : when histograms are gathered; paced : of contract.Averages, monomials that are integrated together
+    with the factor of their channel.
     """
 
     edge_s: NDArray[np.float64]
@@ -45,6 +47,7 @@ class SumsPlan:
     span_s: tuple[float, float]
     channels: int
     species: int
+    paced: NDArray[np.int64] | None = None
 
     @classmethod
     def of(
@@ -63,7 +66,12 @@ class SumsPlan:
         n = len(network.species)
         singles = np.column_stack([np.arange(n), np.full(n, n), np.full(n, n)])
         arrays = network.arrays
-        factor, offset = np.vstack([arrays.reactant, singles]), np.vstack([arrays.offset, np.zeros((n, 3))])
+        reactant, shift = arrays.reactant.copy(), arrays.offset.copy()
+        factored = factored_channels(arrays)
+        # zero, and each of its own, so that no two of them are taken for one
+        reactant[factored] = n
+        shift[factored] = np.column_stack([np.ones(len(factored)), np.arange(len(factored)), np.zeros(len(factored))])
+        factor, offset = np.vstack([reactant, singles]), np.vstack([shift, np.zeros((n, 3))])
         distinct, row = np.unique(np.hstack([factor, offset]), axis=0, return_inverse=True)
         return cls(
             edges,
@@ -75,6 +83,7 @@ class SumsPlan:
             (begin, duration_s),
             len(network.channels),
             n,
+            np.column_stack([row.reshape(-1)[factored], np.arange(len(factored))]),
         )
 
     def recorders(self, state: EnsembleState, start_s: float, end_s: float) -> Recorders:
@@ -82,7 +91,7 @@ class SumsPlan:
         replicates = len(state.reason)
         inside = self.edge_s[(self.edge_s > start_s) & (self.edge_s < end_s)]
         edges = np.concatenate([[start_s], inside, [end_s]])
-        averages = new_averages(edges, self.factor, self.offset, replicates, self.channels)
+        averages = new_averages(edges, self.factor, self.offset, replicates, self.channels, self.paced)
         span = (max(start_s, self.span_s[0]), min(end_s, self.span_s[1]))
         if not self.histograms:
             return recorders_for(state, averages)

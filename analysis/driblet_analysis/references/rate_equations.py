@@ -27,18 +27,28 @@ def right_hand_side(
     need, change = channel_matrices(network)
     rates = network.rates(np.array([omega]))[0]
 
+    constants = rates[: len(network.channels)]
+
     def speeds(copies: Array) -> Array:
-        return np.asarray(rates * np.prod(copies**need, axis=1))
+        gross = np.asarray(constants * np.prod(copies**need, axis=1))
+        return gross * network.factors(copies, rates, exact=False) if network.factored else gross
 
     def slope(_: float, copies: Array) -> Array:
         return np.asarray(speeds(copies) @ change)
 
     def jacobian(_: float, copies: Array) -> Array:
         out = np.zeros((len(copies), len(copies)))
+        if network.factored:
+            for i in range(len(copies)):
+                step = 1e-6 * max(1.0, abs(copies[i]))
+                up, down = copies.copy(), copies.copy()
+                up[i], down[i] = copies[i] + step, max(0.0, copies[i] - step)
+                out[:, i] = (slope(0.0, up) - slope(0.0, down)) / (up[i] - down[i])
+            return out
         for i in range(len(copies)):
             less = need.copy()
             less[:, i] = np.maximum(less[:, i] - 1, 0)
-            out[:, i] = (rates * need[:, i] * np.prod(copies**less, axis=1)) @ change
+            out[:, i] = (constants * need[:, i] * np.prod(copies**less, axis=1)) @ change
         return out
 
     return slope, jacobian
@@ -92,6 +102,8 @@ def relaxation_times(system: System) -> Array:
     need, _ = channel_matrices(network)
     forward = network.channel_index(1)[active]
     flux = rates[forward] * np.prod((load * omega) ** need[forward], axis=1)
+    if network.factored:
+        flux = flux * network.factors(load * omega, rates, exact=False)[forward]
     M = S * np.sqrt(flux) / np.sqrt(load[touched] * omega)[:, None]
     independent = int(np.linalg.matrix_rank(S.astype(float)))
     singular = np.linalg.svd(M, compute_uv=False)[:independent]

@@ -8,9 +8,10 @@ engine returns, which replicates share a call, how many advance in lockstep and 
 replicate's bits: all that a replicate needs to go on is in its rows.
 
 Canonical arithmetic. An event takes two words of the replicate's stream, the first for the waiting time and the second for
-the channel. Propensities are constant * a * (b - o) * (c - p), left to right; they are summed in channel order, in groups
-where there are many (sums.py); a channel is found by counting the cumulative sums that do not exceed the target. Nothing
-is contracted, reassociated or replaced by a reciprocal. So every method gives the same bits.
+the channel. Propensities are constant * a * (b - o) * (c - p), left to right, but where they have a factor (factors.py);
+they are summed in channel order, in groups where there are many (sums.py); a channel is found by counting the cumulative
+sums that do not exceed the target. Nothing is contracted, reassociated or replaced by a reciprocal. So every method gives
+the same bits.
 """
 
 from __future__ import annotations
@@ -47,6 +48,13 @@ class NetworkArrays(NamedTuple):
     change_start, change_species, change_amount : CSR over channels, what a firing changes
     depend_start, depend_channel : CSR over channels, which propensities a firing changes
     first_dependent : int64, (M,), the lowest of those
+    factor_start : int64, (M, 3), of a channel whose propensity is mass action times a ratio of polynomials (factors.py): its
+    first node, the node after those of the numerator (its first node where that is 1), the node after its last; else equal
+    node_parent, node_species, node_offset : (T,); node t of a channel stands for the monomial of one earlier node (1 + its
+    place in the channel, 0 for the constant 1) times max(n - offset, 0)
+
+    Coefficients of the nodes differ between volumes: they follow the constants in `rates`, (R, M + 2 T), all denominators'
+    first.
     """
 
     reactant: NDArray[np.int64]
@@ -57,6 +65,10 @@ class NetworkArrays(NamedTuple):
     depend_start: NDArray[np.int64]
     depend_channel: NDArray[np.int64]
     first_dependent: NDArray[np.int64]
+    factor_start: NDArray[np.int64]
+    node_parent: NDArray[np.int64]
+    node_species: NDArray[np.int64]
+    node_offset: NDArray[np.float64]
 
 
 class EnsembleState(NamedTuple):
@@ -94,6 +106,8 @@ class Averages(NamedTuple):
 
     edge : float64, (E,), s, increasing, the last not after the last grid point: window k is [edge_k, edge_k+1)
     factor : int64, (Q, 3), species as in NetworkArrays.reactant; offset : float64, (Q, 3)
+    paced : int64, (K, 2), monomials that are those of channels with a factor, integrated together with it: q and the
+    channel's row in `pace` (factors.py); `factor` and `offset` make such a q zero
     integral : float64, (R, E - 1, Q), s times molecules to the power of the monomial's order; the result
     firings : int64, (R, E, M), cumulative firings at each edge; the result
     running : float64, (R, Q), of the window the replicate is in; next_edge : int64, (R,). Carried between calls.
@@ -104,6 +118,7 @@ class Averages(NamedTuple):
     edge: NDArray[np.float64]
     factor: NDArray[np.int64]
     offset: NDArray[np.float64]
+    paced: NDArray[np.int64]
     integral: NDArray[np.float64]
     firings: NDArray[np.int64]
     running: NDArray[np.float64]

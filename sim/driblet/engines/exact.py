@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.engines.contract import RUNNING, EnsembleState, NetworkArrays, Recorders, Samples
+from driblet.engines.factors import factor_rows, most_nodes
 from driblet.engines.lanes import LANES, advance_lanes, lane_table, new_lanes
 from driblet.engines.recording import recorders_for
 from driblet.engines.scalar import advance_scalar
@@ -48,6 +49,9 @@ class ExactEngine:
         self.rows = sum_rows(len(network.reactant))
         self.refresh = refresh_plan(network, self.rows)
         self.table = lane_table(network, species, lanes)
+        self.nodes = most_nodes(network)
+        # None has kernels compiled without a trace of factors
+        self.factor_row = factor_rows(network) if self.nodes else None
 
     def advance(
         self,
@@ -57,17 +61,17 @@ class ExactEngine:
         budget: int,
         recorders: Recorders | None = None,
     ) -> int:
-        """See contract.py. rates : float64, (R, M), 1/s per product of falling factorials."""
+        """See contract.py. rates : float64, (R, M + 2 T), 1/s per product of falling factorials, then coefficients."""
         recorders = recorders or recorders_for(state)
         running = int(np.count_nonzero(state.reason == RUNNING))
         logging = recorders.log.time.shape[1] > 0
-        method = self.method or choose_method(rates.shape[1], running, logging)
+        method = self.method or choose_method(state.firings.shape[1], running, logging)
         with np.errstate(all="ignore"):  # for kernels that run as plain Python
             if method == "lanes":
                 if logging:
                     raise ValueError("an event log is kept by the scalar method only")
-                fewest = 1 if self.method else fewest_lanes(rates.shape[1])
-                lanes = new_lanes(state, self.rows, recorders, self.lanes)
+                fewest = 1 if self.method else fewest_lanes(state.firings.shape[1])
+                lanes = new_lanes(self.network, state, self.rows, recorders, self.lanes)
                 lanes.common_rate[:] = rates[0]
                 shared = bool((rates == rates[0]).all())
                 return int(
@@ -75,6 +79,7 @@ class ExactEngine:
                         self.network,
                         self.table,
                         self.rows,
+                        self.factor_row,
                         lanes,
                         shared,
                         fewest,
@@ -85,7 +90,20 @@ class ExactEngine:
                         recorders,
                     )
                 )
-            return int(advance_scalar(self.network, self.rows, self.refresh, rates, state, samples, budget, recorders))
+            return int(
+                advance_scalar(
+                    self.network,
+                    self.rows,
+                    self.refresh,
+                    self.factor_row,
+                    self.nodes,
+                    rates,
+                    state,
+                    samples,
+                    budget,
+                    recorders,
+                )
+            )
 
 
 def advance(

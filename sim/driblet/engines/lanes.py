@@ -26,6 +26,7 @@ from driblet.engines.contract import (
     NetworkArrays,
     Recorders,
 )
+from driblet.engines.factors import factored_channels, integrate_pace, most_nodes, sum_with_factors
 from driblet.engines.random_stream import minus_log, output, selection_uniform, step, waiting_uniform
 from driblet.engines.recording import (
     close_windows,
@@ -64,9 +65,10 @@ class LaneTable(NamedTuple):
 class Lanes(NamedTuple):
     """The working memory of W lanes; (.., W) arrays. See contract.py for what each holds of its replicate.
 
-    counts : N + 2 rows, the dummy of count 1 and one that is never read; common_rate : (M,), used when all lanes share
-    them; chosen : the channel, as a double; since : time up to which everything is recorded; mark : the next time with
-    something to record; pending : (C, W), 1 where a condition is not met yet; row : the replicate.
+    counts : N + 2 rows, the dummy of count 1 and one that is never read; common_rate : (M + 2 T,), used when all lanes
+    share them; pace, scratch : see factors.py; chosen : the channel, as a double; since : time up to which everything is
+    recorded; mark : the next time with something to record; pending : (C, W), 1 where a condition is not met yet; row : the
+    replicate.
     """
 
     counts: NDArray[np.float64]
@@ -75,6 +77,8 @@ class Lanes(NamedTuple):
     sums: NDArray[np.float64]
     firings: NDArray[np.int64]
     stream: NDArray[np.uint64]
+    pace: NDArray[np.float64]
+    scratch: NDArray[np.float64]
     running: NDArray[np.float64]
     weight: NDArray[np.float64]
     pending: NDArray[np.float64]
@@ -103,7 +107,9 @@ def lane_table(network: NetworkArrays, species: int, lanes: int = LANES) -> Lane
     return LaneTable(needed, changes, index, (index * lanes).astype(np.uint64), amount)
 
 
-def new_lanes(state: EnsembleState, rows: SumRows, recorders: Recorders, lanes: int = LANES) -> Lanes:
+def new_lanes(
+    network: NetworkArrays, state: EnsembleState, rows: SumRows, recorders: Recorders, lanes: int = LANES
+) -> Lanes:
     """Working memory; aligned, so that no vector straddles two cache lines."""
 
     def aligned(kind: type, *shape: int) -> NDArray[Any]:
@@ -113,13 +119,16 @@ def new_lanes(state: EnsembleState, rows: SumRows, recorders: Recorders, lanes: 
         return memory[start : start + size].view(kind).reshape(shape)
 
     channels = state.firings.shape[1]
+    constants = channels + 2 * len(network.node_parent)
     return Lanes(
         counts=aligned(np.float64, state.counts.shape[1] + 1, lanes),
-        rate=aligned(np.float64, channels, lanes),
-        common_rate=aligned(np.float64, channels),
+        rate=aligned(np.float64, constants, lanes),
+        common_rate=aligned(np.float64, constants),
         sums=aligned(np.float64, rows.end, lanes),
         firings=aligned(np.int64, channels + 1, lanes),
         stream=aligned(np.uint64, 4, lanes),
+        pace=aligned(np.float64, len(factored_channels(network)), lanes),
+        scratch=aligned(np.float64, most_nodes(network) + 3, lanes),
         running=aligned(np.float64, len(recorders.averages.factor), lanes),
         weight=aligned(np.float64, len(recorders.conditions.factor), lanes),
         pending=aligned(np.float64, len(recorders.conditions.stops), lanes),
@@ -143,6 +152,7 @@ def enter(lanes, lane, r, rates, state, running, weight, first_met, mark):  # ty
     lanes.counts[counts.shape[1], lane] = 0.0
     for j in range(rates.shape[1]):
         lanes.rate[j, lane] = rates[r, j]
+    for j in range(state.firings.shape[1]):
         lanes.firings[j, lane] = state.firings[r, j]
     for k in range(4):
         lanes.stream[k, lane] = state.stream[r, k]
@@ -157,7 +167,7 @@ def enter(lanes, lane, r, rates, state, running, weight, first_met, mark):  # ty
     lanes.row[lane] = r
     lanes.sample[lane] = state.next_sample[r]
     lanes.mark[lane] = mark
-    lanes.chosen[lane] = np.float64(rates.shape[1])
+    lanes.chosen[lane] = np.float64(state.firings.shape[1])
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
@@ -182,7 +192,7 @@ def leave(lanes, lane, reason, state, running):  # type: ignore[no-untyped-def]
 @njit(nogil=True, cache=CACHE, error_model="numpy")
 def move(lanes, source, lane):  # type: ignore[no-untyped-def]
     """Move a lane to another place in the middle of a step, and leave its old place empty: nothing can fire there."""
-    for matrix in (lanes.counts, lanes.rate, lanes.running, lanes.weight, lanes.pending):
+    for matrix in (lanes.counts, lanes.rate, lanes.pace, lanes.running, lanes.weight, lanes.pending):
         for i in range(matrix.shape[0]):
             matrix[i, lane] = matrix[i, source]
             matrix[i, source] = 0.0
@@ -207,7 +217,7 @@ def empty(lanes, lane):  # type: ignore[no-untyped-def]
     lanes.mark[lane] = np.inf
     lanes.clock[lane] = 0.0
     lanes.since[lane] = 0.0
-    lanes.chosen[lane] = np.float64(lanes.rate.shape[0])
+    lanes.chosen[lane] = np.float64(lanes.firings.shape[0] - 1)
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
@@ -403,7 +413,7 @@ def next_running(reason, after):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def advance_lanes(network, table, rows, lanes, shared, fewest, rates, state, samples, budget, recorders):  # type: ignore[no-untyped-def]
+def advance_lanes(network, table, rows, factor_row, lanes, shared, fewest, rates, state, samples, budget, recorders):  # type: ignore[no-untyped-def]
     """See contract.py. shared : whether all rates are `lanes.common_rate`; fewest : returns when fewer replicates than
     this are left, since they are better off one after the other. Event logs are not kept here.
     """
@@ -416,6 +426,7 @@ def advance_lanes(network, table, rows, lanes, shared, fewest, rates, state, sam
     lane_row, lane_sample, pending, sums = lanes.row, lanes.sample, lanes.pending, lanes.sums
     every = 1 if budget > 0 else 2  # no literal: views of no particular layout, see recording.py
     counts, firings, running = lanes.counts[::every], lanes.firings[::every], lanes.running[::every]
+    pace = lanes.pace[::every]
     sampled_counts, sampled_firings = samples.counts, samples.firings
     per_width, span, standing_since, seconds = 1.0 / occupancy.width, occupancy.span, occupancy.since, occupancy.seconds
     flat_slot = occupancy.slot[table.species.reshape(table.species.size)]
@@ -426,7 +437,7 @@ def advance_lanes(network, table, rows, lanes, shared, fewest, rates, state, sam
     flat_firings = lanes.firings.reshape(lanes.firings.size)
     flat_place = table.place.reshape(table.place.size)
     flat_amount = table.amount.reshape(table.amount.size)
-    nothing = np.float64(rates.shape[1])
+    nothing = np.float64(state.firings.shape[1])
     replicates = state.reason.size
     active = np.int64(0)
     upcoming = next_running(state.reason, active)
@@ -441,7 +452,14 @@ def advance_lanes(network, table, rows, lanes, shared, fewest, rates, state, sam
     while active >= fewest and fired < budget:
         width = -(-active // VECTOR) * VECTOR
         draw(lanes, width)
-        sum_propensities(network, table, rows, lanes, shared, width)
+        if factor_row is not None:
+            sum_with_factors(
+                rows.leaf, rows.upper, rows.source, factor_row, network.factor_start, network.node_parent,
+                network.node_species, network.node_offset, network.reactant, network.offset, lanes.rate, lanes.counts,
+                lanes.sums, lanes.pace, lanes.scratch, width,
+            )  # fmt: skip
+        else:
+            sum_propensities(network, table, rows, lanes, shared, width)
         passed = advance_clocks(rows, lanes, width)
         find_channels(rows, lanes, flat_sums, stride, width)
         for lane in range(active, width):
@@ -465,7 +483,7 @@ def advance_lanes(network, table, rows, lanes, shared, fewest, rates, state, sam
                         later = stop
                         reason = np.int64(STOP_CONDITION)
                 if averaging:
-                    since[lane] = close_windows(averages, r, since[lane], later, counts, firings, running, lane)
+                    since[lane] = close_windows(averages, r, since[lane], later, counts, firings, running, pace, lane)
                 sample = sample_until(
                     time, sampled_counts, sampled_firings, r, lane_sample[lane], later, counts, firings, lane
                 )
@@ -482,7 +500,7 @@ def advance_lanes(network, table, rows, lanes, shared, fewest, rates, state, sam
                     settle_histograms(occupancy, r, counts, lane, later)
                 if reason == STOP_CONDITION:
                     if averaging:
-                        cut_windows(averages, r, since[lane], later, counts, firings, running, lane)
+                        cut_windows(averages, r, since[lane], later, counts, firings, running, pace, lane)
                     sample = sample_until(
                         time, sampled_counts, sampled_firings, r, sample, np.inf, counts, firings, lane
                     )
@@ -513,6 +531,8 @@ def advance_lanes(network, table, rows, lanes, shared, fewest, rates, state, sam
                 integrate_lanes(
                     averages.factor, averages.offset, lanes.counts, lanes.running, clock, since, lanes.uniform, width
                 )
+                if factor_row is not None:
+                    integrate_pace(averages.paced, lanes.pace, lanes.running, lanes.uniform, width)
             for lane in range(width):
                 since[lane] = clock[lane]
         fire(table, lanes, flat_counts, flat_firings, flat_place, flat_amount, stride, width)

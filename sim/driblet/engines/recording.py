@@ -1,8 +1,9 @@
 """What kernels record besides advancing: the grid, windowed time integrals, histograms, conditions, events.
 
 The state is constant between two events, so everything here is exact. `counts`, `firings` and `running` are (thing, column)
-with one replicate a column: the arrays of a pack of lanes, or those of the state transposed. Both are passed as views of
-no particular layout, so that one compiled form serves both.
+with one replicate a column: the arrays of a pack of lanes, or those of the state transposed. So is `pace`, propensities
+with a factor over their constants (factors.py). All are passed as views of no particular layout, so that one compiled form
+serves both.
 """
 
 from __future__ import annotations
@@ -35,6 +36,7 @@ def new_averages(
     offset: NDArray[np.float64],
     replicates: int,
     channels: int,
+    paced: NDArray[np.int64] | None = None,
 ) -> Averages:
     """Averages of the given monomials over the windows between `edge_s`; see contract.Averages."""
     edges, monomials = len(edge_s), len(factor)
@@ -42,6 +44,7 @@ def new_averages(
         np.array(edge_s, dtype=np.float64),
         np.array(factor, dtype=INTS, order="C").reshape(monomials, 3),
         np.array(offset, dtype=np.float64, order="C").reshape(monomials, 3),
+        np.zeros((0, 2), dtype=INTS) if paced is None else np.array(paced, dtype=INTS, order="C"),
         np.zeros((replicates, max(0, edges - 1), monomials)),
         np.zeros((replicates, edges, channels), dtype=INTS),
         np.zeros((replicates, monomials)),
@@ -160,18 +163,21 @@ def sample_until(time, sampled_counts, sampled_firings, r, sample, later, counts
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def integrate(factor, offset, counts, running, column, span):  # type: ignore[no-untyped-def]
+def integrate(factor, offset, paced, counts, running, pace, column, span):  # type: ignore[no-untyped-def]
     """Add a time span of constant counts to the running integrals."""
     for q in range(np.uint64(factor.shape[0])):
         running[q, column] += monomial(factor, offset, q, counts, column) * span
+    for k in range(paced.shape[0]):
+        running[np.uint64(paced[k, 0]), column] += pace[np.uint64(paced[k, 1]), column] * span
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def close_windows(averages, r, since, later, counts, firings, running, column):  # type: ignore[no-untyped-def]
+def close_windows(averages, r, since, later, counts, firings, running, pace, column):  # type: ignore[no-untyped-def]
     """Integrate up to each edge before `later` and close its window; returns the time integrated up to."""
     edge = averages.next_edge[r]
     while edge < averages.edge.size and not later <= averages.edge[edge]:
-        integrate(averages.factor, averages.offset, counts, running, column, averages.edge[edge] - since)
+        span = averages.edge[edge] - since
+        integrate(averages.factor, averages.offset, averages.paced, counts, running, pace, column, span)
         since = averages.edge[edge]
         for q in range(averages.factor.shape[0]):
             if edge > 0:
@@ -185,9 +191,9 @@ def close_windows(averages, r, since, later, counts, firings, running, column): 
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def cut_windows(averages, r, since, end, counts, firings, running, column):  # type: ignore[no-untyped-def]
+def cut_windows(averages, r, since, end, counts, firings, running, pace, column):  # type: ignore[no-untyped-def]
     """Keep what a replicate that stops at `end` has of its window, and hold its firings at the later edges."""
-    integrate(averages.factor, averages.offset, counts, running, column, end - since)
+    integrate(averages.factor, averages.offset, averages.paced, counts, running, pace, column, end - since)
     edge = averages.next_edge[r]
     if 0 < edge < averages.edge.size:
         for q in range(averages.factor.shape[0]):

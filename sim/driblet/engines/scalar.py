@@ -18,6 +18,7 @@ from driblet.engines.contract import (
     STOP_CONDITION,
     TIME_REACHED,
 )
+from driblet.engines.factors import renew_factors
 from driblet.engines.random_stream import minus_log, next_word, selection_uniform, waiting_uniform
 from driblet.engines.recording import (
     close_windows,
@@ -46,13 +47,20 @@ def propensity(network, constant, counts, channel):  # type: ignore[no-untyped-d
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
 def sum_all(network, rows, constants, counts, value, cumulative):  # type: ignore[no-untyped-def]
-    """Every propensity and every sum; value, cumulative : (P,)."""
+    """Every propensity of mass action and every sum; value, cumulative : (P,)."""
     for row in range(rows.end):
         value[row] = 0.0
         cumulative[row] = 0.0
     for j in range(rows.leaf.size):
+        value[rows.leaf[j]] = propensity(network, constants[j], counts, j)
+    sum_up(rows, value, cumulative)
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
+def sum_up(rows, value, cumulative):  # type: ignore[no-untyped-def]
+    """Every sum of the propensities that stand in the leaves."""
+    for j in range(rows.leaf.size):
         row = rows.leaf[j]
-        value[row] = propensity(network, constants[j], counts, j)
         cumulative[row] = cumulative[row - 1] + value[row]
     for k in range(rows.upper.size):
         row = rows.upper[k]
@@ -106,8 +114,8 @@ def integrate_row(factor, offset, dummy, counts, running, span):  # type: ignore
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def advance_scalar(network, rows, refresh, rates, state, samples, budget, recorders):  # type: ignore[no-untyped-def]
-    """See contract.py. rates : float64, (R, M), 1/s per product of falling factorials."""
+def advance_scalar(network, rows, refresh, factor_row, nodes, rates, state, samples, budget, recorders):  # type: ignore[no-untyped-def]
+    """See contract.py. rates : float64, (R, M + 2 T), 1/s per product of falling factorials."""
     averages, occupancy, conditions, log = recorders
     replicates = rates.shape[0]
     species = state.counts.shape[1] - 1
@@ -124,13 +132,25 @@ def advance_scalar(network, rows, refresh, rates, state, samples, budget, record
     running = averages.running.T[::every]
     time, edge, next_edge = samples.time, averages.edge, averages.next_edge
     factor, offset, dummy = averages.factor, averages.offset, species
+    all_channels, leaf, scratch = np.arange(rows.leaf.size), rows.leaf, np.ones(nodes + 1)
+    start, parent, node, less = network.factor_start, network.node_parent, network.node_species, network.node_offset
+    reactant, shift, depend = network.reactant, network.offset, network.depend_channel
+    paces = np.zeros((replicates, rows.leaf.size if nodes > 0 else 0))
+    pace_columns = paces.T[::every]
     for r in range(replicates):
         if state.reason[r] != RUNNING:
             continue
         if left <= 0:
             break
         counts, constants, firings, running_row = state.counts[r], rates[r], state.firings[r], averages.running[r]
+        pace = paces[r]
         sum_all(network, rows, constants, counts, value, cumulative)
+        if factor_row is not None:
+            renew_factors(
+                all_channels, factor_row, leaf, start, parent, node, less, reactant, shift, constants, counts, scratch,
+                value, pace,
+            )  # fmt: skip
+            sum_up(rows, value, cumulative)
         clock = state.clock[r]
         sample = state.next_sample[r]
         mark = next_mark(time, edge, next_edge, r, sample)
@@ -149,7 +169,7 @@ def advance_scalar(network, rows, refresh, rates, state, samples, budget, record
                 later = min(later, stop)
             if not later <= mark:
                 if averaging:
-                    since = close_windows(averages, r, since, later, columns, firing_columns, running, r)
+                    since = close_windows(averages, r, since, later, columns, firing_columns, running, pace_columns, r)
                 sample = sample_until(
                     time, samples.counts, samples.firings, r, sample, later, columns, firing_columns, r
                 )
@@ -161,13 +181,16 @@ def advance_scalar(network, rows, refresh, rates, state, samples, budget, record
                 if sample < grid_size:
                     state.reason[r] = STOP_CONDITION
                     if averaging:
-                        cut_windows(averages, r, since, clock, columns, firing_columns, running, r)
+                        cut_windows(averages, r, since, clock, columns, firing_columns, running, pace_columns, r)
                     sample = sample_until(
                         time, samples.counts, samples.firings, r, sample, np.inf, columns, firing_columns, r
                     )
                 break
             if averaging:
                 integrate_row(factor, offset, dummy, counts, running_row, later - since)
+                if factor_row is not None:
+                    for k in range(averages.paced.shape[0]):
+                        running_row[averages.paced[k, 0]] += pace[averages.paced[k, 1]] * (later - since)
             clock = later
             j = find_channel(rows, cumulative, target)
             for k in range(np.uint64(network.change_start[j]), np.uint64(network.change_start[j + _ONE])):
@@ -178,6 +201,12 @@ def advance_scalar(network, rows, refresh, rates, state, samples, budget, record
             for k in range(np.uint64(network.depend_start[j]), np.uint64(network.depend_start[j + _ONE])):
                 d = np.uint64(network.depend_channel[k])
                 value[np.uint64(rows.leaf[d])] = propensity(network, constants[d], counts, d)
+            if factor_row is not None:
+                changed = depend[network.depend_start[j] : network.depend_start[j + _ONE]]
+                renew_factors(
+                    changed, factor_row, leaf, start, parent, node, less, reactant, shift, constants, counts, scratch,
+                    value, pace,
+                )  # fmt: skip
             refresh_sums(rows, refresh, j, value, cumulative)
             firings[j] += 1
             if logging:

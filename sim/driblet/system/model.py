@@ -12,6 +12,7 @@ from driblet.quantities import copies_per_molar
 from driblet.system.equation import Equation
 from driblet.system.expressions import Condition, Expression
 from driblet.system.mechanisms.enzyme import Enzyme
+from driblet.system.rate_factors import RateFactor
 
 
 @dataclass(frozen=True)
@@ -69,7 +70,8 @@ class Reaction:
     Attributes: dG0_kJ_per_mol : dG0', None for one way; K : exp(-dG0'/RT) relative to 1 mol/L; forward, backward : rate
     constants in (mol/L)^(1-m)/s of v = k prod [A_i]^nu_i; energy_from : what in the file set dG0', energy_note : how, where
     the reference table had a part in it; one_way : the reason. A reaction that enzymes alone carry has rate constants of
-    zero and stands in System.stated only; enzyme : the one whose elementary step this is, else None.
+    zero and stands in System.stated only; enzyme : the one whose elementary step, or lumped reaction, this is, else None;
+    factor : what multiplies the law of mass action in both directions, None for none.
     """
 
     name: str
@@ -84,6 +86,7 @@ class Reaction:
     one_way: str | None = None
     energy_note: str = ""
     enzyme: str | None = None
+    factor: RateFactor | None = None
 
 
 @dataclass(frozen=True)
@@ -161,7 +164,8 @@ class System:
     was read from, kept for provenance; source : its name for messages; warnings : what is doubtful in the file, one line each;
     reference : the table its energies come from, the file's own reactants included; enzymes : what they are, while species
     and reactions hold the states and steps they expand to, after those of the file; stated : the reactions of the file,
-    those that enzymes alone carry included; additions : in the order they happen.
+    those that enzymes alone carry included; additions : in the order they happen; treatments : (enzyme, "elementary",
+    "lumped" or "auto") as the file asks, or, once lumping has made its system of it, as it is.
     """
 
     title: str
@@ -179,6 +183,7 @@ class System:
     enzymes: tuple[Enzyme, ...] = field(default=(), kw_only=True)
     stated: tuple[Reaction, ...] = field(default=(), kw_only=True)
     additions: tuple[Addition, ...] = field(default=(), kw_only=True)
+    treatments: tuple[tuple[str, str], ...] = field(default=(), kw_only=True)
 
     def __post_init__(self) -> None:
         if not self.stated:
