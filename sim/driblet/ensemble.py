@@ -24,6 +24,7 @@ from numpy.typing import NDArray
 
 from driblet.errors import InputError, InterruptedRunError, Problem, one_problem
 from driblet.events import event_arrays
+from driblet.interrupts import noted_interrupts
 from driblet.network import Network
 from driblet.results import Run
 from driblet.segments import segments
@@ -243,6 +244,14 @@ class _Ensemble:
 
     def run(self) -> Any:
         """Simulate every unit that is not done yet; returns what the writer's finish returns."""
+        with noted_interrupts() as interrupted:
+            file = self._simulate(interrupted)
+        if interrupted():
+            path = self.writer.path
+            raise InterruptedRunError(f"interrupted; {path} was complete already" if path else self._farewell())
+        return file
+
+    def _simulate(self, interrupted: Callable[[], bool]) -> Any:
         from driblet.packs import Pack, next_pack
 
         pending = [u for u in range(self.layout.units) if u not in self.writer.done]
@@ -257,6 +266,8 @@ class _Ensemble:
                         futures.add(pool.submit(self.runner.simulate, pack, self.blocks.put, self.stop.is_set))
                     self._write()
                     self._report()
+                    if interrupted():
+                        raise KeyboardInterrupt
                     done, futures = wait(futures, timeout=_POLL_SECONDS, return_when=FIRST_COMPLETED)
                     for future in done:
                         future.result()

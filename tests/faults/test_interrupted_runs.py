@@ -146,7 +146,9 @@ except driblet.InterruptedRunError as error:
 
 def test_ctrl_c_leaves_readable_shards(tmp_path: Path, undisturbed: dict[str, np.ndarray]) -> None:
     """SIGINT to a process of its own, once some replicates are finished; then resumed to the same bits."""
-    slow = changed(TEXT, ('duration = "4 s"', 'duration = "500 s"'), ('sample_every = "0.5 s"', 'sample_every = "100 s"'))
+    slow = changed(
+        TEXT, ('duration = "4 s"', 'duration = "500 s"'), ('sample_every = "0.5 s"', 'sample_every = "100 s"')
+    )
     path = tmp_path / "run.h5"
     process = subprocess.Popen(
         [sys.executable, "-c", WORKER, str(path)],
@@ -162,8 +164,7 @@ def test_ctrl_c_leaves_readable_shards(tmp_path: Path, undisturbed: dict[str, np
     assert process.stdout.readline() == "some\n"
     process.send_signal(signal.SIGINT)
     output, errors = process.stdout.read(), process.stderr.read() if process.stderr else ""
-    assert process.wait() == 130
-    assert errors == ""
+    assert (process.wait(), errors) == (130, "")
     message = output.strip().split("\n")[-1]
     assert message.startswith("interrupted: ")
     assert f"replicates are kept in {path}.parts, which every command reads; go on with --resume" in message
