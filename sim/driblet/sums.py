@@ -73,11 +73,13 @@ class SumsPlan:
         shift[factored] = np.column_stack([np.ones(len(factored)), np.arange(len(factored)), np.zeros(len(factored))])
         factor, offset = np.vstack([reactant, singles]), np.vstack([shift, np.zeros((n, 3))])
         distinct, row = np.unique(np.hstack([factor, offset]), axis=0, return_inverse=True)
+        order = np.argsort((distinct[:, :3] < n).sum(axis=1), kind="stable")  # those of one factor go together in lanes
+        distinct, row = distinct[order], np.argsort(order)[row.reshape(-1)]
         return cls(
             edges,
             distinct[:, :3].astype(np.int64),
             distinct[:, 3:],
-            row.reshape(-1),
+            row,
             histograms,
             _bin_widths(system, network),
             (begin, duration_s),
