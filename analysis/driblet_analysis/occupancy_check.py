@@ -25,14 +25,14 @@ from driblet.statistics import holm, hotelling, randomised_pit, student_t, unifo
 from driblet.system import System
 from driblet_analysis.check_rows import CheckRow
 from driblet_analysis.references.count_equilibrium import CountLaw, count_law, equilibrium_weights
-from driblet_analysis.references.metropolis import BURN, SWEEPS, metropolis
+from driblet_analysis.references.metropolis import BURN_SHARE, MOVES_A_STATE, metropolis
 from driblet_analysis.references.rate_equations import relaxation_time
 
 FEWEST_REPLICATES = 20
 DRIFT_LEVEL = 0.01  # of the test that calls a run not yet stationary
 _RELAXATION_MARGIN = 1.5  # small compartments relax at their own pace, not quite that of the rate equations
-_MOVE_BUDGET = 120_000_000  # Metropolis moves over all replicates: a few seconds
-_SAMPLES = (24, 2000)
+_MOVE_BUDGET = 30_000_000  # Metropolis moves over all replicates: a few seconds
+_SAMPLES = (40, 2000)
 Array = NDArray[np.float64]
 
 
@@ -94,15 +94,17 @@ def _sampled(system: System, initial: NDArray[np.int64], omega: Array, seed: int
     classes: dict[tuple[float, ...], list[int]] = {}
     for row, (counts, w) in enumerate(zip(initial, omega, strict=True)):
         classes.setdefault((*counts.tolist(), float(w)), []).append(row)
-    sweep = SWEEPS * max(1, int(active.sum()))
-    samples = int(np.clip(_MOVE_BUDGET / (sweep * len(classes)) - BURN, *_SAMPLES))
+    wanted = MOVES_A_STATE * max(1, int(active.sum())) / (1.0 - BURN_SHARE)
+    moves = _MOVE_BUDGET // len(classes)
+    samples = int(np.clip(moves / wanted, *_SAMPLES))
+    moves = int(min(moves, wanted * samples))
 
     def draw(item: tuple[int, tuple[float, ...]]) -> NDArray[np.int64]:
         k, key = item
         counts, w = np.array(key[:-1]), key[-1]
         present = frozenset(name for name, n in zip(network.species, counts, strict=True) if n > 0)
         ln_c, _ = equilibrium_weights(system, present)
-        return metropolis(network, counts, ln_c + math.log(w), active, samples, seed + k).states
+        return metropolis(network, counts, ln_c + math.log(w), active, samples, seed + k, moves).states
 
     with ThreadPoolExecutor() as pool:
         drawn = list(pool.map(draw, enumerate(classes)))

@@ -206,7 +206,7 @@ def test_a_sampler_with_a_wrong_factorial_is_exposed(monkeypatch: pytest.MonkeyP
     assert abs(wrong[2] - right[2]) > 3.0
 
 
-def _sample_without_factorials(state, need, change, ln_mean, reach, out, moves, burn, seed):  # type: ignore[no-untyped-def]
+def _sample_without_factorials(state, need, change, ln_mean, reach, out, between, burn, seed, table):  # type: ignore[no-untyped-def]
     generator = np.random.default_rng(seed)
     for sample in range(len(out)):
         for _ in range(40):

@@ -53,7 +53,7 @@ def enumerate_mass(network: Network, initial_counts: ArrayLike, ln_mean: Array, 
     """
     need, change = channel_matrices(network)
     top = np.full(len(network.species), _NO_CAP)
-    start = _climb(_whole(initial_counts), need, change, ln_mean)
+    start = climb(_whole(initial_counts), need, change, ln_mean)
     while True:
         states, count = _explore(start, need, change, top, ln_mean, _DEPTH, _SLACK, limit)
         if not count:
@@ -64,7 +64,7 @@ def enumerate_mass(network: Network, initial_counts: ArrayLike, ln_mean: Array, 
         best = int(np.argmax(weights))
         if weights[best] <= weights[0] + 1e-9:
             return states
-        start = _climb(states[best], need, change, ln_mean)
+        start = climb(states[best], need, change, ln_mean)
 
 
 def neighbours(network: Network, states: States) -> NDArray[np.int64]:
@@ -241,7 +241,7 @@ def _rise(state, need, change, ln_mean, channel, strides):  # type: ignore[no-un
 
 
 @njit(nogil=True, cache=CACHE)
-def _climb(start, need, change, ln_mean):  # type: ignore[no-untyped-def]
+def climb(start, need, change, ln_mean):  # type: ignore[no-untyped-def]
     """Fire whichever channel raises the weight most, as often as it does, until none does.
 
     Along repeated firings ln weight is concave: if the last one raises it, so did all before.
