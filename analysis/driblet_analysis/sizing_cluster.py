@@ -17,8 +17,9 @@ from pathlib import Path
 
 from driblet.errors import CannotAnswerError, InterruptedRunError
 from driblet.results import Run
-from driblet_analysis.sizing import Batch, Question, Simulate
-from driblet_analysis.sizing_search import Outcome
+from driblet_analysis.sizing import Batch, Simulate
+from driblet_analysis.sizing_parts import Outcome
+from driblet_analysis.sizing_question import Question
 from driblet_analysis.sweep.directory import Plan, read_plan
 from driblet_analysis.sweep.files import write_text, writing
 from driblet_analysis.sweep.keypaths import toml_text

@@ -9,9 +9,10 @@ from matplotlib.ticker import FixedLocator, MaxNLocator, NullFormatter
 
 from driblet.errors import InputError
 from driblet_analysis.figures import COLOURS, style
-from driblet_analysis.sizing import Question, Sizing, loads_of
+from driblet_analysis.sizing import Sizing
 from driblet_analysis.sizing_model import clopper_pearson
-from driblet_analysis.sizing_search import Finding
+from driblet_analysis.sizing_parts import Finding
+from driblet_analysis.sizing_question import Question, loads_of
 
 _SURVEY, _CLOSE = COLOURS[6], COLOURS[0]
 _ANSWER, _ASKED = COLOURS[1], "#1F1F1F"

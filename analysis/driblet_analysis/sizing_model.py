@@ -119,8 +119,8 @@ class Root:
     """Where the curve reaches the target.
 
     theta : in u, with its interval; share : of the curve at theta.value, with its interval; law, slope : of the best
-    curve, slope signed, per u, law ""
-    where none fits and theta comes from exact bounds; misfit_p : of its deviance, NaN with too few positions; used : positions the fit rests on.
+    curve, slope signed, per u, law "" where none fits and theta comes from exact bounds; misfit_p : of its deviance, NaN
+    with too few positions; used : positions the fit rests on.
     """
 
     theta: Interval

@@ -12,8 +12,9 @@ from driblet.errors import CannotAnswerError
 from driblet.outcomes import EVENT, bound, when_text
 from driblet.survival import Interval, wilson
 from driblet_analysis.lifetime import Trait, lifetimes
-from driblet_analysis.sizing import Load, Sizing, loads_of
-from driblet_analysis.sizing_search import ALREADY_MET, FOUND, NOT_MONOTONE, NOT_REACHABLE, Crossing
+from driblet_analysis.sizing import Sizing
+from driblet_analysis.sizing_parts import ALREADY_MET, FOUND, NOT_MONOTONE, NOT_REACHABLE, Crossing
+from driblet_analysis.sizing_question import Load, loads_of
 
 
 @dataclass(frozen=True)

@@ -73,8 +73,9 @@ def size(
         raise click.UsageError("--force starts anew and --resume goes on: give one of them")
     if slurm and dask:
         raise click.UsageError("--slurm and --dask are different ways of working: give one of them")
-    from driblet_analysis.sizing import ANSWER, FIGURE, read_question
+    from driblet_analysis.sizing import ANSWER, FIGURE
     from driblet_analysis.sizing import size as answer
+    from driblet_analysis.sizing_question import read_question
 
     question = read_question(file, path, *between, requirement, within, budget, seed)
     folder = output or Path(f"{file.stem}-size")
@@ -117,7 +118,7 @@ def _plain(value: Any) -> Any:
 
 
 def _status(result: Sizing) -> int:
-    from driblet_analysis.sizing_search import ALREADY_MET, FOUND, NOT_REACHABLE
+    from driblet_analysis.sizing_parts import ALREADY_MET, FOUND, NOT_REACHABLE
 
     if result.finding.status in (FOUND, ALREADY_MET):
         return EXIT_DONE
