@@ -93,8 +93,8 @@ def hotelling(differences: Array) -> Hotelling:
     values, vectors = np.linalg.eigh(np.atleast_2d(np.cov(x, rowvar=False)))
     kept = values > 1e-10 * values.max()
     k = int(kept.sum())
-    if n <= k:
-        raise ValueError(f"{n} samples cannot test {k} dimensions")
+    if k == n - 1 < x.shape[1]:
+        raise ValueError(f"{n} samples cannot test {x.shape[1]} dimensions")
     t2 = float(n * np.sum((vectors[:, kept].T @ mean) ** 2 / values[kept]))
     return Hotelling(t2, float(fdtrc(k, n - k, t2 * (n - k) / (k * (n - 1)))), k)
 

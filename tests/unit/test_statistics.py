@@ -39,7 +39,7 @@ def test_hotelling_leaves_out_dependent_directions() -> None:
     doubled = np.column_stack([SWEAT - [4.0, 50.0, 10.0], SWEAT[:, 0] + SWEAT[:, 1] - 54.0, np.zeros(20)])
     assert hotelling(doubled).statistic == pytest.approx(hotelling(SWEAT - [4.0, 50.0, 10.0]).statistic)
     with pytest.raises(ValueError, match="cannot test"):
-        hotelling(SWEAT[:3])
+        hotelling(SWEAT[:3])  # two degrees of freedom for three dimensions
 
 
 def test_holm_worked_example() -> None:
