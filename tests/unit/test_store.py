@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import errno
 import json
+import os
 from pathlib import Path
 from typing import Any
 
@@ -144,6 +146,32 @@ def test_resuming_keeps_what_is_there(tmp_path: Path) -> None:
     second.finish({})
     assert same(held(path), expected(plan))
     assert not parts_folder(path).exists()
+
+
+@pytest.mark.skipif(not hasattr(os, "posix_fallocate"), reason="room is tried for with posix_fallocate")
+def test_no_room_for_the_merged_file_keeps_the_shards(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    plan, path = layout(), tmp_path / "run.h5"
+    writer = RunWriter(path, plan)
+    for unit in range(plan.units):
+        writer.add(block(plan, unit))
+        writer.flush()
+    asked = []
+
+    def refuse(_: int, start: int, size: int) -> None:
+        asked.append(size)
+        raise OSError(errno.ENOSPC, "the disk of this test is full")
+
+    monkeypatch.setattr(os, "posix_fallocate", refuse)
+    with pytest.raises(InputError) as caught:
+        writer.finish({})
+    assert caught.value.lines() == [f"{path}: cannot be written: no space left on device"]
+    assert asked[0] > sum(p.stat().st_size for p in parts_folder(path).iterdir())
+    assert not path.exists()
+    monkeypatch.undo()
+    resumed = RunWriter(path, plan, resume=True)
+    assert resumed.done == {0, 1, 2, 3}
+    resumed.finish({})
+    assert same(held(path), expected(plan))
 
 
 def test_a_unit_written_twice_counts_once(tmp_path: Path) -> None:
