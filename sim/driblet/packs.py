@@ -45,8 +45,8 @@ _OWN_ROWS = {
     "conditions": {"weight", "first_met"},
     "log": {"time", "channel", "used"},
     "requirements": {
-        *("coefficient", "halt", "leaf_value", "leaf_sum", "leaf_truth", "truth", "since", "next_window"),
-        *("time_met", "first_met", "first_failure", "judged_until", "outcome"),
+        *("coefficient", "leaf_value", "leaf_sum", "leaf_truth", "record"),
+        *("integrated_to", "next_edge", "halt"),
     },
 }
 
@@ -69,9 +69,11 @@ def rows_of(recorders: Recorders, rows: slice) -> Recorders:
     """The recorders of some of the replicates, as views."""
     parts = {}
     for name, recorder in recorders._asdict().items():
+        if recorder is None:
+            continue
         own = {k: a[rows] for k, a in recorder._asdict().items() if k in _OWN_ROWS[name]}
         parts[name] = recorder._replace(**own)
-    return Recorders(**parts)
+    return recorders._replace(**parts)
 
 
 @dataclass

@@ -10,7 +10,24 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.condition_forms import Form, Leaf, NotInFormError, Polynomial, form_of
-from driblet.engines.judging import AND, AT_END, ONCE, OR, THROUGHOUT, UNDECIDED, Requirements
+from driblet.engines.judging import (
+    AND,
+    AT_END,
+    END_LEAF,
+    FIRST_FAILURE,
+    FIRST_MET,
+    JUDGED_UNTIL,
+    NEXT_WINDOW,
+    ONCE,
+    OR,
+    OUTCOME,
+    SINCE,
+    THROUGHOUT,
+    TIME_MET,
+    TRUTH,
+    UNDECIDED,
+    Requirements,
+)
 from driblet.network import Network
 from driblet.outcomes import EVENT, GRID, Outcomes
 from driblet.readouts import extended
@@ -40,14 +57,14 @@ class CompiledRequirements:
     @classmethod
     def of(cls, system: System, network: Network, duration_s: float) -> CompiledRequirements:
         """Compile the requirements of `system` for a run of `duration_s`."""
-        in_kernel, forms, by_grid = [], [], {}
+        forms, by_grid = {}, {}
         for q, requirement in enumerate(system.requirements):
             try:
-                forms.append(form_of(system, requirement.must.root, requirement.averaged))
-                in_kernel.append(q)
+                forms[q] = form_of(system, requirement.must.root, requirement.averaged)
             except NotInFormError as error:
                 by_grid[q] = str(error)
-        return cls(system, network, duration_s, tuple(in_kernel), tuple(forms), by_grid)
+        in_kernel = sorted(forms, key=lambda q: system.requirements[q].averaged)
+        return cls(system, network, duration_s, tuple(in_kernel), tuple(forms[q] for q in in_kernel), by_grid)
 
     def resolutions(self, kernel: str = EVENT) -> tuple[str, ...]:
         """For each requirement where its truth is looked at; kernel : EVENT or LEAP, what the engine's kernel does."""
@@ -67,9 +84,10 @@ class CompiledRequirements:
         """Every outcome, those of the kernel as recorded, the others from the sampled counts, (R, G, N)."""
         out = Outcomes.empty(len(omega), len(self.system.requirements))
         for k, q in enumerate(self.in_kernel):
-            out.met[:, q] = recorded.outcome[:, k]
-            out.first_failure_s[:, q], out.first_met_s[:, q] = recorded.first_failure[:, k], recorded.first_met[:, k]
-            out.time_met_s[:, q], out.judged_until_s[:, q] = recorded.time_met[:, k], recorded.judged_until[:, k]
+            record = recorded.record[:, k]
+            out.met[:, q] = record[:, OUTCOME]
+            out.first_failure_s[:, q], out.first_met_s[:, q] = record[:, FIRST_FAILURE], record[:, FIRST_MET]
+            out.time_met_s[:, q], out.judged_until_s[:, q] = record[:, TIME_MET], record[:, JUDGED_UNTIL]
         for q in self.by_grid:
             _copy(out, q, judge_on_grid(self.system, self.system.requirements[q], counts, time_s, omega))
         return out
@@ -81,46 +99,43 @@ def _copy(target: Outcomes, q: int, source: Outcomes) -> None:
 
 
 class _Tables:
-    """Collects requirements into the flat arrays of `Requirements`."""
+    """Collects requirements into the flat arrays of `Requirements`; those that judge moments come first."""
 
     def __init__(self, network: Network, replicates: int) -> None:
         self.network, self.replicates = network, replicates
         self.species = {name: i for i, name in enumerate(network.species)}
-        self.leaf_start, self.program_start = [0], [0]
+        self.rows: list[tuple[int, ...]] = []
+        self.span: list[tuple[float, float, float]] = []
+        self.averaged: list[bool] = []
+        self.leaf: list[tuple[int, int, int, int]] = []
         self.term_start, self.factor_start = [0], [0]
-        self.leaf_kind: list[int] = []
-        self.leaf_strict: list[int] = []
-        self.leaf_polynomial: list[tuple[int, int]] = []
         self.factor_species: list[int] = []
         self.factor_offset: list[float] = []
         self.program: list[int] = []
         self.coefficient: list[Array] = []
         self.needed: list[set[int]] = []
-        self.settings: list[tuple[int, tuple[float, float], int, float, int]] = []
 
     def add(self, form: Form, requirement: Requirement, duration_s: float, omega: Array) -> None:
         """Add one requirement; omega : (R,)."""
         self.needed.append(set())
-        self._push(form, omega)
-        self.leaf_start.append(len(self.leaf_kind))
-        self.program_start.append(len(self.program))
+        first_leaf, first_code = len(self.leaf), len(self.program)
+        self._push(form, omega, first_leaf)
         start, end = requirement.span_s(duration_s)
-        window = requirement.averaged_over_s or end - start
-        windows = max(1, int((end - start) / window * (1 + _ROUNDING)))
+        window, windows = windows_of(requirement, start, end)
         when = WHEN[requirement.when]
-        self.settings.append((when, (start, min(end, duration_s)), int(requirement.averaged), window, windows))
+        self.rows.append((first_leaf, len(self.leaf), first_code, len(self.program), when, windows))
+        self.span.append((start, min(end, duration_s), window))
+        self.averaged.append(requirement.averaged)
 
-    def _push(self, form: Form, omega: Array) -> None:
+    def _push(self, form: Form, omega: Array, first_leaf: int) -> None:
         if not isinstance(form, Leaf):
-            self._push(form.left, omega)
-            self._push(form.right, omega)
+            self._push(form.left, omega, first_leaf)
+            self._push(form.right, omega, first_leaf)
             self.program.append(AND if form.operator == "and" else OR)
             return
-        self.program.append(len(self.leaf_kind) - self.leaf_start[-1])
+        self.program.append(len(self.leaf) - first_leaf)
         first = len(self.term_start) - 1
-        self.leaf_kind.append(form.kind)
-        self.leaf_strict.append(int(form.strict))
-        self.leaf_polynomial.append((first, first + len(form.polynomials) - 1))
+        self.leaf.append((form.kind, int(form.strict), first, first + len(form.polynomials) - 1))
         for polynomial in form.polynomials:
             for factors, _ in polynomial.terms:
                 self.factor_species += [self.species[name] for name, _ in factors]
@@ -130,45 +145,39 @@ class _Tables:
             self.needed[-1] |= {self.species[name] for name in polynomial.species}
         self.coefficient.append(coefficients(form.polynomials, omega))
 
-    def arrays(self, stop: bool) -> Requirements:
+    def arrays(self, stops: bool) -> Requirements:
         """The arrays, nothing judged yet."""
         affected = [
             [q for q, needed in enumerate(self.needed) if needed & {i for i, _ in channel.change}]
             for channel in self.network.channels
         ]
-        when, span, averaged, window, windows = zip(*self.settings, strict=True) if self.settings else ((),) * 5
-        R, Q, L = self.replicates, len(self.settings), len(self.leaf_kind)
+        R, Q, L = self.replicates, len(self.rows), len(self.leaf)
+        moments = sum(not averaged for averaged in self.averaged)
+        record = np.full((R, Q, 8), np.nan)
+        record[:, :, [TRUTH, SINCE, NEXT_WINDOW, TIME_MET]] = 0.0
+        record[:, :, OUTCOME] = UNDECIDED
         return Requirements(
-            whole(np.cumsum([0, *map(len, affected)])),
-            whole([q for row in affected for q in row]),
-            whole(self.leaf_start),
-            whole(self.leaf_kind),
-            whole(self.leaf_strict),
-            whole(self.leaf_polynomial).reshape(-1, 2),
-            whole(self.term_start),
-            whole(self.factor_start),
-            whole(self.factor_species),
-            np.array(self.factor_offset, dtype=float),
-            whole(self.program_start),
-            whole(self.program),
-            whole(when),
-            np.array(span, dtype=float).reshape(Q, 2),
-            whole(averaged),
-            np.array(window, dtype=float),
-            whole(windows),
-            whole([int(stop)]),
-            np.ascontiguousarray(np.hstack([np.zeros((R, 0)), *self.coefficient])),
-            np.zeros((R, L)),
-            np.zeros((R, L)),
-            np.zeros((R, L), dtype=np.int64),
-            np.zeros((R, Q), dtype=np.int64),
-            np.zeros((R, Q)),
-            np.zeros((R, Q), dtype=np.int64),
-            np.zeros((R, Q)),
-            np.full((R, Q), np.nan),
-            np.full((R, Q), np.nan),
-            np.full((R, Q), np.nan),
-            np.full((R, Q), UNDECIDED, dtype=np.int64),
+            moments=moments,
+            moment_leaves=self.rows[moments - 1][END_LEAF] if moments else 0,
+            stops=stops,
+            affected_start=whole(np.cumsum([0, *map(len, affected)])),
+            affected=whole([q for row in affected for q in row]),
+            table=whole(self.rows).reshape(Q, 6),
+            span=np.array(self.span, dtype=float).reshape(Q, 3),
+            leaf=whole(self.leaf).reshape(L, 4),
+            term_start=whole(self.term_start),
+            factor_start=whole(self.factor_start),
+            factor_species=whole(self.factor_species),
+            factor_offset=np.array(self.factor_offset, dtype=float),
+            program=whole(self.program),
+            coefficient=np.ascontiguousarray(np.hstack([np.zeros((R, 0)), *self.coefficient])),
+            leaf_value=np.zeros((R, L)),
+            leaf_sum=np.zeros((R, L)),
+            leaf_truth=np.zeros((R, L)),
+            record=record,
+            integrated_to=np.zeros(R),
+            next_edge=np.full(R, np.inf),
+            halt=np.full(R, np.inf),
         )
 
 
@@ -232,9 +241,14 @@ def judge_on_grid(
     )
 
 
-def _window_edges(requirement: Requirement, start: float, end: float) -> Array:
+def windows_of(requirement: Requirement, start: float, end: float) -> tuple[float, int]:
+    """What a requirement averages over, s, and how often that fits into its span; the last window takes the rest."""
     window = requirement.averaged_over_s or end - start
-    windows = max(1, int((end - start) / window * (1 + _ROUNDING)))
+    return window, max(1, int((end - start) / window * (1 + _ROUNDING)))
+
+
+def _window_edges(requirement: Requirement, start: float, end: float) -> Array:
+    window, windows = windows_of(requirement, start, end)
     return np.append(start + window * np.arange(windows), end)
 
 

@@ -128,7 +128,7 @@ class Pack:
 def flat(result: tuple[EnsembleState, Samples, Recorders]) -> list[np.ndarray]:
     """All arrays of a result."""
     state, samples, recorders = result
-    return [*state, *samples, *(a for recorder in recorders for a in recorder)]
+    return [*state, *samples, *(a for recorder in recorders if recorder is not None for a in recorder)]
 
 
 def same_bits(one: tuple[EnsembleState, Samples, Recorders], other: tuple[EnsembleState, Samples, Recorders]) -> bool:

@@ -6,6 +6,7 @@ import bisect
 import itertools
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import pytest
@@ -15,7 +16,10 @@ from numpy.typing import NDArray
 
 import driblet
 from driblet.condition_forms import NotInFormError, form_of
-from driblet.engines.judging import close_judgement, judge_firing, open_judgement
+from driblet.engines.contract import RUNNING, new_samples, new_state
+from driblet.engines.exact import ExactEngine
+from driblet.engines.judging import Requirements, close_judgement, judge_all
+from driblet.engines.recording import recorders_for
 from driblet.network import Network
 from driblet.outcomes import Outcomes
 from driblet.readouts import extended
@@ -88,12 +92,12 @@ sample_every = "0.5 s"
 
 @dataclass
 class Path:
-    """Every state of one compartment: moments at which each begins, counts, channels that led there."""
+    """Every state of one compartment: moments at which each begins, counts, and the random stream that led there."""
 
     moments: list[float]
     counts: NDArray[np.int64]
-    channels: list[int]
     omega: float
+    seed: tuple[int, int, int, int] = (0, 0, 0, 0)
 
 
 def path_of(system: System, seed: int) -> Path:
@@ -113,21 +117,51 @@ def path_of(system: System, seed: int) -> Path:
         for i, amount in network.channels[channel].change:
             row[i] += amount
         states.append(row)
-    return Path([0.0, *(t for t, _ in events)], np.array(states), [c for _, c in events], omega)
+    return Path([0.0, *(t for t, _ in events)], np.array(states), omega, (seed, 1, 2, 3))
 
 
-def judged(system: System, path: Path) -> Outcomes:
-    network = Network.of(system)
-    compiled = CompiledRequirements.of(system, network, system.settings.duration_s)
+def recorded(
+    system: System, omega: float, replicates: int, stop: bool = False
+) -> tuple[CompiledRequirements, Requirements]:
+    compiled = CompiledRequirements.of(system, Network.of(system), system.settings.duration_s)
     assert not compiled.by_grid, compiled.by_grid
-    omega = np.array([path.omega])
-    recorder = compiled.recorder(omega)
-    columns = path.counts.T.astype(float)
-    open_judgement(recorder, 0, columns, 0)
-    for k, channel in enumerate(path.channels, start=1):
-        judge_firing(recorder, 0, np.uint64(channel), columns, k, path.moments[k])
-    close_judgement(recorder, 0, system.settings.duration_s)
-    return compiled.outcomes(recorder, path.counts[None], np.array([0.0]), omega)
+    return compiled, compiled.recorder(np.full(replicates, omega), stop)
+
+
+def judged(system: System, path: Path, **how: Any) -> Outcomes:
+    """What an engine says of one compartment that takes this path."""
+    return judged_together(system, [path], **how)
+
+
+def judged_together(
+    system: System, paths: list[Path], method: str = "scalar", budget: int = 1 << 20, stop: bool = False
+) -> Outcomes:
+    """What an engine says of compartments with the streams of these paths."""
+    network, R = Network.of(system), len(paths)
+    compiled, requirements = recorded(system, paths[0].omega, R, stop)
+    state = new_state(
+        np.array([p.counts[0] for p in paths], dtype=float), np.array([p.seed for p in paths]), len(network.channels)
+    )
+    times = np.linspace(0.0, system.settings.duration_s, 5)
+    samples = new_samples(times, R, len(network.species), len(network.channels))
+    recorders = recorders_for(state, requirements=requirements)
+    engine = ExactEngine(network.arrays, len(network.species), method, lanes=8)
+    judge_all(requirements, state.counts.T, 0.0, True)
+    while (state.reason == RUNNING).any():
+        engine.advance(network.rates(np.full(R, paths[0].omega)), state, samples, budget, recorders)
+    close_judgement(requirements, state.clock)
+    return compiled.outcomes(requirements, samples.counts, times, np.full(R, paths[0].omega))
+
+
+def of_states(system: System, states: list[list[int]], moments: list[float], end: float) -> Outcomes:
+    """What is said of one compartment that is in these states from these moments on."""
+    compiled, requirements = recorded(system, system.compartment.omega, 1)
+    for state, moment in zip(states, moments, strict=True):
+        judge_all(requirements, np.array([[float(n)] for n in state]), moment, moment == 0.0)
+    close_judgement(requirements, np.array([end]))
+    return compiled.outcomes(
+        requirements, np.zeros((1, 1, len(states[0])), dtype=np.int64), np.array([0.0]), np.ones(1)
+    )
 
 
 def difference(system: System, comparison: Comparison, path: Path) -> NDArray[np.float64]:
@@ -264,7 +298,8 @@ def test_judging_every_event_equals_evaluating_every_state(when: str, keys: dict
     system = with_requirements(RELAY, CONDITIONS, when=f'"{when}"', **keys)
     path = path_of(system, seed)
     assert len(path.moments) > 100
-    compare(judged(system, path), plain(system, path))
+    for method in ("scalar", "lanes"):
+        compare(judged(system, path, method=method), plain(system, path))
 
 
 AVERAGED = [c for c in CONDITIONS if "not" not in c and "SP / S" not in c] + ["SP / (S + 1) > 0.6"]
@@ -284,7 +319,8 @@ AVERAGED = [c for c in CONDITIONS if "not" not in c and "SP / S" not in c] + ["S
 def test_averages_over_windows_equal_those_over_every_state(keys: dict[str, str]) -> None:
     system = with_requirements(RELAY, AVERAGED, **keys)
     path = path_of(system, 3)
-    compare(judged(system, path), plain(system, path))
+    for method in ("scalar", "lanes"):
+        compare(judged(system, path, method=method), plain(system, path))
 
 
 def compare(got: Outcomes, expected: list[tuple[bool, float, float, float]]) -> None:
@@ -340,10 +376,8 @@ def test_a_decimal_threshold_is_met_by_the_count_that_equals_it() -> None:
         + '[requirements.c]\nmust = "gibbs(turn) < 0 kJ/mol"\nwhen = "at end"\n'
         + '[requirements.d]\nmust = "gibbs(turn) <= 0 kJ/mol"\nwhen = "at end"\n'
     )
-    frozen = Path([0.0], np.array([[7, 3]]), [], system.compartment.omega)
-    assert judged(system, frozen).met.tolist()[0][:2] == [1, 0]
-    balanced = Path([0.0], np.array([[3, 5]]), [], system.compartment.omega)  # K n_A = n_B + 1
-    assert judged(system, balanced).met.tolist()[0][2:] == [0, 1]
+    assert of_states(system, [[7, 3]], [0.0], 2.0).met.tolist()[0][:2] == [1, 0]
+    assert of_states(system, [[3, 5]], [0.0], 2.0).met.tolist()[0][2:] == [0, 1]  # K n_A = n_B + 1
 
 
 def test_a_record_that_ends_early_leaves_undecided_what_it_did_not_see() -> None:
@@ -359,14 +393,7 @@ def test_a_record_that_ends_early_leaves_undecided_what_it_did_not_see() -> None
         for k, (when, must) in enumerate(tables)
     )
     system = driblet.loads(text)
-    compiled = CompiledRequirements.of(system, Network.of(system), 2.0)
-    recorder = compiled.recorder(np.array([system.compartment.omega]))
-    columns = np.array([[10.0, 9.0, 8.0, 7.0], [0.0, 1.0, 2.0, 3.0]])
-    open_judgement(recorder, 0, columns, 0)
-    for k, moment in enumerate([0.2, 0.6, 0.8], start=1):
-        judge_firing(recorder, 0, np.uint64(0), columns, k, moment)
-    close_judgement(recorder, 0, 1.0)
-    got = compiled.outcomes(recorder, np.zeros((1, 1, 2), dtype=np.int64), np.array([0.0]), np.ones(1))
+    got = of_states(system, [[10, 0], [9, 1], [8, 2], [7, 3]], [0.0, 0.2, 0.6, 0.8], 1.0)
     assert got.met[0].tolist() == [-1, 0, 1, -1, -1]
     assert got.first_failure_s[0, 1] == 0.5  # false since 0.2 s, judged from 0.5 s on
     assert got.judged_until_s[0].tolist() == [1.0] * 5
@@ -401,7 +428,7 @@ def test_on_a_grid_the_sampled_states_count_alone(when: str, keys: dict[str, str
     path = path_of(system, 4)
     grid = np.arange(0.0, 6.01, 0.25)
     index = np.searchsorted(path.moments, grid, side="right") - 1
-    sampled = Path(list(grid), path.counts[index], [], path.omega)
+    sampled = Path(list(grid), path.counts[index], path.omega)
     expected = plain(system, sampled)
     for q, requirement in enumerate(system.requirements):
         got = judge_on_grid(system, requirement, sampled.counts[None], grid, np.array([path.omega]))
@@ -444,3 +471,82 @@ def value_of(names: Names, text: str) -> str:
     assert isinstance(comparison, Comparison)
     assert isinstance(comparison.left, Named)
     return next(e.text for e in names.readouts.values() if e.root == comparison.left.node)
+
+
+MANY = [("throughout", c, "") for c in CONDITIONS[::3]]
+MANY += [("throughout", c, 'averaged_over = "0.3 s"') for c in AVERAGED[::4]]
+MANY += [("once", c, "") for c in CONDITIONS[1::7]] + [("at end", c, 'averaged_over = "1 s"') for c in AVERAGED[::9]]
+
+
+def many(during: str = "") -> System:
+    tables = "".join(
+        f'\n[requirements.r{k}]\nmust = {json_text(c)}\nwhen = "{when}"\n{extra}\n{during}\n'
+        for k, (when, c, extra) in enumerate(MANY)
+    )
+    return driblet.loads(RELAY + tables)
+
+
+@pytest.fixture(scope="module")
+def together() -> tuple[System, list[Path], Outcomes]:
+    system = many()
+    paths = [path_of(system, seed) for seed in range(11, 31)]
+    return system, paths, judged_together(system, paths)
+
+
+@pytest.mark.parametrize(
+    ("method", "budget"), [("scalar", 1), ("scalar", 13), ("lanes", 1), ("lanes", 40), ("lanes", 1 << 20)]
+)
+def test_how_an_engine_runs_never_changes_an_outcome(
+    together: tuple[System, list[Path], Outcomes], method: str, budget: int
+) -> None:
+    system, paths, expected = together
+    got = judged_together(system, paths, method=method, budget=budget)
+    for name in Outcomes.__dataclass_fields__:
+        np.testing.assert_array_equal(getattr(got, name), getattr(expected, name), err_msg=name)
+
+
+def test_neighbours_never_change_an_outcome(together: tuple[System, list[Path], Outcomes]) -> None:
+    system, paths, expected = together
+    for r in (0, 7, 19):
+        got = judged_together(system, paths[r : r + 1], method="lanes")
+        np.testing.assert_array_equal(got.first_failure_s[0], expected.first_failure_s[r])
+        np.testing.assert_array_equal(got.time_met_s[0], expected.time_met_s[r])
+
+
+STOPS = """
+[requirements.full]
+must = "ATP > 4"
+when = "throughout"
+during = ["1 s", "5 s"]
+
+[requirements.seen]
+must = "SP >= 5"
+when = "once"
+
+[requirements.even]
+must = "charged < 0.75"
+when = "throughout"
+averaged_over = "0.5 s"
+"""
+
+
+@pytest.mark.parametrize("method", ["scalar", "lanes"])
+def test_stopping_when_all_is_decided_changes_no_outcome(method: str) -> None:
+    system = driblet.loads(RELAY + STOPS)
+    paths = [path_of(system, seed) for seed in range(40, 80)]
+    whole = judged_together(system, paths, method=method)
+    early = judged_together(system, paths, method=method, stop=True)
+    np.testing.assert_array_equal(early.met, whole.met)
+    np.testing.assert_array_equal(early.first_failure_s, whole.first_failure_s)
+    stopped = early.judged_until_s.max(axis=1) < 6.0
+    assert stopped.sum() > 5
+    decided = np.where(whole.met == 0, whole.first_failure_s, np.inf)
+    for r in np.flatnonzero(stopped):
+        last = np.nanmax(
+            np.where(whole.met[r] == [0, 1, 0], [decided[r, 0], whole.first_met_s[r, 1], decided[r, 2]], 5.0)
+        )
+        assert early.judged_until_s[r].max() >= min(last, 5.0)
+    again = judged_together(system, paths, method=method, stop=True, budget=3)
+    np.testing.assert_array_equal(again.judged_until_s, early.judged_until_s)
+    other = judged_together(system, paths, method="lanes" if method == "scalar" else "scalar", stop=True)
+    np.testing.assert_array_equal(other.judged_until_s, early.judged_until_s)

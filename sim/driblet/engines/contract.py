@@ -21,6 +21,8 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from driblet.engines.judging import Requirements
+
 RUNNING = 0
 TIME_REACHED = 1
 NOTHING_CAN_FIRE = 2  # the state is frozen; the rest of the grid holds it
@@ -32,7 +34,7 @@ REASONS = {
     TIME_REACHED: "time reached",
     NOTHING_CAN_FIRE: "nothing can fire any more",
     COUNT_OVERFLOW: "a count passed 2^53",
-    STOP_CONDITION: "stop condition met",
+    STOP_CONDITION: "stop condition met, or every requirement decided",
     BUFFER_FULL: "event buffer full",
 }
 LARGEST_COUNT = 2.0**53
@@ -176,6 +178,7 @@ class Recorders(NamedTuple):
     occupancy: Occupancy
     conditions: Conditions
     log: EventLog
+    requirements: Requirements | None
 
 
 def new_state(counts: NDArray[np.float64], stream: NDArray[np.uint64], channels: int) -> EnsembleState:

@@ -63,6 +63,8 @@ class ExactEngine:
     ) -> int:
         """See contract.py. rates : float64, (R, M + 2 T), 1/s per product of falling factorials, then coefficients."""
         recorders = recorders or recorders_for(state)
+        judging = recorders.requirements
+        plain = recorders._replace(requirements=None)
         running = int(np.count_nonzero(state.reason == RUNNING))
         logging = recorders.log.time.shape[1] > 0
         method = self.method or choose_method(state.firings.shape[1], running, logging)
@@ -87,7 +89,8 @@ class ExactEngine:
                         state,
                         samples,
                         budget,
-                        recorders,
+                        plain,
+                        judging,
                     )
                 )
             return int(
@@ -101,7 +104,8 @@ class ExactEngine:
                     state,
                     samples,
                     budget,
-                    recorders,
+                    plain,
+                    judging,
                 )
             )
 

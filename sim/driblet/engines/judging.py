@@ -1,8 +1,9 @@
 """Requirements judged while a replicate runs: truth after every event, time spent true, first failure, first success.
 
-A requirement is a postfix program over leaves, a leaf the sign of a polynomial in counts (or, for time averages, of the
-integral of a value over a window of time). The state is constant between two events, so all of this is exact. `counts` are
-(thing, column) with one replicate a column, as in recording.py.
+A requirement is a postfix program over leaves. A leaf is the sign of a polynomial in counts or, for time averages, of the
+integral of a value over a window of time, which is judged at the window's edge. The state is constant between two events,
+so all of this is exact. `counts` and `sums` are (thing, column) with one replicate a column, as in recording.py; functions
+take arrays and no tuples, whose many reference counts would cost more than the work.
 """
 
 from __future__ import annotations
@@ -20,67 +21,93 @@ THROUGHOUT, AT_END, ONCE = range(3)
 SIGN, RATIO, LOG_UP, LOG_DOWN, LOG_MIXED = range(5)
 AND, OR = -1, -2
 UNDECIDED, FAILED, MET = -1, 0, 1
-_SMALLEST_NORMAL = 2.2250738585072014e-308
+U = np.uint64
+_ONE = U(1)
+_TINY = 2.2250738585072014e-308  # the smallest normal double
+
+# columns of Requirements.table, .span, .leaf and .record
+FIRST_LEAF, END_LEAF, FIRST_CODE, END_CODE, WHEN, WINDOWS = range(6)
+START, END, WINDOW = range(3)
+KIND, STRICT, POLYNOMIAL, OTHER = range(4)
+TRUTH, SINCE, NEXT_WINDOW, TIME_MET, FIRST_MET, FIRST_FAILURE, JUDGED_UNTIL, OUTCOME = range(8)
 
 
 class Requirements(NamedTuple):
-    """Q requirements of R replicates. Off when there are none.
+    """Q requirements of R replicates, the `moments` ones that judge every state first, then those that judge averages.
 
+    moments, moment_leaves : how many judge every state, and their leaves; stops : whether a replicate may end when all are
+    decided
     affected_start, affected : CSR over channels, which requirements a firing can change
-    leaf_start : (Q + 1,); leaf_kind, leaf_strict : (L,); leaf_polynomial : (L, 2), see driblet.condition_forms.Leaf
+    table : int64, (Q, 6), leaves and program codes of each, WHEN, and how many WINDOWS fill its span (the last takes the rest)
+    span : (Q, 3), s, START, END, and WINDOW averaged over
+    leaf : int64, (L, 4), KIND, STRICT, POLYNOMIAL, and the OTHER one of a ratio or logarithm
     term_start : (P + 1,) over polynomials; factor_start : (T + 1,) over terms; factor_species, factor_offset : (F,)
-    program_start : (Q + 1,); program : leaves from 0 up within the requirement, AND, OR
-    when : (Q,), THROUGHOUT, AT_END or ONCE; span : (Q, 2), s; averaged : (Q,), 0 or 1
-    window : (Q,), s, what is averaged over; windows : (Q,), how many fill the span, the last takes the rest
-    stop : (1,), 1 where a replicate may stop when all requirements are decided
+    program : leaves from 0 up within the requirement, AND, OR
     coefficient : (R, T)
-    leaf_value, leaf_sum : (R, L), of averages: value of the moment, integral over the window so far
-    leaf_truth : (R, L); truth : (R, Q), of the moment or of the last window; since : (R, Q), s, when it began
-    next_window : (R, Q)
-    time_met, first_met, first_failure, judged_until : (R, Q), s, the results; NaN for what did not happen
-    outcome : (R, Q), UNDECIDED, FAILED or MET; the result.
+    leaf_value, leaf_sum : (R, L), of averages: of the moment, and integrated over the window so far
+    leaf_truth : (R, L), 1 or 0; record : (R, Q, 8), what is known; times in s, NaN for what did not happen
+    integrated_to, next_edge : (R,), s, of averages; halt : (R,), s, when all were decided, inf before.
     """
 
+    moments: int
+    moment_leaves: int
+    stops: bool
     affected_start: NDArray[np.int64]
     affected: NDArray[np.int64]
-    leaf_start: NDArray[np.int64]
-    leaf_kind: NDArray[np.int64]
-    leaf_strict: NDArray[np.int64]
-    leaf_polynomial: NDArray[np.int64]
+    table: NDArray[np.int64]
+    span: NDArray[np.float64]
+    leaf: NDArray[np.int64]
     term_start: NDArray[np.int64]
     factor_start: NDArray[np.int64]
     factor_species: NDArray[np.int64]
     factor_offset: NDArray[np.float64]
-    program_start: NDArray[np.int64]
     program: NDArray[np.int64]
-    when: NDArray[np.int64]
-    span: NDArray[np.float64]
-    averaged: NDArray[np.int64]
-    window: NDArray[np.float64]
-    windows: NDArray[np.int64]
-    stop: NDArray[np.int64]
     coefficient: NDArray[np.float64]
     leaf_value: NDArray[np.float64]
     leaf_sum: NDArray[np.float64]
-    leaf_truth: NDArray[np.int64]
-    truth: NDArray[np.int64]
-    since: NDArray[np.float64]
-    next_window: NDArray[np.int64]
-    time_met: NDArray[np.float64]
-    first_met: NDArray[np.float64]
-    first_failure: NDArray[np.float64]
-    judged_until: NDArray[np.float64]
-    outcome: NDArray[np.int64]
+    leaf_truth: NDArray[np.float64]
+    record: NDArray[np.float64]
+    integrated_to: NDArray[np.float64]
+    next_edge: NDArray[np.float64]
+    halt: NDArray[np.float64]
+
+
+def no_requirements(replicates: int, channels: int) -> Requirements:
+    """Requirements that are off."""
+    none, start, nothing = np.zeros(0, dtype=np.int64), np.zeros(1, dtype=np.int64), np.zeros((replicates, 0))
+    return Requirements(
+        moments=0,
+        moment_leaves=0,
+        stops=False,
+        affected_start=np.zeros(channels + 1, dtype=np.int64),
+        affected=none,
+        table=np.zeros((0, 6), dtype=np.int64),
+        span=np.zeros((0, 3)),
+        leaf=np.zeros((0, 4), dtype=np.int64),
+        term_start=start,
+        factor_start=start,
+        factor_species=none,
+        factor_offset=np.zeros(0),
+        program=none,
+        coefficient=nothing,
+        leaf_value=nothing,
+        leaf_sum=nothing,
+        leaf_truth=nothing,
+        record=np.zeros((replicates, 0, 8)),
+        integrated_to=np.zeros(replicates),
+        next_edge=np.full(replicates, np.inf),
+        halt=np.full(replicates, np.inf),
+    )
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
-def polynomial(rq, r, p, counts, column):  # type: ignore[no-untyped-def]
+def polynomial_value(term_start, factor_start, species, offset, coefficient, r, p, counts, column):  # type: ignore[no-untyped-def]
     """Value of polynomial p in replicate r."""
     total = 0.0
-    for t in range(np.uint64(rq.term_start[p]), np.uint64(rq.term_start[p + np.uint64(1)])):
-        value = rq.coefficient[r, t]
-        for f in range(np.uint64(rq.factor_start[t]), np.uint64(rq.factor_start[t + np.uint64(1)])):
-            value *= counts[np.uint64(rq.factor_species[f]), column] - rq.factor_offset[f]
+    for t in range(U(term_start[p]), U(term_start[p + _ONE])):
+        value = coefficient[r, t]
+        for f in range(U(factor_start[t]), U(factor_start[t + _ONE])):
+            value *= counts[U(species[f]), column] - offset[f]
         total += value
     return total
 
@@ -88,165 +115,167 @@ def polynomial(rq, r, p, counts, column):  # type: ignore[no-untyped-def]
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
 def meets(value, strict):  # type: ignore[no-untyped-def]
     """1 where value < 0, or <= 0 when not strict; NaN meets nothing."""
-    return np.int64(value < 0.0) | (np.int64(value <= 0.0) & (np.int64(1) - strict))
+    if strict != 0:
+        return 1.0 if value < 0.0 else 0.0
+    return 1.0 if value <= 0.0 else 0.0
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
+def log_ratio(kind, above, below):  # type: ignore[no-untyped-def]
+    """ln(above / below), infinite where a side is exhausted: `kind` says which side counts, or neither where both are."""
+    value = minus_log(max(below, _TINY)) - minus_log(max(above, _TINY))
+    no_above, no_below = above <= _TINY, below <= _TINY
+    if no_above and no_below:
+        return np.inf if kind == LOG_UP else -np.inf if kind == LOG_DOWN else np.nan
+    return -np.inf if no_above else np.inf if no_below else value
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def conclude(rq, r, q):  # type: ignore[no-untyped-def]
-    """Truth of requirement q from the truth of its leaves."""
-    first = rq.leaf_start[q]
+def conclude(table, program, leaf_truth, r, q):  # type: ignore[no-untyped-def]
+    """Truth of requirement q, 1 or 0, from the truth of its leaves."""
+    first = table[q, FIRST_LEAF]
     stack = np.int64(0)  # a stack of bits, the last pushed lowest
-    for k in range(rq.program_start[q], rq.program_start[q + 1]):
-        code = rq.program[k]
+    for k in range(table[q, FIRST_CODE], table[q, END_CODE]):
+        code = program[k]
         if code >= 0:
-            stack = (stack << 1) | rq.leaf_truth[r, first + code]
+            stack = (stack << 1) | np.int64(leaf_truth[r, first + code])
         elif code == AND:
             stack = ((stack >> 2) << 1) | (stack & (stack >> 1) & 1)
         else:
             stack = ((stack >> 2) << 1) | ((stack | (stack >> 1)) & 1)
-    return stack & 1
+    return np.float64(stack & 1)
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def credit(rq, r, q, until, closed):  # type: ignore[no-untyped-def]
-    """Write down that the truth of q held from `since` to `until`, that instant included where `closed`."""
-    start, end = rq.span[q, 0], rq.span[q, 1]
-    since = rq.since[r, q]
+def credit(table, span, record, r, q, until, closed):  # type: ignore[no-untyped-def]
+    """Write down that the truth of q held from SINCE to `until`, that instant included where `closed`."""
+    start, end = span[q, START], span[q, END]
+    since, truth = record[r, q, SINCE], record[r, q, TRUTH]
     if since > end or until < start or (until == start and not closed):
         return
     first = max(since, start)
-    if rq.truth[r, q] == 1:
-        rq.time_met[r, q] += min(until, end) - first
-        if np.isnan(rq.first_met[r, q]):
-            rq.first_met[r, q] = first
-    elif np.isnan(rq.first_failure[r, q]):
-        rq.first_failure[r, q] = first
-    if rq.when[q] == AT_END and (until > end or (until == end and closed)):
-        rq.outcome[r, q] = rq.truth[r, q]
+    if truth == 1.0:
+        record[r, q, TIME_MET] += min(until, end) - first
+        if np.isnan(record[r, q, FIRST_MET]):
+            record[r, q, FIRST_MET] = first
+    elif np.isnan(record[r, q, FIRST_FAILURE]):
+        record[r, q, FIRST_FAILURE] = first
+    if table[q, WHEN] == AT_END and (until > end or (until == end and closed)):
+        record[r, q, OUTCOME] = truth
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def take_values(rq, r, q, counts, column):  # type: ignore[no-untyped-def]
-    """The values of the moment that q averages."""
-    for leaf in range(rq.leaf_start[q], rq.leaf_start[q + 1]):
-        kind = rq.leaf_kind[leaf]
-        value = polynomial(rq, r, np.uint64(rq.leaf_polynomial[leaf, 0]), counts, column)
-        if kind != SIGN:
-            below = polynomial(rq, r, np.uint64(rq.leaf_polynomial[leaf, 1]), counts, column)
-            value = value / below if kind == RATIO else log_ratio(kind, value, below)
-        rq.leaf_value[r, leaf] = value
-
-
-@njit(nogil=True, cache=CACHE, error_model="numpy")
-def log_ratio(kind, above, below):  # type: ignore[no-untyped-def]
-    """ln(above / below) with the exhausted reactants that `kind` says: +inf below the line, -inf above it."""
-    if above > _SMALLEST_NORMAL and below > _SMALLEST_NORMAL:
-        return minus_log(below) - minus_log(above)
-    if kind == LOG_UP or (kind == LOG_MIXED and above > 0.0):
-        return np.inf if below <= _SMALLEST_NORMAL else -np.inf
-    if kind == LOG_DOWN or (kind == LOG_MIXED and below > 0.0):
-        return -np.inf if above <= _SMALLEST_NORMAL else np.inf
-    return np.nan
-
-
-@njit(nogil=True, cache=CACHE, error_model="numpy")
-def integrate_to(rq, r, q, until):  # type: ignore[no-untyped-def]
-    """Integrate the values of q up to `until`, judging every window that ends by then."""
-    start, end = rq.span[q, 0], rq.span[q, 1]
-    low, high = max(rq.since[r, q], start), min(until, end)
-    first, last = rq.leaf_start[q], rq.leaf_start[q + 1]
-    while rq.next_window[r, q] < rq.windows[q]:
-        k = rq.next_window[r, q]
-        edge = end if k == rq.windows[q] - 1 else start + (k + 1) * rq.window[q]
-        to = min(edge, high)
-        if to > low:
-            for leaf in range(first, last):
-                rq.leaf_sum[r, leaf] += rq.leaf_value[r, leaf] * (to - low)
-            low = to
-        if high < edge:
-            break
-        for leaf in range(first, last):
-            rq.leaf_truth[r, leaf] = meets(rq.leaf_sum[r, leaf], rq.leaf_strict[leaf])
-            rq.leaf_sum[r, leaf] = 0.0
-        rq.truth[r, q] = conclude(rq, r, q)
-        if rq.truth[r, q] == 1:
-            rq.time_met[r, q] += edge - (start + k * rq.window[q])
-            if np.isnan(rq.first_met[r, q]):
-                rq.first_met[r, q] = edge
-        elif np.isnan(rq.first_failure[r, q]):
-            rq.first_failure[r, q] = edge
-        if rq.when[q] == AT_END and k == rq.windows[q] - 1:
-            rq.outcome[r, q] = rq.truth[r, q]
-        rq.next_window[r, q] = k + 1
-    rq.since[r, q] = until
+def turn(table, span, program, leaf_truth, record, r, q, clock):  # type: ignore[no-untyped-def]
+    """A leaf of q has changed at `clock`; returns whether q has."""
+    truth = conclude(table, program, leaf_truth, r, q)
+    if truth == record[r, q, TRUTH]:
+        return False
+    credit(table, span, record, r, q, clock, False)
+    record[r, q, TRUTH] = truth
+    record[r, q, SINCE] = clock
+    return True
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
-def judge(rq, r, q, counts, column, clock):  # type: ignore[no-untyped-def]
-    """Take notice that the counts of requirement q may have changed at `clock`; returns whether its truth did."""
-    if rq.averaged[q] != 0:
-        before = rq.next_window[r, q]
-        integrate_to(rq, r, q, clock)
-        take_values(rq, r, q, counts, column)
-        return rq.next_window[r, q] != before
-    changed = np.int64(0)
-    for leaf in range(np.uint64(rq.leaf_start[q]), np.uint64(rq.leaf_start[q + np.uint64(1)])):
-        p = np.uint64(rq.leaf_polynomial[leaf, 0])
-        truth = meets(polynomial(rq, r, p, counts, column), rq.leaf_strict[leaf])
-        changed |= truth ^ rq.leaf_truth[r, leaf]
-        rq.leaf_truth[r, leaf] = truth
-    if changed != 0:
-        truth = conclude(rq, r, q)
-        if truth != rq.truth[r, q]:
-            credit(rq, r, q, clock, False)
-            rq.truth[r, q] = truth
-            rq.since[r, q] = clock
-            return True
-    return False
+def leaf_change(leaf, term_start, factor_start, species, offset, coefficient, leaf_truth, r, k, counts, column):  # type: ignore[no-untyped-def]
+    """Look at leaf k of a moment anew; 1 where its truth has changed."""
+    p = U(leaf[k, POLYNOMIAL])
+    value = polynomial_value(term_start, factor_start, species, offset, coefficient, r, p, counts, column)
+    truth = meets(value, leaf[k, STRICT])
+    if truth == leaf_truth[r, k]:
+        return 0
+    leaf_truth[r, k] = truth
+    return 1
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
+def take_value(leaf, term_start, factor_start, species, offset, coefficient, r, k, counts, column):  # type: ignore[no-untyped-def]
+    """The value of the moment of leaf k of an average."""
+    kind = leaf[k, KIND]
+    p = U(leaf[k, POLYNOMIAL])
+    value = polynomial_value(term_start, factor_start, species, offset, coefficient, r, p, counts, column)
+    if kind == SIGN:
+        return value
+    p = U(leaf[k, OTHER])
+    below = polynomial_value(term_start, factor_start, species, offset, coefficient, r, p, counts, column)
+    return value / below if kind == RATIO else log_ratio(kind, value, below)
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
-def judge_firing(rq, r, channel, counts, column, clock):  # type: ignore[no-untyped-def]
-    """Judge what a firing of `channel` at `clock` can change; returns whether the truth of any requirement did."""
-    changed = False
-    for k in range(np.uint64(rq.affected_start[channel]), np.uint64(rq.affected_start[channel + np.uint64(1)])):
-        changed |= judge(rq, r, np.uint64(rq.affected[k]), counts, column, clock)
-    return changed
+def part(value, time):  # type: ignore[no-untyped-def]
+    """value * time, 0 for no time, also of an infinite value."""
+    return value * time if time > 0.0 else 0.0
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def judge_all(rq, r, counts, column, clock):  # type: ignore[no-untyped-def]
-    """Judge every requirement: after a leap, or at a grid point."""
-    for q in range(rq.when.size):
-        judge(rq, r, np.uint64(q), counts, column, clock)
+def window_edge(table, span, record, r, q):  # type: ignore[no-untyped-def]
+    """Where the present window of an average ends: the start of the span at first, inf after the last."""
+    k = record[r, q, NEXT_WINDOW]
+    if k == table[q, WINDOWS]:
+        return np.inf
+    if k == table[q, WINDOWS] - 1.0:
+        return span[q, END]
+    return span[q, START] + (k + 1.0) * span[q, WINDOW]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def open_judgement(rq, r, counts, column):  # type: ignore[no-untyped-def]
-    """The truth at time zero; `counts` : of the start."""
-    for q in range(rq.when.size):
-        rq.since[r, q] = 0.0
-        if rq.averaged[q] != 0:
-            take_values(rq, r, q, counts, column)
-            continue
-        for leaf in range(rq.leaf_start[q], rq.leaf_start[q + 1]):
-            p = np.uint64(rq.leaf_polynomial[leaf, 0])
-            rq.leaf_truth[r, leaf] = meets(polynomial(rq, r, p, counts, column), rq.leaf_strict[leaf])
-        rq.truth[r, q] = conclude(rq, r, q)
+def judge_window(table, span, leaf, program, leaf_truth, record, sums, r, column, q):  # type: ignore[no-untyped-def]
+    """The present window of q is complete: judge it, and begin the next."""
+    k = record[r, q, NEXT_WINDOW]
+    edge = window_edge(table, span, record, r, q)
+    record[r, q, NEXT_WINDOW] = k + 1.0
+    for n in range(table[q, FIRST_LEAF], table[q, END_LEAF]):
+        leaf_truth[r, n] = meets(sums[U(n), column], leaf[n, STRICT])
+        sums[U(n), column] = 0.0
+    if k < 0.0:  # what came before the span
+        return
+    truth = conclude(table, program, leaf_truth, r, q)
+    record[r, q, TRUTH] = truth
+    if truth == 1.0:
+        record[r, q, TIME_MET] += edge - (span[q, START] + k * span[q, WINDOW])
+        if np.isnan(record[r, q, FIRST_MET]):
+            record[r, q, FIRST_MET] = edge
+    elif np.isnan(record[r, q, FIRST_FAILURE]):
+        record[r, q, FIRST_FAILURE] = edge
+    if table[q, WHEN] == AT_END and k == table[q, WINDOWS] - 1.0:
+        record[r, q, OUTCOME] = truth
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def all_decided(rq, r, clock):  # type: ignore[no-untyped-def]
+def cross_edges(  # type: ignore[no-untyped-def]
+    moments, moment_leaves, table, span, leaf, program, leaf_value, leaf_truth, record, integrated_to, next_edge, sums, r,
+    column, until, closed,
+):  # fmt: skip
+    """Judge every window that ends before `until`, or then where `closed`; values : of the present state.
+
+    Afterwards averages are integrated up to integrated_to[r].
+    """
+    edge = next_edge[r]
+    while edge < until or (closed and edge == until):
+        for n in range(moment_leaves, leaf.shape[0]):
+            sums[U(n), column] += part(leaf_value[r, n], edge - integrated_to[r])
+        integrated_to[r] = edge
+        after = np.inf
+        for q in range(moments, table.shape[0]):
+            if window_edge(table, span, record, r, q) == edge:
+                judge_window(table, span, leaf, program, leaf_truth, record, sums, r, column, q)
+            after = min(after, window_edge(table, span, record, r, q))
+        edge = after
+        next_edge[r] = edge
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
+def all_decided(moments, table, span, record, r, clock):  # type: ignore[no-untyped-def]
     """Whether nothing after `clock` can change an outcome of replicate r."""
-    for q in range(rq.when.size):
-        if clock > rq.span[q, 1] or rq.outcome[r, q] != UNDECIDED:
+    for q in range(table.shape[0]):
+        if clock > span[q, END] or record[r, q, OUTCOME] != UNDECIDED:
             continue
-        now = rq.averaged[q] == 0 and clock >= rq.span[q, 0]
-        if rq.when[q] == THROUGHOUT:
-            if np.isnan(rq.first_failure[r, q]) and not (now and rq.truth[r, q] == 0):
+        now = q < moments and clock >= span[q, START]
+        if table[q, WHEN] == THROUGHOUT:
+            if np.isnan(record[r, q, FIRST_FAILURE]) and not (now and record[r, q, TRUTH] == 0.0):
                 return False
-        elif rq.when[q] == ONCE:
-            if np.isnan(rq.first_met[r, q]) and not (now and rq.truth[r, q] == 1):
+        elif table[q, WHEN] == ONCE:
+            if np.isnan(record[r, q, FIRST_MET]) and not (now and record[r, q, TRUTH] == 1.0):
                 return False
         else:
             return False
@@ -254,22 +283,62 @@ def all_decided(rq, r, clock):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def close_judgement(rq, r, end):  # type: ignore[no-untyped-def]
-    """The outcomes of a replicate whose record ends at `end`."""
-    for q in range(rq.when.size):
-        if rq.averaged[q] != 0:
-            integrate_to(rq, r, q, end)
+def judge_all(rq, counts, clock, opening):  # type: ignore[no-untyped-def]
+    """Look at every requirement of every replicate anew at `clock`; counts : (species, R).
+
+    opening : at the start of a run, where there is nothing before; else after a leap or an addition.
+    """
+    for r in range(counts.shape[1]):
+        sums = rq.leaf_sum.T
+        if opening:
+            rq.next_edge[r] = np.inf
+            for q in range(rq.moments, rq.table.shape[0]):
+                rq.record[r, q, NEXT_WINDOW] = -1.0 if rq.span[q, START] > 0.0 else 0.0
+                rq.next_edge[r] = min(rq.next_edge[r], window_edge(rq.table, rq.span, rq.record, r, q))
         else:
-            credit(rq, r, q, end, True)
-        through = end >= rq.span[q, 1]
-        rq.judged_until[r, q] = min(end, rq.span[q, 1])
-        if rq.when[q] == THROUGHOUT:
-            if not np.isnan(rq.first_failure[r, q]):
-                rq.outcome[r, q] = FAILED
-            elif through:
-                rq.outcome[r, q] = MET
-        elif rq.when[q] == ONCE:
-            if not np.isnan(rq.first_met[r, q]):
-                rq.outcome[r, q] = MET
-            elif through:
-                rq.outcome[r, q] = FAILED
+            cross_edges(
+                rq.moments, rq.moment_leaves, rq.table, rq.span, rq.leaf, rq.program, rq.leaf_value, rq.leaf_truth, rq.record,
+                rq.integrated_to, rq.next_edge, sums, r, r, clock, False,
+            )  # fmt: skip
+            for n in range(rq.moment_leaves, rq.leaf.shape[0]):
+                sums[n, r] += part(rq.leaf_value[r, n], clock - rq.integrated_to[r])
+            rq.integrated_to[r] = max(rq.integrated_to[r], clock)
+        for n in range(rq.moment_leaves, rq.leaf.shape[0]):
+            rq.leaf_value[r, n] = take_value(
+                rq.leaf, rq.term_start, rq.factor_start, rq.factor_species, rq.factor_offset, rq.coefficient, r, n, counts, r
+            )  # fmt: skip
+        for q in range(rq.moments):
+            for k in range(rq.table[q, FIRST_LEAF], rq.table[q, END_LEAF]):
+                leaf_change(
+                    rq.leaf, rq.term_start, rq.factor_start, rq.factor_species, rq.factor_offset, rq.coefficient,
+                    rq.leaf_truth, r, k, counts, r,
+                )  # fmt: skip
+            if opening:
+                rq.record[r, q, TRUTH] = conclude(rq.table, rq.program, rq.leaf_truth, r, q)
+            else:
+                turn(rq.table, rq.span, rq.program, rq.leaf_truth, rq.record, r, q, clock)
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
+def close_judgement(rq, end):  # type: ignore[no-untyped-def]
+    """The outcomes of replicates whose records end at end[r]."""
+    for r in range(end.size):
+        cross_edges(
+            rq.moments, rq.moment_leaves, rq.table, rq.span, rq.leaf, rq.program, rq.leaf_value, rq.leaf_truth, rq.record,
+            rq.integrated_to, rq.next_edge, rq.leaf_sum.T, r, r, end[r], True,
+        )  # fmt: skip
+        for q in range(rq.table.shape[0]):
+            if q < rq.moments:
+                credit(rq.table, rq.span, rq.record, r, q, end[r], True)
+            through = end[r] >= rq.span[q, END]
+            rq.record[r, q, JUDGED_UNTIL] = min(end[r], rq.span[q, END])
+            if rq.table[q, WHEN] == THROUGHOUT:
+                if not np.isnan(rq.record[r, q, FIRST_FAILURE]):
+                    rq.record[r, q, OUTCOME] = FAILED
+                elif through:
+                    rq.record[r, q, OUTCOME] = MET
+            elif rq.table[q, WHEN] == ONCE:
+                if not np.isnan(rq.record[r, q, FIRST_MET]):
+                    rq.record[r, q, OUTCOME] = MET
+                elif through:
+                    rq.record[r, q, OUTCOME] = FAILED

@@ -27,6 +27,18 @@ from driblet.engines.contract import (
     Recorders,
 )
 from driblet.engines.factors import factored_channels, integrate_pace, most_nodes, sum_with_factors
+from driblet.engines.judging import all_decided, no_requirements
+from driblet.engines.lane_judging import (
+    CHANGED,
+    SCRATCH,
+    cross_lane_edges,
+    enter_judgement,
+    integrate_judged,
+    judge_lanes,
+    lane_code,
+    leave_judgement,
+    look_closer,
+)
 from driblet.engines.random_stream import minus_log, output, selection_uniform, step, waiting_uniform
 from driblet.engines.recording import (
     close_windows,
@@ -82,6 +94,10 @@ class Lanes(NamedTuple):
     running: NDArray[np.float64]
     weight: NDArray[np.float64]
     pending: NDArray[np.float64]
+    judged: NDArray[np.float64]
+    leaf_sum: NDArray[np.float64]
+    integrated_to: NDArray[np.float64]
+    code: NDArray[np.int64]
     clock: NDArray[np.float64]
     since: NDArray[np.float64]
     mark: NDArray[np.float64]
@@ -119,6 +135,8 @@ def new_lanes(
         return memory[start : start + size].view(kind).reshape(shape)
 
     channels = state.firings.shape[1]
+    judging = recorders.requirements or no_requirements(len(state.reason), channels)
+    leaves, terms = len(judging.leaf), judging.coefficient.shape[1]
     constants = channels + 2 * len(network.node_parent)
     return Lanes(
         counts=aligned(np.float64, state.counts.shape[1] + 1, lanes),
@@ -132,6 +150,10 @@ def new_lanes(
         running=aligned(np.float64, len(recorders.averages.factor), lanes),
         weight=aligned(np.float64, len(recorders.conditions.factor), lanes),
         pending=aligned(np.float64, len(recorders.conditions.stops), lanes),
+        judged=aligned(np.float64, SCRATCH + terms + leaves, lanes),
+        leaf_sum=aligned(np.float64, leaves, lanes),
+        integrated_to=aligned(np.float64, lanes),
+        code=lane_code(judging.leaf, judging.term_start, judging.factor_start, judging.factor_species),
         clock=aligned(np.float64, lanes),
         since=aligned(np.float64, lanes),
         mark=aligned(np.float64, lanes),
@@ -192,7 +214,16 @@ def leave(lanes, lane, reason, state, running):  # type: ignore[no-untyped-def]
 @njit(nogil=True, cache=CACHE, error_model="numpy")
 def move(lanes, source, lane):  # type: ignore[no-untyped-def]
     """Move a lane to another place in the middle of a step, and leave its old place empty: nothing can fire there."""
-    for matrix in (lanes.counts, lanes.rate, lanes.pace, lanes.running, lanes.weight, lanes.pending):
+    for matrix in (
+        lanes.counts,
+        lanes.rate,
+        lanes.pace,
+        lanes.running,
+        lanes.weight,
+        lanes.pending,
+        lanes.judged,
+        lanes.leaf_sum,
+    ):
         for i in range(matrix.shape[0]):
             matrix[i, lane] = matrix[i, source]
             matrix[i, source] = 0.0
@@ -200,7 +231,7 @@ def move(lanes, source, lane):  # type: ignore[no-untyped-def]
         lanes.firings[j, lane] = lanes.firings[j, source]
     for k in range(4):
         lanes.stream[k, lane] = lanes.stream[k, source]
-    for vector in (lanes.clock, lanes.since, lanes.mark, lanes.chosen):
+    for vector in (lanes.clock, lanes.since, lanes.mark, lanes.chosen, lanes.integrated_to):
         vector[lane] = vector[source]
     lanes.row[lane] = lanes.row[source]
     lanes.sample[lane] = lanes.sample[source]
@@ -437,7 +468,9 @@ def next_running(reason, after):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def advance_lanes(network, table, rows, factor_row, lanes, shared, fewest, rates, state, samples, budget, recorders):  # type: ignore[no-untyped-def]
+def advance_lanes(  # type: ignore[no-untyped-def]
+    network, table, rows, factor_row, lanes, shared, fewest, rates, state, samples, budget, recorders, judging
+):
     """See contract.py. shared : whether all rates are `lanes.common_rate`; fewest : returns when fewer replicates than
     this are left, since they are better off one after the other. Event logs are not kept here.
     """
@@ -445,11 +478,28 @@ def advance_lanes(network, table, rows, factor_row, lanes, shared, fewest, rates
     averages, occupancy, conditions = recorders.averages, recorders.occupancy, recorders.conditions
     averaging, watching = averages.edge.size > 0, conditions.stops.size > 0
     following = occupancy.species.size > 0
+    if judging is not None:
+        moments, moment_leaves, halting = judging.moments, judging.moment_leaves, judging.stops
+        judging_averages = judging.table.shape[0] > moments
+        plan, spans, leaves, program, record = (
+            judging.table,
+            judging.span,
+            judging.leaf,
+            judging.program,
+            judging.record,
+        )
+        term_start, factor_start, factor_species = judging.term_start, judging.factor_start, judging.factor_species
+        factor_offset, coefficient = judging.factor_offset, judging.coefficient
+        leaf_truth, leaf_value, leaf_sum = judging.leaf_truth, judging.leaf_value, judging.leaf_sum
+        integrated_to, judged_edge, halt = judging.integrated_to, judging.next_edge, judging.halt
+        judged, code = lanes.judged, lanes.code
     timed = averaging or watching
     clock, since, mark, chosen = lanes.clock, lanes.since, lanes.mark, lanes.chosen
     lane_row, lane_sample, pending, sums = lanes.row, lanes.sample, lanes.pending, lanes.sums
     every = 1 if budget > 0 else 2  # no literal: views of no particular layout, see recording.py
     counts, firings, running = lanes.counts[::every], lanes.firings[::every], lanes.running[::every]
+    if judging is not None:
+        leaf_sums = lanes.leaf_sum[::every]
     pace = lanes.pace[::every]
     sampled_counts, sampled_firings = samples.counts, samples.firings
     per_width, span, standing_since, seconds = 1.0 / occupancy.width, occupancy.span, occupancy.since, occupancy.seconds
@@ -471,6 +521,11 @@ def advance_lanes(network, table, rows, factor_row, lanes, shared, fewest, rates
     while upcoming < replicates and active < lanes.row.size:
         first = next_mark(time, edge, next_edge, upcoming, state.next_sample[upcoming])
         enter(lanes, active, upcoming, rates, state, averages.running, conditions.weight, conditions.first_met, first)
+        if judging is not None:
+            enter_judgement(
+                coefficient, leaf_truth, leaf_value, leaf_sum, moment_leaves, integrated_to, judged_edge, halt, lanes,
+                active, upcoming,
+            )  # fmt: skip
         active += 1
         upcoming = next_running(state.reason, upcoming + 1)
     for lane in range(active, lanes.row.size):
@@ -509,6 +564,20 @@ def advance_lanes(network, table, rows, factor_row, lanes, shared, fewest, rates
                     if stop < np.inf:
                         later = stop
                         reason = np.int64(STOP_CONDITION)
+                if judging is not None:
+                    if judging_averages and not later <= judged_edge[r]:
+                        cross_lane_edges(
+                            moments, moment_leaves, plan, spans, leaves, program, leaf_value, leaf_truth, record,
+                            integrated_to, judged_edge, leaf_sums, lanes, lane, r, min(later, time[time.size - 1]),
+                        )  # fmt: skip
+                    if halting:
+                        if halt[r] == np.inf and not later <= mark[lane]:
+                            here = max(mark[lane], lanes.integrated_to[lane])
+                            if here < time[time.size - 1] and all_decided(moments, plan, spans, record, r, here):
+                                halt[r] = here
+                        if halt[r] < np.inf and halt[r] <= later:
+                            later = halt[r]
+                            reason = np.int64(STOP_CONDITION)
                 if averaging:
                     since[lane] = close_windows(averages, r, since[lane], later, counts, firings, running, pace, lane)
                 sample = sample_until(
@@ -516,6 +585,8 @@ def advance_lanes(network, table, rows, factor_row, lanes, shared, fewest, rates
                 )
                 lane_sample[lane] = sample
                 mark[lane] = next_mark(time, edge, next_edge, r, sample)
+                if judging is not None:
+                    mark[lane] = min(mark[lane], judged_edge[r])
                 if sample == time.size:
                     later = time[sample - 1]
                     reason = np.int64(TIME_REACHED if sums[rows.end - 1, lane] > 0.0 else NOTHING_CAN_FIRE)
@@ -533,12 +604,19 @@ def advance_lanes(network, table, rows, factor_row, lanes, shared, fewest, rates
                     )
                     lane_sample[lane] = sample
                 fired -= 1
+                if judging is not None:
+                    leave_judgement(leaf_value, leaf_sum, integrated_to, moment_leaves, lanes, lane, r)
                 leave(lanes, lane, reason, state, averages.running)
                 if upcoming < replicates:
                     sample = state.next_sample[upcoming]
                     first = next_mark(time, edge, next_edge, upcoming, sample)
                     weight, first_met = conditions.weight, conditions.first_met
                     enter(lanes, lane, upcoming, rates, state, averages.running, weight, first_met, first)
+                    if judging is not None:
+                        enter_judgement(
+                            coefficient, leaf_truth, leaf_value, leaf_sum, moment_leaves, integrated_to, judged_edge, halt,
+                            lanes, lane, upcoming,
+                        )  # fmt: skip
                     upcoming = next_running(state.reason, upcoming + 1)
                     lane += 1
                 else:
@@ -560,7 +638,20 @@ def advance_lanes(network, table, rows, factor_row, lanes, shared, fewest, rates
                     integrate_pace(averages.paced, lanes.pace, lane_running, spent, width)
             for lane in range(width):
                 since[lane] = clock[lane]
+        if judging is not None and judging_averages:
+            integrate_judged(judged, lanes.leaf_sum, clock, lanes.integrated_to, moment_leaves, width)
         fire(table, lanes, flat_counts, flat_firings, flat_place, flat_amount, stride, width)
+        if judging is not None:
+            news = judge_lanes(code, factor_offset, lanes.counts, judged, moment_leaves, leaves.shape[0], active, width)
+            if news > 0:
+                for lane in range(active):
+                    if judged[CHANGED, lane] > 0.0:
+                        look_closer(
+                            moments, halting, plan, spans, leaves, program, term_start, factor_start, factor_species,
+                            factor_offset, coefficient, leaf_truth, record, halt, counts, lanes, lane, lane_row[lane],
+                        )  # fmt: skip
     for lane in range(active):
+        if judging is not None:
+            leave_judgement(leaf_value, leaf_sum, integrated_to, moment_leaves, lanes, lane, lane_row[lane])
         leave(lanes, lane, np.int64(RUNNING), state, averages.running)
     return fired

@@ -21,6 +21,7 @@ from driblet.engines.contract import (
     Occupancy,
     Recorders,
 )
+from driblet.engines.judging import Requirements
 
 INTS = np.int64
 
@@ -122,6 +123,7 @@ def recorders_for(
     occupancy: Occupancy | None = None,
     conditions: Conditions | None = None,
     log: EventLog | None = None,
+    requirements: Requirements | None = None,
 ) -> Recorders:
     """The given recorders, the others off."""
     replicates, channels = state.firings.shape
@@ -131,6 +133,7 @@ def recorders_for(
         occupancy or no_occupancy(replicates, species),
         conditions or no_conditions(replicates),
         log or new_log(replicates, 0),
+        requirements,
     )
 
 

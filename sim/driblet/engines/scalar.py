@@ -19,6 +19,16 @@ from driblet.engines.contract import (
     TIME_REACHED,
 )
 from driblet.engines.factors import renew_factors
+from driblet.engines.judging import (
+    END_LEAF,
+    FIRST_LEAF,
+    all_decided,
+    cross_edges,
+    leaf_change,
+    part,
+    take_value,
+    turn,
+)
 from driblet.engines.random_stream import minus_log, next_word, selection_uniform, waiting_uniform
 from driblet.engines.recording import (
     close_windows,
@@ -114,9 +124,13 @@ def integrate_row(factor, offset, dummy, counts, running, span):  # type: ignore
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def advance_scalar(network, rows, refresh, factor_row, nodes, rates, state, samples, budget, recorders):  # type: ignore[no-untyped-def]
-    """See contract.py. rates : float64, (R, M + 2 T), 1/s per product of falling factorials."""
-    averages, occupancy, conditions, log = recorders
+def advance_scalar(  # type: ignore[no-untyped-def]
+    network, rows, refresh, factor_row, nodes, rates, state, samples, budget, recorders, judging
+):
+    """See contract.py. rates : float64, (R, M + 2 T), 1/s per product of falling factorials; judging : requirements, or
+    None, for which their part of the kernel is not compiled.
+    """
+    averages, occupancy, conditions, log = recorders.averages, recorders.occupancy, recorders.conditions, recorders.log
     replicates = rates.shape[0]
     species = state.counts.shape[1] - 1
     grid_size = samples.time.size
@@ -130,6 +144,21 @@ def advance_scalar(network, rows, refresh, factor_row, nodes, rates, state, samp
     every = 1 if budget > 0 else 2  # no literal: views of no particular layout, see recording.py
     columns, firing_columns = state.counts.T[::every], state.firings.T[::every]
     running = averages.running.T[::every]
+    if judging is not None:
+        moments, moment_leaves, halting = judging.moments, judging.moment_leaves, judging.stops
+        judging_averages = judging.table.shape[0] > moments
+        plan, spans, leaves, program, record = (
+            judging.table,
+            judging.span,
+            judging.leaf,
+            judging.program,
+            judging.record,
+        )
+        term_start, factor_start, factor_species = judging.term_start, judging.factor_start, judging.factor_species
+        factor_offset, coefficient = judging.factor_offset, judging.coefficient
+        leaf_truth, leaf_value, leaf_sum = judging.leaf_truth, judging.leaf_value, judging.leaf_sum
+        integrated_to, judged_edge, halt = judging.integrated_to, judging.next_edge, judging.halt
+        sums, affected_start, affected = leaf_sum.T[::every], judging.affected_start, judging.affected
     time, edge, next_edge = samples.time, averages.edge, averages.next_edge
     factor, offset, dummy = averages.factor, averages.offset, species
     all_channels, leaf, scratch = np.arange(rows.leaf.size), rows.leaf, np.ones(nodes + 1)
@@ -154,6 +183,8 @@ def advance_scalar(network, rows, refresh, factor_row, nodes, rates, state, samp
         clock = state.clock[r]
         sample = state.next_sample[r]
         mark = next_mark(time, edge, next_edge, r, sample)
+        if judging is not None:
+            mark = min(mark, judged_edge[r])
         while left > 0:
             if logging and log.used[r] == log.time.shape[1]:
                 state.reason[r] = BUFFER_FULL
@@ -167,6 +198,20 @@ def advance_scalar(network, rows, refresh, factor_row, nodes, rates, state, samp
             if watching:
                 stop = look_at_conditions(conditions, r, clock, later, columns, r)
                 later = min(later, stop)
+            if judging is not None:
+                if judging_averages and not later <= judged_edge[r]:
+                    until = min(later, time[grid_size - 1])
+                    cross_edges(
+                        moments, moment_leaves, plan, spans, leaves, program, leaf_value, leaf_truth, record, integrated_to,
+                        judged_edge, sums, r, r, until, False,
+                    )  # fmt: skip
+                if halting:
+                    if halt[r] == np.inf and not later <= mark:
+                        here = max(mark, integrated_to[r])
+                        if here < time[grid_size - 1] and all_decided(moments, plan, spans, record, r, here):
+                            halt[r] = here
+                    stop = min(stop, halt[r])
+                    later = min(later, stop)
             if not later <= mark:
                 if averaging:
                     since = close_windows(averages, r, since, later, columns, firing_columns, running, pace_columns, r)
@@ -174,10 +219,16 @@ def advance_scalar(network, rows, refresh, factor_row, nodes, rates, state, samp
                     time, samples.counts, samples.firings, r, sample, later, columns, firing_columns, r
                 )
                 mark = next_mark(time, edge, next_edge, r, sample)
+                if judging is not None:
+                    mark = min(mark, judged_edge[r])
             if sample == grid_size or stop < np.inf:
                 clock = time[grid_size - 1] if sample == grid_size else stop
                 state.reason[r] = TIME_REACHED if total > 0.0 else NOTHING_CAN_FIRE
                 settle_histograms(occupancy, r, columns, r, clock)
+                if judging is not None:
+                    for k in range(moment_leaves, leaves.shape[0]):
+                        sums[np.uint64(k), r] += part(leaf_value[r, k], clock - integrated_to[r])
+                    integrated_to[r] = max(integrated_to[r], clock)
                 if sample < grid_size:
                     state.reason[r] = STOP_CONDITION
                     if averaging:
@@ -191,6 +242,10 @@ def advance_scalar(network, rows, refresh, factor_row, nodes, rates, state, samp
                 if factor_row is not None:
                     for k in range(averages.paced.shape[0]):
                         running_row[averages.paced[k, 0]] += pace[averages.paced[k, 1]] * (later - since)
+            if judging is not None and judging_averages:
+                for k in range(np.uint64(moment_leaves), np.uint64(leaves.shape[0])):
+                    sums[k, r] += part(leaf_value[r, k], later - integrated_to[r])
+                integrated_to[r] = later
             clock = later
             j = find_channel(rows, cumulative, target)
             for k in range(np.uint64(network.change_start[j]), np.uint64(network.change_start[j + _ONE])):
@@ -209,6 +264,36 @@ def advance_scalar(network, rows, refresh, factor_row, nodes, rates, state, samp
                 )  # fmt: skip
             refresh_sums(rows, refresh, j, value, cumulative)
             firings[j] += 1
+            if judging is not None:
+                news = False
+                for a in range(np.uint64(affected_start[j]), np.uint64(affected_start[j + _ONE])):
+                    q = affected[a]
+                    first, last = np.uint64(plan[q, FIRST_LEAF]), np.uint64(plan[q, END_LEAF])
+                    if q >= moments:
+                        for k in range(first, last):
+                            leaf_value[r, k] = take_value(
+                                leaves,
+                                term_start,
+                                factor_start,
+                                factor_species,
+                                factor_offset,
+                                coefficient,
+                                r,
+                                k,
+                                columns,
+                                r,
+                            )
+                        continue
+                    changed = 0
+                    for k in range(first, last):
+                        changed += leaf_change(
+                            leaves, term_start, factor_start, factor_species, factor_offset, coefficient, leaf_truth, r, k,
+                            columns, r,
+                        )  # fmt: skip
+                    if changed > 0:
+                        news |= turn(plan, spans, program, leaf_truth, record, r, q, clock)
+                if halting and news and all_decided(moments, plan, spans, record, r, clock):
+                    halt[r] = clock
             if logging:
                 log.time[r, log.used[r]] = clock
                 log.channel[r, log.used[r]] = j
