@@ -27,7 +27,7 @@ def sizing_figure(result: Sizing) -> Figure:
 def _draw(result: Sizing) -> Figure:
     finding, question = result.finding, result.question
     close = finding.root is not None and np.isfinite(finding.answer).all()
-    figure = Figure(figsize=(9.6 if close else 6.4, 4.6), layout="constrained")
+    figure = Figure(figsize=(9.6 if close else 6.4, 5.0), layout="constrained")
     title = f"{question.system.title}\n{question.requirement}: {finding.status}"
     figure.suptitle(title, x=0.02, ha="left", fontsize=11)
     axes = figure.subplots(1, 2 if close else 1, squeeze=False, width_ratios=(1.2, 1.0) if close else None)[0]
@@ -35,7 +35,8 @@ def _draw(result: Sizing) -> Figure:
     if close:
         _panel(axes[1], finding, question, *_surroundings(finding, question))
         axes[1].set_title("around the answer", fontsize=9.5)
-    axes[0].legend(loc="best", fontsize=8)
+    handles, labels = axes[0].get_legend_handles_labels()
+    figure.legend(handles, labels, loc="outside lower left", ncols=3 if close else 2, fontsize=8)
     return figure
 
 
@@ -149,7 +150,7 @@ def _copies_axis(ax: Axes, question: Question, limits: tuple[float, float]) -> N
         elif section != "compartments" and question.unit == "copies":
             texts.append(f"{load.concentration_M * 1e9:.3g}")
         else:
-            texts.append(f"{load.copies:.3g}" if load.copies < 1e4 else f"{load.copies:,.0f}")
+            texts.append(f"{load.copies:.3g}" if load.copies < 100 else f"{load.copies:,.0f}")
     upper = ax.twiny()
     if question.scale.log:
         upper.set_xscale("log")

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from driblet.commands.requirement_rows import percent
-from driblet.commands.screen import CAUTION, number
+from driblet.commands.screen import CAUTION, duration, number
 from driblet.errors import CannotAnswerError
 from driblet.outcomes import EVENT, bound, when_text
 from driblet.survival import Interval, wilson
@@ -77,7 +77,7 @@ def _failing(ensemble: Any) -> tuple[str, tuple[Trait, ...]]:
     text = f"{one.share.failing} of {len(ensemble.replicate)} new compartments failed"
     if one.survival is not None and one.requirement.when == "throughout" and len(one.survival.time):
         first = one.survival.time
-        text += f", the first after {number(float(first[0]), 3)} s and the last after {number(float(first[-1]), 3)} s"
+        text += f", the first after {duration(float(first[0]))} and the last after {duration(float(first[-1]))}"
     if not one.traits:
         text += f"; nothing told about what they had in common: {one.traits_missing}"
     return text, one.traits
