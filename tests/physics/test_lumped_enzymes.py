@@ -104,7 +104,8 @@ def test_lumped_rates_are_the_flux_of_the_enzymes_own_master_equation(mechanism:
 def test_an_exchange_comes_with_a_shared_half() -> None:
     laws = flux_laws(shared_half(np.random.default_rng(1)))
     assert [law.turns for law in laws] == [(1, 0), (0, 1), (1, -1)]
-    assert sorted(laws[2].reactants) == ["B", "Q2"] and sorted(laws[2].products) == ["B2", "Q"]
+    assert sorted(laws[2].reactants) == ["B", "Q2"]
+    assert sorted(laws[2].products) == ["B2", "Q"]
 
 
 def test_coefficients_hold_over_forty_decades() -> None:

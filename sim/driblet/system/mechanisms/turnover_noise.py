@@ -77,6 +77,8 @@ class TurnoverNoise:
 
     def ligands(self, concentrations: Mapping[str, float | Array], molecule_M: float | Array = 0.0) -> Array:
         """The variables from mol/L by species; molecule_M : mol/L of one molecule, to take off those held already."""
+        if not self.variables:
+            return np.zeros((*np.shape(molecule_M), 0))
         columns = [np.asarray(concentrations[name]) - held * np.asarray(molecule_M) for name, held in self.variables]
         return np.stack(np.broadcast_arrays(*(np.maximum(c, 0.0) for c in columns)), axis=-1)
 
