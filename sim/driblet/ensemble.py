@@ -104,6 +104,7 @@ def run(
     threads: int | None = None,
     key: int = 0,
     method: str | None = None,
+    statistics: bool = True,
     resume: bool = False,
     force: bool = False,
     on_progress: Callable[[Progress], None] | None = None,
@@ -111,10 +112,10 @@ def run(
     """Simulate an ensemble and return it as a Run, in memory or, with `output`, in a run file.
 
     duration, sample_every : s. What is not given is taken from the system's [run]. key : sets the random streams of the
-    points of a sweep apart, 0 to 2^63 - 1. method : "lanes" or "scalar", which kernel of the exact engine runs; left out, the
-    faster one; the bits are the same. With `resume`, finished replicates of an
-    interrupted run are kept; a complete run is returned as it is. Raises InputError for bad settings or an output that is
-    taken, InterruptedRunError after Ctrl-C.
+    points of a sweep apart, 0 to 2^63 - 1. method : "lanes" or "scalar", which kernel of the exact engine runs; left out,
+    the faster one; the bits are the same. statistics : whether the time integrals that `check` needs are gathered, which
+    adds a third to the time and more. With `resume`, finished replicates of an interrupted run are kept; a complete run is
+    returned as it is. Raises InputError for bad settings or an output that is taken, InterruptedRunError after Ctrl-C.
     """
     changes = {
         "replicates": replicates,
@@ -136,8 +137,11 @@ def run(
     if method == "lanes" and settings.record == "events":
         raise one_problem("run", "method", 'events are recorded by "scalar" only')
     network = Network.of(system)
+    if not statistics and settings.record == "summary":
+        raise one_problem("run", "statistics", 'record = "summary" keeps nothing else: leave one of the two')
     histograms = settings.record != "trajectories"
-    sums = SumsPlan.of(system, network, sample_times(settings)[-1], settings.burn_in_s, histograms)
+    duration_s = float(sample_times(settings)[-1])
+    sums = SumsPlan.of(system, network, duration_s, settings.burn_in_s, kept=statistics, histograms=histograms)
     times = sample_times(settings) if settings.record != "summary" else np.array([0.0, settings.duration_s])
     chosen = choose_method(len(network.channels), settings.replicates, settings.record == "events")
     layout = _layout(system, settings, times, key, sums, method or chosen)
@@ -176,6 +180,7 @@ def _layout(
         "record": settings.record,
         **({} if settings.burn_in_s is None else {"burn_in_s": settings.burn_in_s}),
         **({"stream_key": key} if key else {}),
+        **({} if sums.kept else {"statistics": False}),
     }
     identity = hashlib.sha256(json.dumps([FORMAT, system.text, facts], sort_keys=True).encode()).hexdigest()[:32]
     import numba

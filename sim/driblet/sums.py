@@ -32,16 +32,17 @@ class SumsPlan:
     """Which sums a run keeps.
 
     Attributes: edge_s : (E,), window edges; factor : int64, (Q, 3), offset : (Q, 3), the distinct monomials; row : int64,
-    which of them each channel and then each species has; histograms : whether time is counted at every event, which can
-    cost more than the simulation itself, or taken from the samples; bin_width : int64, (N,), counts per bin of the
-    histograms; span_s : when histograms are gathered; paced : of contract.Averages, monomials that are integrated together
-    with the factor of their channel.
+    which of them each channel and then each species has; kept : whether there is any of this; histograms : whether time
+    is counted at every event, which can cost more than the simulation itself, or taken from the samples; bin_width : int64,
+    (N,), counts per bin of the histograms; span_s : when histograms are gathered; paced : of contract.Averages, monomials
+    that are integrated together with the factor of their channel.
     """
 
     edge_s: NDArray[np.float64]
     factor: NDArray[np.int64]
     offset: NDArray[np.float64]
     row: NDArray[np.int64]
+    kept: bool
     histograms: bool
     bin_width: NDArray[np.int64]
     span_s: tuple[float, float]
@@ -51,7 +52,14 @@ class SumsPlan:
 
     @classmethod
     def of(
-        cls, system: System, network: Network, duration_s: float, burn_in_s: float | None, histograms: bool = True
+        cls,
+        system: System,
+        network: Network,
+        duration_s: float,
+        burn_in_s: float | None,
+        *,
+        kept: bool = True,
+        histograms: bool = True,
     ) -> SumsPlan:
         """The sums for a run of `duration_s`; a stated burn-in is an edge of its own."""
         if burn_in_s is None:
@@ -80,6 +88,7 @@ class SumsPlan:
             distinct[:, :3].astype(np.int64),
             distinct[:, 3:],
             row,
+            kept,
             histograms,
             _bin_widths(system, network),
             (begin, duration_s),
@@ -90,6 +99,8 @@ class SumsPlan:
 
     def recorders(self, state: EnsembleState, start_s: float, end_s: float) -> Recorders:
         """Fresh recorders for the replicates of `state` over a stretch of the run."""
+        if not self.kept:
+            return recorders_for(state)
         replicates = len(state.reason)
         inside = self.edge_s[(self.edge_s > start_s) & (self.edge_s < end_s)]
         edges = np.concatenate([[start_s], inside, [end_s]])
@@ -109,6 +120,8 @@ class SumsPlan:
 
     def collect(self, recorders: Recorders, into: dict[str, NDArray[Any]]) -> None:
         """Add what the recorders of one stretch gathered."""
+        if not self.kept:
+            return
         averages = recorders.averages
         for k, start in enumerate(averages.edge[:-1]):
             window = int(np.searchsorted(self.edge_s, start, side="right")) - 1
@@ -123,6 +136,8 @@ class SumsPlan:
     @property
     def per_replicate(self) -> tuple[PerReplicate, ...]:
         """The arrays as the run file declares them."""
+        if not self.kept:
+            return ()
         edges, n, m = len(self.edge_s), self.species, self.channels
         return (
             PerReplicate("stationary/monomial_time", (edges - 1, m), np.float64, "s"),
@@ -135,6 +150,8 @@ class SumsPlan:
     @property
     def fixed(self) -> dict[str, NDArray[Any]]:
         """What all replicates share, as the run file declares it."""
+        if not self.kept:
+            return {}
         return {
             "stationary/window_edge": self.edge_s,
             "stationary/bin_width": self.bin_width,
