@@ -27,7 +27,6 @@ from driblet.events import event_arrays
 from driblet.interrupts import noted_interrupts
 from driblet.network import Network
 from driblet.results import Run
-from driblet.segments import segments
 from driblet.store import FORMAT, Block, Layout, RunWriter, discard_parts
 from driblet.sums import SumsPlan
 from driblet.system import RunSettings, System
@@ -153,7 +152,6 @@ def run(
             return existing
         existing.close()
         raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
-    segments(system, times)  # its faults are told before anything is written
     writer = RunWriter(path, layout, resume=resume, force=force)
     threads = threads or os.cpu_count() or 1
     file = _Ensemble(system, settings, layout, writer, sums, threads, on_progress, key, method).run()

@@ -206,7 +206,13 @@ class Run:
         from driblet.requirements import judge_on_grid
 
         omega = copies_per_molar(1.0) * self.volume_L
-        each = [judge_on_grid(self.system, one, self.counts, self.time_s, omega) for one in self.system.requirements]
+        each = []
+        for one in self.system.requirements:
+            # a summary keeps the two ends, which tell nothing of what was between
+            if self.provenance.get("record") == "summary" and (one.averaged or one.when != "at end"):
+                each.append(Outcomes.empty(len(self.replicate), 1))
+            else:
+                each.append(judge_on_grid(self.system, one, self.counts, self.time_s, omega))
         parts = [outcomes.values() for outcomes in each]
         return Outcomes.read({path: np.hstack([part[path] for part in parts]) for path in parts[0]})
 
@@ -230,7 +236,7 @@ class Run:
     @property
     def last_addition_s(self) -> float:
         """When something was added last, s; 0 where nothing was. From then on a compartment's totals are its own."""
-        return max((a.at_s for a in self.system.additions), default=0.0)
+        return max((a.at_s for a in self.system.additions if a.at_s < self.time_s[-1]), default=0.0)
 
     def class_counts(self) -> NDArray[np.int64]:
         """Counts at the first sample after the last addition, int64, shape=(replicates, species): they fix the class."""

@@ -13,7 +13,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.engines.contract import NOTHING_CAN_FIRE, RUNNING, TIME_REACHED, EnsembleState, Samples, new_samples
-from driblet.errors import one_problem
 from driblet.system import System
 
 
@@ -31,13 +30,11 @@ class Segment:
 
 
 def segments(system: System, time_s: NDArray[np.float64]) -> list[Segment]:
-    """The segments of a run on a recording grid. Raises InputError for an addition that would come after its end."""
+    """The segments of a run on a recording grid; a run that was asked to be shorter than its file says ends before
+    what would be added later.
+    """
     end = float(time_s[-1])
-    late = [a for a in system.additions if a.at_s >= end]
-    if late:
-        text = f"comes at {late[0].at_s:g} s, after the end of the run at {end:g} s"
-        raise one_problem(system.source or "run", f"additions.{late[0].name}.at", text)
-    times = sorted({a.at_s for a in system.additions})
+    times = sorted({a.at_s for a in system.additions if a.at_s < end})
     starts = [0.0, *times]
     cuts = [0, *(int(np.searchsorted(time_s, t, side="left")) for t in times), len(time_s)]
     found = []

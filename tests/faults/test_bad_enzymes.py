@@ -308,10 +308,3 @@ def test_faulty_sizes(tmp_path: Path, content: str, keys: str, text: str | None)
     (line,) = caught.value.lines()
     assert "compartments.drop." in line
     assert text in line
-
-
-def test_a_run_shorter_than_its_additions_is_refused() -> None:
-    with pytest.raises(
-        driblet.InputError, match=r"additions.pulse.at: comes at 1 s, after the end of the run at 0.5 s"
-    ):
-        driblet.run(driblet.loads(TEXT), duration=0.5)

@@ -272,6 +272,14 @@ def test_an_addition_comes_at_its_time_and_bits_do_not_depend_on_packing() -> No
         np.testing.assert_array_equal(other.firings_forward, run.firings_forward[:n, same])
 
 
+def test_a_run_asked_to_be_shorter_ends_before_its_additions() -> None:
+    run = driblet.run(driblet.loads(TEXT), duration=0.5, sample_every=0.1, replicates=3)
+    assert run.last_addition_s == 0
+    np.testing.assert_array_equal(run.class_counts(), run.initial_counts())
+    ATP = run.counts[:, :, run.species.index("ATP")]
+    assert (np.diff(ATP, axis=1) <= 8).all()
+
+
 def test_an_addition_between_samples_and_into_an_empty_compartment() -> None:
     """Nothing can fire before the pulse; afterwards the reaction runs to its end."""
     text = """

@@ -42,11 +42,11 @@ class _Fault(Exception):
 
 def catalysed_reactions(section: Mapping[str, object]) -> frozenset[str]:
     """Names of the reactions that the tables of [enzymes] say they catalyse, before anything is validated."""
-    found: set[str] = set()
+    found: list[object] = []
     for value in section.values():
         if isinstance(value, Mapping):
             also = value.get("also")
-            found.update(n for n in (value.get("catalyses"), *(also if isinstance(also, Mapping) else ())) if n)
+            found += [value.get("catalyses"), *(also if isinstance(also, Mapping) else ())]
     return frozenset(name for name in found if isinstance(name, str))
 
 
