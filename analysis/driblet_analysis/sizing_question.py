@@ -10,12 +10,9 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, NamedTuple
 
-from driblet.engines.contract import Recorders
 from driblet.ensemble import sample_times
 from driblet.errors import InputError, Problem
-from driblet.network import Network
 from driblet.quantities import Quantity, QuantityError, read_quantity
-from driblet.requirements import CompiledRequirements
 from driblet.system import System, load
 from driblet.system.build import build
 from driblet.version import __version__
@@ -177,12 +174,8 @@ def _with_whole(question: Question) -> Question:
 
 
 def _with_record(question: Question) -> Question:
-    """Samples are kept only where the requirement has to be judged on them."""
-    system = question.system_at(question.scale.high)
-    compiled = CompiledRequirements.of(system, Network.of(system), system.settings.duration_s)
-    watched = "requirements" in Recorders._fields  # by the kernels of this version
-    record = "summary" if watched and not compiled.by_grid else "trajectories"
-    return replace(question, raw=replaced(question.raw, {"run.record": record}))
+    """Trajectories are kept, whatever the file says: a requirement may have to be judged on their samples."""
+    return replace(question, raw=replaced(question.raw, {"run.record": "trajectories"}))
 
 
 class Load(NamedTuple):

@@ -199,9 +199,8 @@ def _direction(self: _Search, values: Sequence[float], survey: Sequence[Outcome]
     met = np.array([outcome == 1 for outcome in survey], dtype=float)
     trend = (position - position.mean()) @ met  # of each compartment
     spread = trend.std(ddof=1) / math.sqrt(len(trend))
-    if abs(trend.mean()) <= 3.0 * spread or not spread:
-        return int(np.sign(trend.mean())) if not spread else 0
-    return int(np.sign(trend.mean()))
+    least = 1e-9 * float(np.abs(position - position.mean()).sum())  # all alike but for rounding
+    return int(np.sign(trend.mean())) if abs(trend.mean()) > max(3.0 * spread, least) else 0
 
 
 def _close_in(self: _Search, sign: int, limits: tuple[float, float], within: float, phase: str) -> Root:

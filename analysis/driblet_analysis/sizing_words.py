@@ -95,9 +95,14 @@ def _headline(result: Sizing, asked: str) -> str:
             + f". To be on the safe side take {quantity(result, sure)}."
         )
     if finding.status == ALREADY_MET:
+        share = f"{percent(finding.share.value)} % (at least {percent(finding.share.low)} %)"
+        if finding.rises is None:
+            return (
+                f"{name} is already met in {asked} of compartments at both limits, {limits}: {share} at the lower one."
+            )
         return (
-            f"{name} is already met in {asked} of compartments at the limit, {path} = {quantity(result, finding.at)}: "
-            f"{percent(finding.share.value)} % (at least {percent(finding.share.low)} %). The {extreme(result)} lies beyond."
+            f"{name} is already met in {asked} of compartments at the limit, {path} = {quantity(result, finding.at)}: {share}. "
+            f"The {extreme(result)} value that would do lies beyond."
         )
     if finding.status == NOT_REACHABLE:
         return (
@@ -130,9 +135,9 @@ def _details(result: Sizing, looked_at: str) -> list[str]:
         f"{question.requirement}: {requirement.must.text}, {when}, from {number(start)} to {number(end)} s of the run."
     ]
     survey = len({t.value for t in finding.tried if t.phase == "survey"})
+    rounds = f", then {finding.rounds} rounds of new ones close to the answer" if finding.rounds else ""
     lines.append(
-        f"It rests on {finding.replicates:,} simulated compartments: the same ones at {survey} values between the limits, then "
-        f"{finding.rounds} rounds of new ones close to the answer."
+        f"It rests on {finding.replicates:,} simulated compartments: the same ones at {survey} values between the limits{rounds}."
     )
     if finding.status == FOUND and finding.root is not None:
         if finding.root.law:

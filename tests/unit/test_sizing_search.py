@@ -144,6 +144,7 @@ def test_verdicts_without_an_answer(status: str, share: Share) -> None:
             assert found.share.high < 0.95
         elif status == ALREADY_MET:
             assert found.share.low > 0.93
+            assert found.rises is not False
         else:
             assert len(found.crossings) == 2
             assert found.crossings[0].rises != found.crossings[1].rises
