@@ -26,6 +26,7 @@ from driblet.errors import InputError, InterruptedRunError, Problem, one_problem
 from driblet.events import event_arrays
 from driblet.interrupts import noted_interrupts
 from driblet.network import Network
+from driblet.outcomes import Outcomes
 from driblet.results import Run
 from driblet.store import FORMAT, Block, Layout, RunWriter, discard_parts
 from driblet.sums import SumsPlan
@@ -104,6 +105,7 @@ def run(
     key: int = 0,
     method: str | None = None,
     statistics: bool = True,
+    stop_when_decided: bool = False,
     resume: bool = False,
     force: bool = False,
     on_progress: Callable[[Progress], None] | None = None,
@@ -113,8 +115,10 @@ def run(
     duration, sample_every : s. What is not given is taken from the system's [run]. key : sets the random streams of the
     points of a sweep apart, 0 to 2^63 - 1. method : "lanes" or "scalar", which kernel of the exact engine runs; left out,
     the faster one; the bits are the same. statistics : whether the time integrals that `check` needs are gathered, which
-    adds a third to the time and more. With `resume`, finished replicates of an interrupted run are kept; a complete run is
-    returned as it is. Raises InputError for bad settings or an output that is taken, InterruptedRunError after Ctrl-C.
+    adds a third to the time and more. stop_when_decided : a replicate may end when the outcome of every requirement is
+    known; its samples then hold the state of that moment to the end. With `resume`, finished replicates of an interrupted
+    run are kept; a complete run is returned as it is. Raises InputError for bad settings or an output that is taken,
+    InterruptedRunError after Ctrl-C.
     """
     changes = {
         "replicates": replicates,
@@ -138,12 +142,13 @@ def run(
     network = Network.of(system)
     if not statistics and settings.record == "summary":
         raise one_problem("run", "statistics", 'record = "summary" keeps nothing else: leave one of the two')
+    looked_at = _requirements(system, network, settings, stop_when_decided)
     histograms = settings.record != "trajectories"
     duration_s = float(sample_times(settings)[-1])
     sums = SumsPlan.of(system, network, duration_s, settings.burn_in_s, kept=statistics, histograms=histograms)
     times = sample_times(settings) if settings.record != "summary" else np.array([0.0, settings.duration_s])
     chosen = choose_method(len(network.channels), settings.replicates, settings.record == "events")
-    layout = _layout(system, settings, times, key, sums, method or chosen)
+    layout = _layout(system, settings, times, key, sums, method or chosen, looked_at, stop_when_decided)
     path = Path(output) if output is not None else None
     if path is not None and resume and path.is_file():
         existing = Run(path)
@@ -154,8 +159,28 @@ def run(
         raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
     writer = RunWriter(path, layout, resume=resume, force=force)
     threads = threads or os.cpu_count() or 1
-    file = _Ensemble(system, settings, layout, writer, sums, threads, on_progress, key, method).run()
+    file = _Ensemble(system, settings, layout, writer, sums, threads, on_progress, key, method, stop_when_decided).run()
     return Run(file) if path is None else Run(path)
+
+
+def _requirements(system: System, network: Network, settings: RunSettings, stop_when_decided: bool) -> dict[str, str]:
+    """Where each requirement will be looked at. Raises InputError for spans that do not fit into the run, and for stops that
+    could never come."""
+    from driblet.requirements import CompiledRequirements
+    from driblet.system.requirements import span_problems
+
+    source = system.source or "run"
+    problems = [p for r in system.requirements for p in span_problems(r, settings.duration_s)]
+    if problems:
+        raise InputError(source, problems)
+    compiled = CompiledRequirements.of(system, network, settings.duration_s)
+    if stop_when_decided and not system.requirements:
+        raise one_problem(source, "stop_when_decided", "there is no requirement to decide; add [requirements.NAME]")
+    if stop_when_decided and compiled.by_grid:
+        q, why = next(iter(compiled.by_grid.items()))
+        text = f"cannot be decided before the end: it is judged on samples only ({why})"
+        raise one_problem(source, f"requirements.{system.requirements[q].name}", text)
+    return dict(zip((r.name for r in system.requirements), compiled.resolutions(), strict=True))
 
 
 def _row_bytes(system: System, times: NDArray[np.float64]) -> int:
@@ -165,7 +190,14 @@ def _row_bytes(system: System, times: NDArray[np.float64]) -> int:
 
 
 def _layout(
-    system: System, settings: RunSettings, times: NDArray[np.float64], key: int, sums: SumsPlan, method: str
+    system: System,
+    settings: RunSettings,
+    times: NDArray[np.float64],
+    key: int,
+    sums: SumsPlan,
+    method: str,
+    looked_at: Mapping[str, str],
+    stop_when_decided: bool,
 ) -> Layout:
     unit = max(1, min(-(-settings.replicates // 64), _UNIT_BYTES // _row_bytes(system, times)))
     unit = 1 << (unit.bit_length() - 1)  # a power of two, so that whole units fill a pack of lanes
@@ -179,6 +211,7 @@ def _layout(
         **({} if settings.burn_in_s is None else {"burn_in_s": settings.burn_in_s}),
         **({"stream_key": key} if key else {}),
         **({} if sums.kept else {"statistics": False}),
+        **({"stop_when_decided": True} if stop_when_decided else {}),
     }
     identity = hashlib.sha256(json.dumps([FORMAT, system.text, facts], sort_keys=True).encode()).hexdigest()[:32]
     import numba
@@ -186,6 +219,7 @@ def _layout(
     provenance = {
         **facts,
         "method": method,
+        **({"requirements_looked_at": json.dumps(looked_at)} if looked_at else {}),
         "driblet_version": __version__,
         "numpy_version": np.__version__,
         "numba_version": numba.__version__,
@@ -205,7 +239,9 @@ def _layout(
         identity,
         system.text,
         provenance,
-        sums.per_replicate + (event_arrays() if settings.record == "events" else ()),
+        sums.per_replicate
+        + (event_arrays() if settings.record == "events" else ())
+        + Outcomes.arrays(len(system.requirements)),
         sums.fixed,
     )
 
@@ -232,11 +268,12 @@ class _Ensemble:
         on_progress: Callable[[Progress], None] | None,
         key: int = 0,
         method: str | None = None,
+        stop_when_decided: bool = False,
     ) -> None:
         from driblet.packs import Pack, PackRunner
 
         self.layout, self.writer, self.threads, self.on_progress = layout, writer, threads, on_progress
-        self.runner = PackRunner(system, settings, layout, sums, key, method)
+        self.runner = PackRunner(system, settings, layout, sums, key, method, stop_when_decided)
         self.stop = threading.Event()
         self.blocks: SimpleQueue[Block] = SimpleQueue()
         self.packs: list[Pack] = []

@@ -63,7 +63,9 @@ class Outcomes:
         )
 
     def values(self) -> dict[str, NDArray[Any]]:
-        """The arrays by their path in a run file."""
+        """The arrays by their path in a run file; none where there are no requirements."""
+        if not self.met.shape[1]:
+            return {}
         return {f"{_FOLDER}/{field.name}": getattr(self, field.name) for field in fields(self)}
 
     @classmethod

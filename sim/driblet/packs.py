@@ -24,12 +24,14 @@ from driblet.engines.contract import (
     new_state,
 )
 from driblet.engines.exact import ExactEngine
+from driblet.engines.judging import close_judgement, judge_all
 from driblet.engines.lanes import LANES
 from driblet.errors import InterruptedRunError, one_problem
 from driblet.events import EventRecord
 from driblet.loading import additions_of, prepare
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.readouts import evaluate
+from driblet.requirements import CompiledRequirements
 from driblet.segments import begin, keep, segments
 from driblet.store import Block, Layout
 from driblet.sums import SumsPlan
@@ -122,9 +124,12 @@ class PackRunner:
         sums: SumsPlan,
         key: int,
         method: str | None,
+        stop_when_decided: bool = False,
     ) -> None:
         self.system, self.settings, self.layout, self.sums, self.key = system, settings, layout, sums, key
         self.network = Network.of(system)
+        self.requirements = CompiledRequirements.of(system, self.network, settings.duration_s)
+        self.stop_when_decided = stop_when_decided
         self.engine = ExactEngine(self.network.arrays, len(self.network.species), method)
         # a summary keeps two samples, but its covariances are taken from more
         hidden = settings.record == "summary"
@@ -143,6 +148,9 @@ class PackRunner:
         columns = [self.network.species.index(a.species) for a in self.system.additions]
         totals = self.sums.empty(len(replicates))
         log = EventRecord(len(replicates)) if self.settings.record == "events" else None
+        judging = self.requirements.recorder(start.omega, self.stop_when_decided)
+        if judging is not None:
+            judge_all(judging, np.arange(len(replicates)), state.counts.T, 0.0, True)
         one_segment = len(self.segments) == 1 and log is None
         waiting = list(range(len(pack.units)))
 
@@ -156,13 +164,21 @@ class PackRunner:
                     part.update({name: array[rows] for name, array in log.results().items()})
                 recorded = samples._replace(counts=samples.counts[rows], firings=samples.firings[rows])
                 ended = state._replace(**{name: array[rows] for name, array in state._asdict().items()})
+                judged = rows_of(recorders, rows).requirements
+                if judged is not None:
+                    close_judgement(judged, ended.clock)
+                outcomes = self.requirements.outcomes(judged, recorded.counts, self.time_s, start.omega[rows])
+                part.update(outcomes.values())
                 numbers = (pack.units[k], pack.rows[rows])
                 hand_over(self._block(*numbers, start.omega[rows], start.volume_L[rows], ended, recorded, part))
 
         pack.next_sample = state.next_sample
         for segment in self.segments:
             part = begin(segment, state, samples, added, columns)
-            recorders = self.sums.recorders(state, segment.start_s, segment.end_s)
+            recorders = self.sums.recorders(state, segment.start_s, segment.end_s)._replace(requirements=judging)
+            if judging is not None and segment.added:
+                going_on = np.flatnonzero(state.reason == RUNNING)
+                judge_all(judging, going_on, state.counts.T, segment.start_s, False)
             if log is not None:
                 recorders = log.attach(recorders)
             while (state.reason == RUNNING).any():

@@ -70,20 +70,25 @@ class CompiledRequirements:
         """For each requirement where its truth is looked at; kernel : EVENT or LEAP, what the engine's kernel does."""
         return tuple(GRID if q in self.by_grid else kernel for q in range(len(self.system.requirements)))
 
-    def recorder(self, omega: Array, stop_when_decided: bool = False) -> Requirements:
-        """The kernel's arrays for replicates of the given copies per mol/L, nothing judged yet.
+    def recorder(self, omega: Array, stop_when_decided: bool = False) -> Requirements | None:
+        """The kernel's arrays for replicates of the given copies per mol/L, nothing judged yet; None where it judges none.
 
         A replicate stops early only where every requirement is judged in the kernel.
         """
+        if not self.in_kernel:
+            return None
         tables = _Tables(self.network, len(omega))
         for form, q in zip(self.forms, self.in_kernel, strict=True):
             tables.add(form, self.system.requirements[q], self.duration_s, omega)
-        return tables.arrays(stop_when_decided and bool(self.in_kernel) and not self.by_grid)
+        return tables.arrays(stop_when_decided and not self.by_grid)
 
-    def outcomes(self, recorded: Requirements, counts: NDArray[np.int64], time_s: Array, omega: Array) -> Outcomes:
+    def outcomes(
+        self, recorded: Requirements | None, counts: NDArray[np.int64], time_s: Array, omega: Array
+    ) -> Outcomes:
         """Every outcome, those of the kernel as recorded, the others from the sampled counts, (R, G, N)."""
         out = Outcomes.empty(len(omega), len(self.system.requirements))
         for k, q in enumerate(self.in_kernel):
+            assert recorded is not None
             record = recorded.record[:, k]
             out.met[:, q] = record[:, OUTCOME]
             out.first_failure_s[:, q], out.first_met_s[:, q] = record[:, FIRST_FAILURE], record[:, FIRST_MET]

@@ -146,7 +146,7 @@ def judged_together(
     samples = new_samples(times, R, len(network.species), len(network.channels))
     recorders = recorders_for(state, requirements=requirements)
     engine = ExactEngine(network.arrays, len(network.species), method, lanes=8)
-    judge_all(requirements, state.counts.T, 0.0, True)
+    judge_all(requirements, np.arange(R), state.counts.T, 0.0, True)
     while (state.reason == RUNNING).any():
         engine.advance(network.rates(np.full(R, paths[0].omega)), state, samples, budget, recorders)
     close_judgement(requirements, state.clock)
@@ -157,7 +157,7 @@ def of_states(system: System, states: list[list[int]], moments: list[float], end
     """What is said of one compartment that is in these states from these moments on."""
     compiled, requirements = recorded(system, system.compartment.omega, 1)
     for state, moment in zip(states, moments, strict=True):
-        judge_all(requirements, np.array([[float(n)] for n in state]), moment, moment == 0.0)
+        judge_all(requirements, np.arange(1), np.array([[float(n)] for n in state]), moment, moment == 0.0)
     close_judgement(requirements, np.array([end]))
     return compiled.outcomes(
         requirements, np.zeros((1, 1, len(states[0])), dtype=np.int64), np.array([0.0]), np.ones(1)

@@ -101,6 +101,8 @@ def _print_one(out: Console, one: Lifetime) -> None:
 
 def _times(interval: Interval) -> list[str]:
     def text(seconds: float) -> str:
+        if seconds == 0.0:
+            return "at once"
         return "–" if math.isnan(seconds) else "later" if math.isinf(seconds) else duration(seconds)
 
     return [text(interval.value), text(interval.low), text(interval.high)]

@@ -8,8 +8,11 @@ from rich.table import Table
 
 from driblet.commands.screen import table
 
+MOST_VALUES_READ = 20_000_000
+
 if TYPE_CHECKING:
     from driblet.outcomes import ShareRow
+    from driblet.results import Run
     from driblet.survival import Interval
 
 
@@ -21,7 +24,7 @@ def percent(share: float) -> str:
 
 def percents(interval: Interval) -> str:
     """A share and its interval."""
-    return f"{percent(interval.value)} ({percent(interval.low)} to {percent(interval.high)})"
+    return f"{percent(interval.value)} ({percent(interval.low)}–{percent(interval.high)})"
 
 
 def requirement_table(rows: list[ShareRow]) -> Table:
@@ -74,6 +77,23 @@ def requirement_notes(rows: list[ShareRow]) -> list[str]:
             notes.append(
                 f"{row.name}: {row.undecided} compartments stopped before it was decided; counted as not meeting it"
             )
+    return notes
+
+
+def readout_notes(run: Run) -> list[str]:
+    """Readouts that are undefined in some samples, a line each; not asked of very large runs."""
+    import numpy as np
+
+    notes: list[str] = []
+    if len(run.replicate) * len(run.time_s) > MOST_VALUES_READ:
+        return notes
+    for readout in run.system.readouts:
+        values = run.readout(readout.name)
+        undefined = int((~np.isfinite(values)).sum())
+        if undefined:
+            energy = readout.expression.root.dimension == (0, 1)
+            why = "a reactant is exhausted" if energy else "it divides by zero"
+            notes.append(f"{readout.name}: undefined in {percent(undefined / values.size)} % of samples, where {why}")
     return notes
 
 

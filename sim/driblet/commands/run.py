@@ -8,6 +8,7 @@ from typing import Any
 
 import click
 
+from driblet.commands.requirement_rows import readout_notes, requirement_notes, requirement_table
 from driblet.commands.screen import console, duration, number, species_rows, table, time_option
 
 
@@ -22,6 +23,7 @@ from driblet.commands.screen import console, duration, number, species_rows, tab
 @click.option("--seed", type=click.IntRange(0, 2**63 - 1), help="Seed of the random streams.")
 @click.option("--threads", type=click.IntRange(1, 4096), help="Threads; default: one per core.")
 @click.option("--engine", help='The algorithm; this version has "exact".')
+@click.option("--stop-when-decided", is_flag=True, help="End a compartment when every requirement is decided.")
 @click.option("--force", is_flag=True, help="Replace an existing run file or its parts.")
 @click.option("--resume", is_flag=True, help="Go on with an interrupted run; a complete one is left as it is.")
 def run(
@@ -33,6 +35,7 @@ def run(
     seed: int | None,
     threads: int | None,
     engine: str | None,
+    stop_when_decided: bool,
     force: bool,
     resume: bool,
 ) -> None:
@@ -57,6 +60,7 @@ def run(
             seed=seed,
             engine=engine,
             threads=threads,
+            stop_when_decided=stop_when_decided,
             resume=resume,
             force=force,
             on_progress=line.update,
@@ -126,6 +130,13 @@ def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-
         for label, copies in species_rows(system, final)
     ]
     out.print(table("copies at the end, over compartments", ["species", "mean", "sd", "least", "most"], rows))
-    for warning in getattr(system, "warnings", ()):
-        out.print(f"note: {warning}", markup=False)
+    if system.requirements:
+        from driblet.outcomes import shares
+
+        judged = shares(result)
+        out.print(requirement_table(judged))
+        for note in requirement_notes(judged):
+            out.print(f"note: {note}", markup=False)
+    for note in (*readout_notes(result), *getattr(system, "warnings", ())):
+        out.print(f"note: {note}", markup=False)
     out.print(f"written: {result.name}", markup=False)

@@ -283,12 +283,12 @@ def all_decided(moments, table, span, record, r, clock):  # type: ignore[no-unty
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def judge_all(rq, counts, clock, opening):  # type: ignore[no-untyped-def]
-    """Look at every requirement of every replicate anew at `clock`; counts : (species, R).
+def judge_all(rq, rows, counts, clock, opening):  # type: ignore[no-untyped-def]
+    """Look at every requirement of the replicates `rows` anew at `clock`; counts : (species, R).
 
     opening : at the start of a run, where there is nothing before; else after a leap or an addition.
     """
-    for r in range(counts.shape[1]):
+    for r in rows:
         sums = rq.leaf_sum.T
         if opening:
             rq.next_edge[r] = np.inf
