@@ -32,7 +32,7 @@ _POLL_SECONDS = 5.0
 _PATIENCE_SECONDS = 120.0  # with nothing in the queue, for file servers that show results late
 
 
-def simulate_on_cluster(folder: Path, dask: str | None, poll_s: float = _POLL_SECONDS) -> Simulate:
+def simulate_on_cluster(folder: Path, dask: str | None) -> Simulate:
     """Simulates batches as sweeps below `folder`: on the Dask cluster at an address, or else as Slurm job arrays."""
 
     def act(question: Question, batches: Sequence[Batch], done: Callable[[Batch, Outcome], None]) -> None:
@@ -44,7 +44,7 @@ def simulate_on_cluster(folder: Path, dask: str | None, poll_s: float = _POLL_SE
             if work_on_dask(plan.directory, dask, stop=Stop()).stopped:
                 raise InterruptedRunError("interrupted")
         else:
-            _submit_and_wait(plan, poll_s)
+            _submit_and_wait(plan)
         _take_in(plan, batches, done)
 
     return act
@@ -68,7 +68,7 @@ def _plan(folder: Path, question: Question, batches: Sequence[Batch]) -> Plan:
     return read_plan(place / "sweep")
 
 
-def _submit_and_wait(plan: Plan, poll_s: float) -> None:
+def _submit_and_wait(plan: Plan) -> None:
     """Raises CannotAnswerError when the jobs end and leave points undone."""
     from driblet_analysis.sweep.slurm import Options, queued_tasks, submit
 
@@ -83,7 +83,7 @@ def _submit_and_wait(plan: Plan, poll_s: float) -> None:
                 f"{plan.directory}: its Slurm tasks have ended and left points undone; see slurm/ in it, then --resume"
             )
             raise CannotAnswerError(text)
-        time.sleep(poll_s)
+        time.sleep(_POLL_SECONDS)
 
 
 def _take_in(plan: Plan, batches: Sequence[Batch], done: Callable[[Batch, Outcome], None]) -> None:
