@@ -4,8 +4,8 @@
     python -m tests.benchmarks.exact_engine ensembles --channels 14 60 --rounds 3
     python -m tests.benchmarks.exact_engine ensembles --file configs/uphill_transfer.toml
 
-Each pair is run in turn, so that a noisy machine is noisy for both; medians over the rounds are printed. What can be
-trusted are the ratios. NUMBA_CPU_NAME and NUMBA_CPU_FEATURES choose another instruction set for the kernels.
+Each pair is run in turn, so that a noisy machine is noisy for both, and CPU seconds are counted except where threads are
+compared; medians over the rounds are printed. What can be trusted are the ratios. NUMBA_CPU_NAME and NUMBA_CPU_FEATURES choose another instruction set for the kernels.
 """
 
 from __future__ import annotations
@@ -37,10 +37,10 @@ SMALL = [2, 6, 14, 30, 60, 120, 300]
 LARGE = [2000, 20_000]
 
 
-def seconds_of(call: Callable[[], int]) -> tuple[int, float]:
-    start = time.perf_counter()
+def seconds_of(call: Callable[[], int], clock: Callable[[], float] = time.process_time) -> tuple[int, float]:
+    start = clock()
     events = call()
-    return events, time.perf_counter() - start
+    return events, clock() - start
 
 
 def rate(measured: list[tuple[int, float]]) -> float:
@@ -58,14 +58,14 @@ def horizon(system: driblet.System, events: float) -> float:
         duration *= 4
 
 
-def ensemble(system: driblet.System, duration: float, threads: int = 1, record: str = "trajectories") -> int:
+def ensemble(system: driblet.System, duration: float, threads: int = 1, statistics: bool = True) -> int:
     run = driblet.run(
         system,
         replicates=REPLICATES,
         duration=duration,
         sample_every=duration / (POINTS - 1),
         threads=threads,
-        record=record,
+        statistics=statistics,
     )
     return int(run.events.sum())
 
@@ -134,7 +134,8 @@ def ensembles(texts: dict[str, str], rounds: int, events: float) -> None:
             if hard_coded_c.compiler():
                 program = hard_coded_c.build(network, rates, counts.astype(float), Path(folder), f"n{len(rates)}")
             calls: dict[str, Callable[[], int]] = {
-                "run": lambda s=system, d=duration: ensemble(s, d),  # type: ignore[misc]
+                "run": lambda s=system, d=duration: ensemble(s, d, statistics=False),  # type: ignore[misc]
+                "+stat": lambda s=system, d=duration: ensemble(s, d),  # type: ignore[misc]
                 "kernel": lambda a=network, b=rates, c=counts, d=duration: kernel(a, b, c, REPLICATES, d, POINTS),  # type: ignore[misc]
                 "single": lambda a=network, b=rates, c=counts, d=duration: kernel(a, b, c, 1, 20 * d, 2),  # type: ignore[misc]
             }
@@ -148,12 +149,8 @@ def ensembles(texts: dict[str, str], rounds: int, events: float) -> None:
                     measured[key].append(seconds_of(call))
             values = {key: rate(m) if m else float("nan") for key, m in measured.items()}
             ratios = [values[key] / values["C"] for key in calls]
-            print(
-                f"{name:>10} "
-                + " ".join(f"{v:8.1f}" for v in values.values())
-                + f" | {ratios[0]:6.2f} {ratios[1]:8.2f} {ratios[2]:8.2f}",
-                flush=True,
-            )
+            columns = [*(f"{v:7.1f}" for v in values.values()), "|", *(f"{v:7.2f}" for v in ratios)]
+            print(f"{name:>10}", *columns, flush=True)
 
 
 def large(rounds: int) -> None:
@@ -202,7 +199,7 @@ def threads(rounds: int) -> None:
     ensemble(system, duration)
     for _ in range(rounds):
         for count, measured in found.items():
-            measured.append(seconds_of(lambda c=count: ensemble(system, duration, c)))  # type: ignore[misc]
+            measured.append(seconds_of(lambda c=count: ensemble(system, duration, c), time.perf_counter))  # type: ignore[misc]
     one, two = rate(found[1]), rate(found[2])
     print(f"\nthreads, 14 channels: {one:.0f} and {two:.0f} M events/s on one and two, ratio {two / one:.2f}")
 
@@ -250,7 +247,7 @@ def start_up() -> None:
                 f"start of a run, {label}: {float(done.stdout):.2f} s, {spent:.2f} s of CPU with the interpreter's start"
             )
         took = [
-            seconds_of(lambda: subprocess.run(["driblet", "--help"], capture_output=True).returncode)[1]
+            seconds_of(lambda: subprocess.run([sys.executable, "-m", "driblet", "--help"], check=True).returncode)[1]
             for _ in range(5)
         ]
         print(f"driblet --help: {statistics.median(took):.2f} s")
