@@ -22,6 +22,10 @@ from driblet.system.model import Reaction, Species
 from driblet.system.tables import read_table
 
 LARGEST_COUNT = 2.0**53
+SMALLEST_CONSTANT, LARGEST_CONSTANT = (
+    1e-30,
+    1e30,
+)  # of any constant, in mol/L and s: products of several stay in a double
 
 
 class Expansion(NamedTuple):
@@ -96,6 +100,11 @@ class EnzymeReader:
                 spec = self._activity(reaction, activity, table, assembler, certain)
                 if spec is not None:
                     assembler.add(spec)
+                    if not all(0 < k < math.inf for step in assembler.steps for k in (step.forward, step.backward)):
+                        raise ArithmeticError
+            except ArithmeticError:
+                key = "kcat" if activity.steps is None else "steps"
+                self._problem(where, key, "its steps leave the range of a double; check the units")
             except _Fault as fault:
                 self._problem(where, fault.key, fault.text)
             except MechanismError as error:
@@ -334,4 +343,6 @@ def _positive(key: str, quantity: Quantity, convert, *kind) -> float:  # type: i
         raise _Fault(key, str(error)) from error
     if value <= 0:
         raise _Fault(key, f'"{quantity}" will not do: it must be above zero')
+    if not SMALLEST_CONSTANT <= value <= LARGEST_CONSTANT:
+        raise _Fault(key, f'"{quantity}" is far outside what any enzyme shows; check the unit')
     return value

@@ -29,7 +29,7 @@ class Compartment:
     cv: float = 0.0
     diameter_m: float | None = None
     wall_m: float = 0.0
-    sizes_L: tuple[float, ...] = field(default=(), repr=False)
+    sizes_L: tuple[float, ...] = field(default=(), repr=False, compare=False)  # long, and told apart by the text
 
     @property
     def by_diameter(self) -> bool:
