@@ -28,6 +28,7 @@ def system(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
         ("species.X", "1 copies", "9 copies", "inside", "--vary species.X: is no key path of the system file"),
         ("species.E.loading", "1 copies", "9 copies", "inside", "'poisson' is no quantity"),
         ("reactions.turn.equation", "1 /s", "9 /s", "inside", "is no quantity"),
+        ("conditions.temperature", "20 degC", "37 degC", "inside", "rate constants do not follow it: turn, loss"),
         ("run.seed", "1", "9", "inside", "shapes the question"),
         ("requirements.inside.share", "0.1", "0.9", "inside", "shapes the question"),
         ("species.E", "1 copies", "9 copies", "insid", "--requirement insid: is no requirement of this file"),
