@@ -248,6 +248,12 @@ def test_a_product_binding_constant_off_by_half_a_kilojoule_is_refused() -> None
             "steps.releases_ADP.forward",
             "wrong unit: /s is needed",
         ),
+        (
+            '"-16.7 kJ/mol"',
+            '"31.5 kJ/mol"',
+            "steps.releases_ADP",
+            "would follow from the energy as 4.95e+13 /M/s; at most 1e9",
+        ),
         ('forward = "300 /s", ', "", "steps", "relay, releases_ADP: the energy fixes one constant a cycle"),
         ("[enzymes.kinase.steps]", 'KM = { ATP = "1 mM" }\n[enzymes.kinase.steps]', "KM", "follows from steps"),
     ],

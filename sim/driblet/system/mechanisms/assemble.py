@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 from driblet.energetics.cycles import cycles, reconciled
 from driblet.system.mechanisms.constants import (
     FASTEST,
+    FASTEST_ON,
     ChainConstants,
     MechanismError,
     Pair,
@@ -335,10 +336,14 @@ class Assembler:
                 continue
             forward, backward = spec.steps[key]
             origin = "given" if forward is not None and backward is not None else "given; rest from energy"
+            derived = "forward" if forward is None else "backward" if backward is None else ""
             if forward is None:
                 assert backward is not None
                 forward = backward * math.exp(-energy / self.RT)
-            out[link] = _Constants(forward, forward * math.exp(energy / self.RT), origin)
+            found = _Constants(forward, forward * math.exp(energy / self.RT), origin)
+            if derived:
+                _refuse_too_fast(link, key, derived, found)
+            out[link] = found
         return out
 
     def _closed(
@@ -370,6 +375,19 @@ class Assembler:
             raise MechanismError(_discrepancy(spec, keys, basis[worst], excess[worst], overall), "steps")
         moved = reconciled(matrix, all_energies, np.append(np.where(sd > 0, 1.0, 0.0), 0.0))
         return moved[:-1]
+
+
+def _refuse_too_fast(link: Link, key: str, derived: str, found: _Constants) -> None:
+    """Raises MechanismError for a constant that follows from the energy and that no molecule can have."""
+    value = found.forward if derived == "forward" else found.backward
+    second_order = (link.binds if derived == "forward" else link.releases) is not None
+    limit, unit = (FASTEST_ON, "1e9 /M/s") if second_order else (FASTEST, "1e6 /s")
+    if value > limit:
+        raise MechanismError(
+            f"its {derived} constant would follow from the energy as {value:.3g}{unit[3:]}; at most {unit} is possible, "
+            "so another constant must give way",
+            f"steps.{key}",
+        )
 
 
 def _stoichiometry(spec: ActivitySpec, links: Sequence[Link]) -> NDArray[np.int64]:
