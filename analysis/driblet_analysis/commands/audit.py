@@ -80,7 +80,7 @@ def _conditions(facts: dict[str, Any]) -> str:
     volume = facts["compartment"]["volume_L"]
     scale, unit = next((s, u) for s, u in ((1e-9, "nL"), (1e-12, "pL"), (1e-15, "fL"), (0.0, "aL")) if volume >= s)
     scale = scale or 1e-18
-    spread = f" (median; cv {facts['compartment']['cv']:g})" if facts["compartment"]["cv"] else ""
+    spread = f" (median; cv {facts['compartment']['cv']:.3g})" if facts["compartment"]["cv"] else ""
     return (
         f"{', '.join(parts)}; {facts['compartment']['name']} of {number(volume / scale)} {unit}{spread}: "
         f"1 mM = {number(facts['compartment']['copies_per_mM'])} copies"
