@@ -29,7 +29,7 @@ def cluster() -> Iterator[Any]:
 
 def table_of(directory: Path) -> bytes:
     path = directory.parent / f"{directory.name}.csv"
-    collect(directory, path)
+    collect(directory, path, force=True)
     return path.read_bytes()
 
 
