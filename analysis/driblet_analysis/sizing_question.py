@@ -109,7 +109,9 @@ def _check_path(raw: Mapping[str, Any], path: str, problems: list[Problem]) -> N
         problems.append(Problem(where, "shapes the question and not the compartment; name what you could make larger"))
         return
     if path == "conditions.temperature":
-        fixed = [n for n, r in raw.get("reactions", {}).items() if isinstance(r, Mapping) and "activation_energy" not in r]
+        fixed = [
+            n for n, r in raw.get("reactions", {}).items() if isinstance(r, Mapping) and "activation_energy" not in r
+        ]
         if fixed:
             text = f"rate constants do not follow it: {', '.join(fixed[:4])} would keep those of one temperature"
             problems.append(Problem(where, text))
