@@ -253,12 +253,13 @@ class _Parser:
         return Comparison(operator, left, right)
 
     def mismatch(self, left: Node, right: Node) -> str:
-        dimensions = {left.dimension, right.dimension}
-        if PLAIN in dimensions and len(dimensions) == 2:
-            other = (dimensions - {PLAIN}).pop()
-            example = {(1, 0): '"1 mM"', (0, 1): '"-45 kJ/mol"', (-1, 0): '"1e4 /M"'}.get(other)
-            if example and (isinstance(left, Number) or isinstance(right, Number)):
+        value, constant = (right, left) if not references(left) else (left, right)
+        if not references(constant):
+            example = {(1, 0): '"1 mM"', (0, 1): '"-45 kJ/mol"', (-1, 0): '"1e4 /M"'}.get(value.dimension)
+            if constant.dimension == PLAIN and example:
                 return f'"{self.text}" compares with a bare number; a unit is needed there, such as {example}'
+            if (value.dimension, constant.dimension) == (PLAIN, (1, 0)):
+                return f'"{self.text}" compares a number of copies with a concentration; conc(...) is one'
         return (
             f'"{self.text}" compares values of different units: counts, concentrations (conc) and energies (gibbs) '
             "compare only with their like"
