@@ -5,7 +5,8 @@
     python -m tests.benchmarks.exact_engine ensembles --file configs/uphill_transfer.toml
 
 Each pair is run in turn, so that a noisy machine is noisy for both, and CPU seconds are counted except where threads are
-compared; medians over the rounds are printed. What can be trusted are the ratios. NUMBA_CPU_NAME and NUMBA_CPU_FEATURES choose another instruction set for the kernels.
+compared; medians over the rounds are printed. What can be trusted are the ratios. NUMBA_CPU_NAME and NUMBA_CPU_FEATURES
+choose another instruction set for the kernels.
 """
 
 from __future__ import annotations
@@ -119,12 +120,11 @@ def ensembles(texts: dict[str, str], rounds: int, events: float) -> None:
     """Ensembles and single trajectories against hard-coded C."""
     print(f"\nM events/s on one core, medians of {rounds}; C: gcc -O3 -march=native -ffast-math, no recording")
     print(
-        f"run: driblet.run, {REPLICATES} replicates, {POINTS} points, statistics on; kernel: without loading and file;"
+        f"run: driblet.run(statistics=False), {REPLICATES} replicates, {POINTS} points; +stat: with statistics, the default;"
     )
-    print("single: one trajectory\n")
-    print(
-        f"{'network':>10} {'C':>8} {'run':>8} {'kernel':>8} {'single':>8} | {'run/C':>6} {'kernel/C':>8} {'single/C':>8}"
-    )
+    print("kernel: without loading and file; single: one trajectory; then each over C\n")
+    names = ["C", "run", "+stat", "kernel", "single"]
+    print(f"{'network':>10}", *(f"{n:>7}" for n in names), "|", *(f"{n:>7}" for n in names[1:]))
     with tempfile.TemporaryDirectory() as folder:
         for name, text in texts.items():
             system = driblet.loads(text)
@@ -246,8 +246,11 @@ def start_up() -> None:
             print(
                 f"start of a run, {label}: {float(done.stdout):.2f} s, {spent:.2f} s of CPU with the interpreter's start"
             )
+        command = [sys.executable, "-m", "driblet", "--help"]
         took = [
-            seconds_of(lambda: subprocess.run([sys.executable, "-m", "driblet", "--help"], check=True).returncode)[1]
+            seconds_of(lambda: subprocess.run(command, check=True, capture_output=True).returncode, time.perf_counter)[
+                1
+            ]
             for _ in range(5)
         ]
         print(f"driblet --help: {statistics.median(took):.2f} s")
