@@ -43,7 +43,9 @@ KEYS = [
     "one_way", "equation", "value", "sd", "median", "cv", "wall", "volume", "diameter", "temperature", "pH", "pMg",
     "ionic_strength", "formation", "hydrolysis", "engine", "replicates", "duration", "sample_every", "seed", "title", "run",
     "reactions", "readouts", "energies", "species", "compartments", "conditions", "", " ", "a b", "a.b", "é", "x\ny", "1A",
-    "reactants", "requirements", "enzymes", "total_magnesium", "pH_scale", "buffer", "must", "when", "during", "share",
+    "reactants", "requirements", "enzymes", "catalyses", "mechanism", "binds", "releases", "kcat", "KM", "Ki", "inhibitors",
+    "also", "steps", "activity", "molar_mass", "half_life", "active_fraction", "additions", "at", "species", "values",
+    "total_magnesium", "pH_scale", "buffer", "must", "when", "during", "share",
 ]  # fmt: skip
 
 
