@@ -309,7 +309,8 @@ def test_a_cycle_through_held_species_must_close_too() -> None:
 
 @pytest.mark.parametrize("path", sorted(Path(__file__).parents[2].glob("configs/*.toml")), ids=lambda p: p.stem)
 def test_ready_systems_load_and_run(path: Path) -> None:
-    system = driblet.load(path)
+    # a fiftieth of the time is too short for what the file requires, and enough to see that it runs
+    system = dataclasses.replace(driblet.load(path), requirements=())
     settings = system.settings
     run = driblet.run(system, replicates=2, duration=settings.duration_s / 50, sample_every=settings.duration_s / 100)
     assert run.complete
