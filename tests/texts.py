@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from pathlib import Path
+
 SMALL = """\
 title = "small"
 
@@ -92,6 +94,13 @@ sample_every = "0.5 s"
 loading = "poisson"
 seed = 11
 """
+
+
+def ready_systems() -> list[Path]:
+    """The system files in configs/, where sweep files lie too."""
+    return [
+        p for p in sorted(Path(__file__).parents[1].glob("configs/*.toml")) if "[reactions." in p.read_text("utf-8")
+    ]
 
 
 def changed(text: str, *pairs: tuple[str, str]) -> str:

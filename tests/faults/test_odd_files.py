@@ -9,7 +9,6 @@ import datetime
 import math
 import random
 import tomllib
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -19,10 +18,9 @@ import driblet
 from driblet.loading import prepare
 from driblet.readouts import evaluate
 from driblet.system.build import build
-from tests.texts import MIXED, SMALL
+from tests.texts import MIXED, SMALL, ready_systems
 
-CONFIGS = sorted(Path(__file__).parents[2].glob("configs/*.toml"))
-GOOD = {"small": SMALL, "mixed": MIXED, **{p.stem: p.read_text(encoding="utf-8") for p in CONFIGS}}
+GOOD = {"small": SMALL, "mixed": MIXED, **{p.stem: p.read_text(encoding="utf-8") for p in ready_systems()}}
 
 DATE = datetime.date(2026, 12, 1)
 ODD: list[Any] = [

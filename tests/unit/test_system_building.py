@@ -10,7 +10,7 @@ import pytest
 
 import driblet
 from driblet.quantities import AVOGADRO, GAS_CONSTANT
-from tests.texts import MIXED, SMALL, changed
+from tests.texts import MIXED, SMALL, changed, ready_systems
 
 RT = GAS_CONSTANT * 298.15
 BINDING = changed(
@@ -307,7 +307,7 @@ def test_a_cycle_through_held_species_must_close_too() -> None:
         driblet.loads(changed(text, ("{K}", "7")))
 
 
-@pytest.mark.parametrize("path", sorted(Path(__file__).parents[2].glob("configs/*.toml")), ids=lambda p: p.stem)
+@pytest.mark.parametrize("path", ready_systems(), ids=lambda p: p.stem)
 def test_ready_systems_load_and_run(path: Path) -> None:
     # a fiftieth of the time is too short for what the file requires, and enough to see that it runs
     system = dataclasses.replace(driblet.load(path), requirements=())
