@@ -43,6 +43,7 @@ from driblet.engines.random_stream import minus_log, output, selection_uniform, 
 from driblet.engines.recording import (
     close_windows,
     cut_windows,
+    hold_samples,
     look_at_conditions,
     next_mark,
     sample_until,
@@ -550,11 +551,12 @@ def advance_lanes(  # type: ignore[no-untyped-def]
         met = conditions_met(conditions, lanes, width) if watching else 0
         if passed + met > 0:
             lane = np.int64(0)  # not a literal, for which callees would be compiled once more
-            while lane < active:
-                later = clock[lane]
-                if met == 0 and later <= mark[lane]:
+            while True:
+                while met == 0 and lane < active and clock[lane] <= mark[lane]:
                     lane += 1
-                    continue
+                if lane >= active:
+                    break
+                later = clock[lane]
                 r = lane_row[lane]
                 reason = np.int64(RUNNING)
                 if watching:
@@ -599,10 +601,9 @@ def advance_lanes(  # type: ignore[no-untyped-def]
                 if reason == STOP_CONDITION:
                     if averaging:
                         cut_windows(averages, r, since[lane], later, counts, firings, running, pace, lane)
-                    sample = sample_until(
-                        time, sampled_counts, sampled_firings, r, sample, np.inf, counts, firings, lane
+                    lane_sample[lane] = hold_samples(
+                        time, sampled_counts, sampled_firings, r, sample, counts, firings, lane
                     )
-                    lane_sample[lane] = sample
                 fired -= 1
                 if judging is not None:
                     leave_judgement(leaf_value, leaf_sum, integrated_to, moment_leaves, lanes, lane, r)

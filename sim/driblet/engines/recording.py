@@ -153,7 +153,7 @@ def next_mark(time, edge, next_edge, r, sample):  # type: ignore[no-untyped-def]
     return min(grid_point, window_edge)
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
 def sample_until(time, sampled_counts, sampled_firings, r, sample, later, counts, firings, column):  # type: ignore[no-untyped-def]
     """Record the state on each grid point before `later`; returns the index of the next grid point."""
     while sample < time.size and not later <= time[sample]:
@@ -163,6 +163,12 @@ def sample_until(time, sampled_counts, sampled_firings, r, sample, later, counts
             sampled_firings[r, sample, j] = firings[np.uint64(j), column]
         sample += 1
     return sample
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
+def hold_samples(time, sampled_counts, sampled_firings, r, sample, counts, firings, column):  # type: ignore[no-untyped-def]
+    """Record the state on the rest of the grid; returns its length."""
+    return sample_until(time, sampled_counts, sampled_firings, r, sample, np.inf, counts, firings, column)
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")

@@ -33,6 +33,7 @@ from driblet.engines.random_stream import minus_log, next_word, selection_unifor
 from driblet.engines.recording import (
     close_windows,
     cut_windows,
+    hold_samples,
     look_at_conditions,
     next_mark,
     occupy,
@@ -233,9 +234,7 @@ def advance_scalar(  # type: ignore[no-untyped-def]
                     state.reason[r] = STOP_CONDITION
                     if averaging:
                         cut_windows(averages, r, since, clock, columns, firing_columns, running, pace_columns, r)
-                    sample = sample_until(
-                        time, samples.counts, samples.firings, r, sample, np.inf, columns, firing_columns, r
-                    )
+                    sample = hold_samples(time, samples.counts, samples.firings, r, sample, columns, firing_columns, r)
                 break
             if averaging:
                 integrate_row(factor, offset, dummy, counts, running_row, later - since)
