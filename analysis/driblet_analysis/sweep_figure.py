@@ -311,10 +311,10 @@ def _maps(table: Table, shown: _Shown, first: _Axis, second: _Axis, third: _Axis
     pages[0].set_ylabel(second.label)
     assert mesh is not None
     figure.colorbar(mesh, ax=list(pages), label=shown.label, pad=0.02, aspect=30).outline.set_visible(False)
-    aim = f"; heavy line: the share asked for, {shown.asked:.3g}" if shown.share and shown.asked is not None else ""
-    _heading(
-        figure, table, f"one cell a point{aim}" + ("; thin lines: shares of .05, .5 and .95" if shown.share else "")
-    )
+    note = "one cell a point"
+    if shown.share and shown.asked is not None:
+        note += f"; heavy line: the share asked for, {shown.asked:.3g}"
+    _heading(figure, table, note)
     return figure
 
 

@@ -17,6 +17,7 @@ from driblet_analysis.sweep.files import sync_folder
 from driblet_analysis.sweep.shards import union
 from driblet_analysis.sweep.summary import SummaryColumn
 from driblet_analysis.sweep.table import Cell, CsvTable, Hdf5Table, TableColumn
+from driblet_analysis.sweep.work import record_of
 
 _WRITERS: dict[str, type[CsvTable] | type[Hdf5Table]] = {".csv": CsvTable, ".h5": Hdf5Table}
 
@@ -95,7 +96,8 @@ def collect_run(directory: str | Path, point: int, output: str | Path, *, force:
         return True
     plan.check_version()
     one = plan.read(range(point, point + 1))[0]
-    run(plan.system(one), path, key=one.key, force=force).close()
+    system = plan.system(one)
+    run(system, path, key=one.key, record=record_of(system), force=force).close()
     return False
 
 
@@ -174,7 +176,8 @@ def _provenance(plan: Plan, survey: _Survey) -> dict[str, str]:
         "derived": ", ".join(plan.paths[plan.axes :]),
         "streams": "shared by all points" if plan.shared_streams else "keyed by the values of each point",
         "seed": str(run_table.get("seed", 0)),
-        "averages": "over the second half of the run; the compartment is the sampling unit",
+        "averages": "over the run after its burn-in, its second half where none is stated; the compartment is the sampling "
+        "unit",
         "system_file": plan.system_text,
         "sweep_file": plan.sweep_text,
     }

@@ -16,6 +16,7 @@ from typing import NamedTuple
 
 from driblet.ensemble import Progress, run
 from driblet.errors import DribletError, InterruptedRunError
+from driblet.system import System
 from driblet_analysis.sweep.claims import Claim, Standing, standing_of, standings, take
 from driblet_analysis.sweep.directory import Plan, Point
 from driblet_analysis.sweep.shards import Result, ShardFile, is_complete, shard_files, union, write_results
@@ -86,11 +87,12 @@ def simulate(plan: Plan, point: Point) -> Result:
         if plan.keep == "trajectories":
             with tempfile.TemporaryDirectory(prefix="driblet-") as folder:
                 path = Path(folder) / "run.h5"
-                with run(system, path, threads=1, key=point.key) as ensemble:
+                with run(system, path, threads=1, key=point.key, record=record_of(system)) as ensemble:
                     values = summarise(ensemble, system)
                 image = path.read_bytes()
         else:
-            with run(system, threads=1, key=point.key) as ensemble:
+            # in memory, so that even readouts can be averaged over time at no cost in disk
+            with run(system, threads=1, key=point.key, record="trajectories") as ensemble:
                 values = summarise(ensemble, system)
     except (KeyboardInterrupt, InterruptedRunError):
         raise
@@ -100,6 +102,11 @@ def simulate(plan: Plan, point: Point) -> Result:
             text = f"{type(error).__name__}: {text}"
         return Result(point.number, point.key, {}, text[:_LONGEST_ERROR], time.monotonic() - started)
     return Result(point.number, point.key, values, "", time.monotonic() - started, image)
+
+
+def record_of(system: System) -> str:
+    """What a kept run file records: trajectories, and events where the system asks for them."""
+    return "events" if system.settings.record == "events" else "trajectories"
 
 
 class Worker:
