@@ -38,8 +38,8 @@ REASONS = {
     BUFFER_FULL: "event buffer full",
 }
 LARGEST_COUNT = 2.0**53
-MOST_EVENTS_A_CALL = 1 << 22  # an event changes a count by at most 3, which bounds how far a call can overshoot
-OVERFLOW_GUARD = LARGEST_COUNT - 4.0 * MOST_EVENTS_A_CALL
+MOST_EVENTS_A_CALL = 1 << 22  # an event changes a count by at most 100: it bounds how far a call overshoots
+OVERFLOW_GUARD = LARGEST_COUNT - 128.0 * MOST_EVENTS_A_CALL
 
 
 class NetworkArrays(NamedTuple):

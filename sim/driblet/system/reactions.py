@@ -100,7 +100,8 @@ class ReactionReader:
                 self.problems.append(
                     Problem(f"{path}.equation", f'"{name}" is not in [species]{nearest(name, self.species)}')
                 )
-        for terms in (equation.reactants, equation.products):
+        # products of a one-way reaction never meet
+        for terms in (equation.reactants, equation.products) if equation.reversible else (equation.reactants,):
             counted = sum(n for name, n in terms if name not in self.held)
             if counted > MOST_MOLECULES:
                 self.problems.append(
