@@ -72,7 +72,7 @@ def advance(
     rates = network.rates(start.omega)
     while (state.reason == RUNNING).any():
         engine.advance(rates, state, samples, budget, recorders)
-    return [*state, *samples, *(array for recorder in recorders for array in recorder)]
+    return [*state, *samples, *(array for recorder in recorders if recorder is not None for array in recorder)]
 
 
 @pytest.mark.parametrize("cv", [0, 0.2])

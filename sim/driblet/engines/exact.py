@@ -9,6 +9,7 @@ scalar  one replicate after the other (scalar.py): an event costs nearly the sam
 from __future__ import annotations
 
 import math
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,7 +19,9 @@ from driblet.engines.factors import factor_rows, most_nodes
 from driblet.engines.lanes import LANES, advance_lanes, lane_table, new_lanes
 from driblet.engines.recording import recorders_for
 from driblet.engines.scalar import advance_scalar
-from driblet.engines.sums import refresh_plan, select, sum_rows
+from driblet.engines.sums import Refresh, SumRows, refresh_plan, select, sum_rows
+
+Table = TypeVar("Table", NetworkArrays, SumRows, Refresh)
 
 __all__ = ["METHODS", "ExactEngine", "advance", "choose_method", "fewest_lanes", "select"]
 
@@ -39,6 +42,13 @@ def choose_method(channels: int, replicates: int, logging: bool = False) -> str:
     return "scalar" if logging or fewest_lanes(channels) > min(replicates, LANES) else "lanes"
 
 
+def _compact(table: Table) -> Table:
+    """The same table in 32 bits, whole numbers all: a large network then misses the caches half as often."""
+    narrow = {np.dtype(np.int64): np.int32, np.dtype(np.float64): np.float32}
+    arrays = {k: a for k, a in table._asdict().items() if getattr(a, "dtype", None) in narrow}
+    return table._replace(**{k: a.astype(narrow[a.dtype]) for k, a in arrays.items()})
+
+
 class ExactEngine:
     """A network of `species` free species laid out for one method; `method` None lets `choose_method` decide each call."""
 
@@ -49,6 +59,7 @@ class ExactEngine:
         self.rows = sum_rows(len(network.reactant))
         self.refresh = refresh_plan(network, self.rows)
         self.table = lane_table(network, species, lanes)
+        self.compact = (_compact(network), _compact(self.rows), _compact(self.refresh))
         self.nodes = most_nodes(network)
         # None has kernels compiled without a trace of factors
         self.factor_row = factor_rows(network) if self.nodes else None
@@ -95,9 +106,7 @@ class ExactEngine:
                 )
             return int(
                 advance_scalar(
-                    self.network,
-                    self.rows,
-                    self.refresh,
+                    *self.compact,
                     self.factor_row,
                     self.nodes,
                     rates,
