@@ -19,7 +19,7 @@ from driblet.system import Reaction, System
 from driblet.system.build import stoichiometric_matrix
 from driblet_analysis.course import expected_course
 from driblet_analysis.energy_conditions import buffer_facts, condition_warnings, magnesium_facts, sensitivity_facts
-from driblet_analysis.enzyme_facts import catalysed_rates, disagreements, enzyme_facts
+from driblet_analysis.enzyme_facts import catalysed_rates, disagreements, enzyme_facts, lumping_rows
 from driblet_analysis.references.count_equilibrium import count_law
 
 EVENTS_PER_SECOND_AND_CORE = 3e7  # of the exact engine on a current core; for the estimate alone
@@ -78,6 +78,7 @@ def audit_facts(system: System) -> dict[str, Any]:
         ],
         "reactions": [_reaction_facts(system, network, r, copies, rates, catalysed) for r in system.stated],
         "enzymes": enzymes,
+        "lumping": lumping_rows(system),
         "additions": [
             {"name": a.name, "at_s": a.at_s, "species": a.species, "mean_copies": a.mean_copies(omega)}
             for a in system.additions
@@ -218,9 +219,9 @@ def _turned_over(system: System, vector: NDArray[np.int64]) -> dict[str, int]:
     """A cycle in reactions of the file: what an enzyme's steps turn over, and the others as they are."""
     weights = {r.name: int(w) for r, w in zip(system.reactions, vector, strict=True) if w}
     out = {r.name: weights.get(r.name, 0) for r in system.stated}
-    for enzyme in system.enzymes:
-        for activity in enzyme.activities:
-            out[activity.reaction] += activity.direction * weights.get(enzyme.steps[activity.counted].name, 0)
+    for reaction in system.reactions:
+        for name, times in reaction.turns:
+            out[name] += times * weights.get(reaction.name, 0)
     return {name: weight for name, weight in out.items() if weight}
 
 

@@ -9,10 +9,14 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from driblet.ensemble import sample_times
+from driblet.errors import InputError
 from driblet.loading import volumes
+from driblet.lumping import ELEMENTARY
 from driblet.quantities import copies_per_molar
 from driblet.system import Species, System
 from driblet.system.mechanisms import Activity, Enzyme, measured_constants, turnover_rates
+from driblet.treatments import RAPID_EQUILIBRIUM_TOLERANCE, lumping_facts
 
 _QUANTILES = 20_001  # of the size distribution, to average over it
 Array = NDArray[np.float64]
@@ -53,6 +57,38 @@ def catalysed_rates(system: System) -> dict[str, dict[str, float]]:
         for reaction, rate in turnover_rates(enzyme, here).items():
             found.setdefault(reaction, {})[enzyme.name] = copies * rate
     return found
+
+
+def lumping_rows(system: System) -> list[dict[str, Any]]:
+    """For each enzyme with steps whether it may be lumped, with the numbers behind it."""
+    if not any(e.steps for e in system.enzymes):
+        return []
+    try:
+        first = float(sample_times(system.settings)[1])
+    except InputError:
+        first = None
+    asked = dict(system.treatments)
+    return [
+        {
+            "name": name,
+            "treatment": asked.get(name, ELEMENTARY),
+            "allowed": not facts.failures,
+            "against": list(facts.failures),
+            "settling_s": facts.settling_s,
+            "ligand": facts.ligand,
+            "ligand_s": facts.ligand_s,
+            "rarest_ligand": facts.rarest,
+            "share": facts.share,
+            "first_output_s": facts.first_output_s,
+            "rapid_equilibrium_error": dict(facts.rapid_equilibrium),
+            "rapid_equilibrium_allowed": all(
+                error is None or abs(error) < RAPID_EQUILIBRIUM_TOLERANCE for _, error in facts.rapid_equilibrium
+            ),
+            "fano": dict(facts.fano),
+            "firing_fano": dict(facts.firing_fano),
+        }
+        for name, facts in lumping_facts(system, first).items()
+    ]
 
 
 def _free(system: System, enzyme: Enzyme) -> Species:

@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from driblet.drive import emergent_affinities, is_driven
 from driblet.errors import CannotAnswerError, one_problem
+from driblet.lumping import LUMPED, treated
 from driblet.network import Network
 from driblet.results import Run
 from driblet.statistics import holm, jackknife
@@ -92,6 +93,9 @@ def check_run(run: Run, against: System | None = None) -> CheckResult:
 def comparable(run: Run, against: System) -> System:
     """`against` if it differs from the run's system in energies and rate constants alone. Raises InputError."""
     own = run.system
+    lumped = {name: how for name, how in own.treatments if how == LUMPED}
+    if lumped and {e.name for e in against.enzymes} >= lumped.keys():
+        against = treated(against, lumped)
     if [s.name for s in own.species] != [s.name for s in against.species] or [s.held for s in own.species] != [
         s.held for s in against.species
     ]:

@@ -14,6 +14,7 @@ from dataclasses import dataclass
 from fractions import Fraction
 
 from driblet.engines.judging import LOG_DOWN, LOG_MIXED, LOG_UP, RATIO, SIGN
+from driblet.free_counts import estimated_names
 from driblet.readouts import copies_in
 from driblet.system.expressions import Comparison, Junction, Named, Negation, Node, Number, Reference, Truth
 from driblet.system.model import Reaction, System
@@ -256,6 +257,7 @@ class _Algebra:
     def __init__(self, system: System) -> None:
         self.system = system
         self.held = system.held_concentrations()
+        self.estimated = estimated_names(system)
 
     def value(self, node: Node) -> Ratio | Logs:
         if isinstance(node, Named):
@@ -274,6 +276,8 @@ class _Algebra:
     def reference(self, node: Reference) -> Ratio | Logs:
         if node.kind == "gibbs":
             return self.energy(self.system.reaction(node.name))
+        if node.kind != "total" and node.name in self.estimated:
+            raise NotInFormError(f"the free count of {node.name} is estimated, its enzyme being lumped")
         power = -1 if node.kind == "conc" else 0
         total = Polynomial({})
         for name, number in copies_in(self.system, node):

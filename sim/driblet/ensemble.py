@@ -32,6 +32,7 @@ from driblet.store import FORMAT, Block, Layout, RunWriter, discard_parts
 from driblet.sums import SumsPlan
 from driblet.system import RunSettings, System
 from driblet.system.tables import ENGINES, LARGEST_SEED, LONGEST_TIME, MOST_REPLICATES, SHORTEST_TIME
+from driblet.treatments import Choice, treatment_facts, with_treatments
 from driblet.version import __version__
 
 _UNIT_BYTES = 8 << 20
@@ -104,6 +105,7 @@ def run(
     threads: int | None = None,
     key: int = 0,
     method: str | None = None,
+    treatment: str | Mapping[str, str] | None = None,
     statistics: bool = True,
     stop_when_decided: bool = False,
     resume: bool = False,
@@ -114,7 +116,8 @@ def run(
 
     duration, sample_every : s. What is not given is taken from the system's [run]. key : sets the random streams of the
     points of a sweep apart, 0 to 2^63 - 1. method : "lanes" or "scalar", which kernel of the exact engine runs; left out,
-    the faster one; the bits are the same. statistics : whether the time integrals that `check` needs are gathered, which
+    the faster one; the bits are the same. treatment : "elementary", "lumped" or "auto", of all enzymes or of some by name,
+    before what the file says. statistics : whether the time integrals that `check` needs are gathered, which
     adds a third to the time and more. stop_when_decided : a replicate may end when the outcome of every requirement is
     known; its samples then hold the state of that moment to the end. With `resume`, finished replicates of an interrupted
     run are kept; a complete run is returned as it is. Raises InputError for bad settings or an output that is taken,
@@ -139,6 +142,7 @@ def run(
         raise one_problem("run", "method", f'"{method}" is not a method: "lanes" or "scalar" is')
     if method == "lanes" and settings.record == "events":
         raise one_problem("run", "method", 'events are recorded by "scalar" only')
+    system, choices = with_treatments(system, treatment, float(sample_times(settings)[1]))
     network = Network.of(system)
     if not statistics and settings.record == "summary":
         raise one_problem("run", "statistics", 'record = "summary" keeps nothing else: leave one of the two')
@@ -148,7 +152,7 @@ def run(
     sums = SumsPlan.of(system, network, duration_s, settings.burn_in_s, kept=statistics, histograms=histograms)
     times = sample_times(settings) if settings.record != "summary" else np.array([0.0, settings.duration_s])
     chosen = choose_method(len(network.channels), settings.replicates, settings.record == "events")
-    layout = _layout(system, settings, times, key, sums, method or chosen, looked_at, stop_when_decided)
+    layout = _layout(system, settings, times, key, sums, method or chosen, looked_at, stop_when_decided, choices)
     path = Path(output) if output is not None else None
     if path is not None and resume and path.is_file():
         existing = Run(path)
@@ -198,6 +202,7 @@ def _layout(
     method: str,
     looked_at: Mapping[str, str],
     stop_when_decided: bool,
+    choices: tuple[Choice, ...] = (),
 ) -> Layout:
     unit = max(1, min(-(-settings.replicates // 64), _UNIT_BYTES // _row_bytes(system, times)))
     unit = 1 << (unit.bit_length() - 1)  # a power of two, so that whole units fill a pack of lanes
@@ -212,6 +217,7 @@ def _layout(
         **({"stream_key": key} if key else {}),
         **({} if sums.kept else {"statistics": False}),
         **({"stop_when_decided": True} if stop_when_decided else {}),
+        **treatment_facts(choices),
     }
     identity = hashlib.sha256(json.dumps([FORMAT, system.text, facts], sort_keys=True).encode()).hexdigest()[:32]
     import numba

@@ -66,7 +66,8 @@ def additions_of(system: System, seed: int, replicates: Sequence[int], omega: Ar
     if not count:
         return out
     words = [
-        np.random.SeedSequence(seed, spawn_key=(key, r, _ADDITIONS)).generate_state(count, np.uint64) for r in replicates
+        np.random.SeedSequence(seed, spawn_key=(key, r, _ADDITIONS)).generate_state(count, np.uint64)
+        for r in replicates
     ]
     uniform = ((np.array(words, dtype=np.uint64) >> np.uint64(12)).astype(float) + 0.5) * 2.0**-52
     for i, one in enumerate(system.additions):

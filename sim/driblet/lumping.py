@@ -118,11 +118,11 @@ def lumped_reaction(system: System, enzyme: Enzyme, law: FluxLaw) -> Reaction:
     """One net reaction of an enzyme at steady-state flux, the enzyme on both sides."""
     activities = enzyme.activities
     energy, water = 0.0, 0
-    for turns, activity in zip(law.turns, activities, strict=True):
+    for times, activity in zip(law.turns, activities, strict=True):
         stated = system.reaction(activity.reaction)
         assert stated.dG0_kJ_per_mol is not None
-        energy += turns * stated.dG0_kJ_per_mol
-        water += turns * stated.equation.water
+        energy += times * stated.dG0_kJ_per_mol
+        water += times * stated.equation.water
     K = math.exp(-energy / system.conditions.RT_kJ_per_mol)
     name = f"{enzyme.name}.{reaction_name(enzyme, law)}"
     both = ((enzyme.name, 1),)
@@ -134,8 +134,19 @@ def lumped_reaction(system: System, enzyme: Enzyme, law: FluxLaw) -> Reaction:
     factor = RateFactor(
         () if len(numerator) == 1 and not numerator[0].ligands else numerator, _terms(law.denominator, variables, law)
     )
+    turns = tuple((a.reaction, n) for n, a in zip(law.turns, activities, strict=True) if n)
     return Reaction(
-        name, name, equation, energy, K, law.forward, law.forward / K, "enzyme", enzyme=enzyme.name, factor=factor
+        name,
+        name,
+        equation,
+        energy,
+        K,
+        law.forward,
+        law.forward / K,
+        "enzyme",
+        enzyme=enzyme.name,
+        factor=factor,
+        turns=turns,
     )
 
 

@@ -1,7 +1,8 @@
 """Readouts of counts: expressions evaluated over whole arrays of states, the Gibbs energy of the next firing among them.
 
 gibbs(r) is the Gibbs energy of ONE forward transition n -> n + nu: w+(n)/w-(n + nu) = exp(-dG(n)/RT) exactly, so it is
-finite when a product is absent and +inf when a reactant is exhausted.
+finite when a product is absent and +inf when a reactant is exhausted. Where an enzyme is lumped, counts are totals: a plain
+name is then the free count as estimated from the enzyme's states (free_counts.py), total() and gibbs() take the counts.
 """
 
 from __future__ import annotations
@@ -11,6 +12,7 @@ from collections.abc import Callable
 import numpy as np
 from numpy.typing import NDArray
 
+from driblet.free_counts import estimated_names, free_counts
 from driblet.system.expressions import Expression, Named, Node, Number, Operation, Reference
 from driblet.system.model import Reaction, System
 
@@ -38,6 +40,15 @@ def extended(system: System, root: Node, counts: NDArray[np.int64], omega: Array
     """Value of a parsed expression in the extended reals: x/0 is infinite, 0/0 is NaN. Arguments as for `evaluate`."""
     column = {s.name: i for i, s in enumerate(system.free_species)}
     held = system.held_concentrations()
+    estimated = estimated_names(system)
+    cache: list[Array] = []
+
+    def free(name: str) -> Array:
+        if name not in estimated:
+            return counts[..., column[name]].astype(float)
+        if not cache:
+            cache.append(free_counts(system, counts, omega))
+        return cache[0][..., column[name]]
 
     def value(node: Node) -> Array:
         if isinstance(node, Number):
@@ -51,10 +62,8 @@ def extended(system: System, root: Node, counts: NDArray[np.int64], omega: Array
     def referred(node: Reference) -> Array:
         if node.kind == "gibbs":
             return transition_energy(system, system.reaction(node.name), counts, omega)
-        n = sum(
-            number * (held[name] * omega if name in held else counts[..., column[name]].astype(float))
-            for name, number in copies_in(system, node)
-        )
+        of = free if node.kind != "total" else lambda name: counts[..., column[name]].astype(float)
+        n = sum(number * (held[name] * omega if name in held else of(name)) for name, number in copies_in(system, node))
         return np.asarray(n / omega if node.kind == "conc" else n)
 
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):

@@ -19,6 +19,7 @@ from driblet.errors import one_problem
 from driblet.outcomes import GRID, Outcomes
 from driblet.store import SERIES, digest, open_run, reading
 from driblet.system import System, loads
+from driblet.treatments import with_treatments
 
 
 @dataclass(frozen=True)
@@ -118,10 +119,10 @@ class Run:
         system = self.system
         system.reaction(reaction)
         counted = [
-            (e.steps[a.counted].name, a.direction)
-            for e in system.enzymes
-            for a in e.activities
-            if a.reaction == reaction and enzyme in (None, e.name)
+            (r.name, times)
+            for r in system.reactions
+            for turned, times in r.turns
+            if turned == reaction and enzyme in (None, r.enzyme)
         ]
         if enzyme is None and reaction in self.reactions:
             counted.append((reaction, 1))
@@ -251,7 +252,18 @@ class Run:
             text = files[0]["provenance/system_file"].asstr()[()]
             if files[0]["provenance"].attrs["system_file_sha256"] != digest(text):
                 raise ValueError("the text of the system file has changed")
-        return loads(text, f"system file in {self.name}")
+        system = loads(text, f"system file in {self.name}")
+        return with_treatments(system, self.treatments, float(self.time_s[1]))[0] if system.enzymes else system
+
+    @cached_property
+    def treatments(self) -> dict[str, str]:
+        """How each enzyme was treated: "elementary" or "lumped"."""
+        return {name: str(fact["taken"]) for name, fact in self.lumping.items()}
+
+    @cached_property
+    def lumping(self) -> dict[str, dict[str, Any]]:
+        """For each enzyme what was asked for and taken, and why; empty where all are elementary and nothing was asked."""
+        return dict(json.loads(str(self.provenance.get("treatments", "{}"))))
 
     @property
     def provenance(self) -> dict[str, Any]:

@@ -15,6 +15,8 @@ def print_enzymes(out: Any, facts: dict[str, Any]) -> None:
         for enzyme in facts["enzymes"]:
             out.print(_steps(enzyme))
         _print_rates(out, facts)
+        if facts["lumping"]:
+            _print_lumping(out, facts["lumping"])
     for addition in facts["additions"]:
         out.print(
             f"added at {duration(addition['at_s'])}: {number(addition['mean_copies'])} copies of {addition['species']}",
@@ -78,6 +80,33 @@ def _steps(enzyme: dict[str, Any]) -> Any:
     made.columns[0].no_wrap = True
     made.columns[-1].justify = "left"
     return made
+
+
+def _print_lumping(out: Any, rows: list[dict[str, Any]]) -> None:
+    """May the enzymes be lumped, and what would be wrong with taking their binding for an equilibrium?"""
+    shown = [
+        [
+            row["name"],
+            "–" if row["settling_s"] is None else duration(row["settling_s"]),
+            "–" if row["ligand_s"] is None else f"{duration(row['ligand_s'])} ({row['ligand']})",
+            "–" if row["share"] is None else f"{_percent(row['share'])} ({row['rarest_ligand']})",
+            ", ".join("–" if e is None else f"{100 * e:+.3g} %" for e in row["rapid_equilibrium_error"].values()),
+            "yes" if row["allowed"] else "no",
+            row["treatment"],
+        ]
+        for row in rows
+    ]
+    columns = [
+        "enzyme",
+        "states settle in",
+        "a ligand changes within",
+        "share of a ligand",
+        "rapid equilibrium errs by",
+    ]
+    out.print(table("lumping, at the start", [*columns, "allowed", "treatment"], shown))
+    for row in rows:
+        for reason in row["against"]:
+            out.print(f"{row['name']} should not be lumped: {reason}", markup=False)
 
 
 def _print_rates(out: Any, facts: dict[str, Any]) -> None:

@@ -10,6 +10,7 @@ import click
 
 from driblet.commands.requirement_rows import readout_notes, requirement_notes, requirement_table
 from driblet.commands.screen import console, duration, number, species_rows, table, time_option
+from driblet.commands.treatment_lines import treatment_lines
 
 
 @click.command(short_help="Simulate an ensemble of compartments into a run file.")
@@ -24,6 +25,7 @@ from driblet.commands.screen import console, duration, number, species_rows, tab
 @click.option("--threads", type=click.IntRange(1, 4096), help="Threads; default: one per core.")
 @click.option("--engine", help='The algorithm; this version has "exact".')
 @click.option("--stop-when-decided", is_flag=True, help="End a compartment when every requirement is decided.")
+@click.option("--treatment", metavar="HOW", help='Enzymes: "elementary", "lumped", "auto", or "kinase=lumped,...".')
 @click.option("--force", is_flag=True, help="Replace an existing run file or its parts.")
 @click.option("--resume", is_flag=True, help="Go on with an interrupted run; a complete one is left as it is.")
 def run(
@@ -36,6 +38,7 @@ def run(
     threads: int | None,
     engine: str | None,
     stop_when_decided: bool,
+    treatment: str | None,
     force: bool,
     resume: bool,
 ) -> None:
@@ -47,6 +50,7 @@ def run(
         raise click.UsageError("--force starts anew and --resume goes on: give one of them")
     from driblet.ensemble import run as simulate
     from driblet.system import load
+    from driblet.treatments import read_treatments
 
     system = load(file)
     output = output or Path(file.with_suffix(".h5").name)
@@ -59,6 +63,7 @@ def run(
             sample_every=sample_every,
             seed=seed,
             engine=engine,
+            treatment=None if treatment is None else read_treatments(treatment),
             threads=threads,
             stop_when_decided=stop_when_decided,
             resume=resume,
@@ -137,6 +142,8 @@ def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-
         out.print(requirement_table(judged))
         for note in requirement_notes(judged):
             out.print(f"note: {note}", markup=False)
+    for line in treatment_lines(result.lumping):
+        out.print(line, markup=False)
     for note in (*readout_notes(result), *getattr(system, "warnings", ())):
         out.print(f"note: {note}", markup=False)
     out.print(f"written: {result.name}", markup=False)

@@ -52,6 +52,7 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
             ],
             "reactions": list(run.reactions),
             "readouts": run.readout_units,
+            "treatments": run.treatments,
             "provenance": {k: v for k, v in run.provenance.items() if k != "readout_units"},
         }
     if as_json:
@@ -76,6 +77,10 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
         out.print("readouts: " + ", ".join(f"{k} ({v})" for k, v in facts["readouts"].items()), markup=False)
     out.print("reactions: " + ", ".join(stated), markup=False)
     rows = [
-        [k.replace("_", " "), f"{v:.6g}" if isinstance(v, float) else str(v)] for k, v in facts["provenance"].items()
+        [k.replace("_", " "), f"{v:.6g}" if isinstance(v, float) else str(v)]
+        for k, v in facts["provenance"].items()
+        if k != "treatments"
     ]
+    if facts["treatments"]:
+        rows.append(["treatments", ", ".join(f"{name} {how}" for name, how in facts["treatments"].items())])
     out.print(table("how it was made", ["", ""], rows, left=2))

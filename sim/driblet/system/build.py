@@ -158,6 +158,7 @@ class _Builder:
             enzymes=tuple(e.enzyme for e in expansions),
             stated=stated,
             additions=tuple(additions),
+            treatments=tuple((e.enzyme.name, e.treatment or run.treatment) for e in expansions) if run else (),
         )
 
     def entries(self, name: str) -> Mapping[str, Any]:

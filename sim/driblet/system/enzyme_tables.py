@@ -8,6 +8,7 @@ from pydantic import BeforeValidator, Field
 
 from driblet.quantities import Quantity
 from driblet.system.tables import (
+    TREATMENTS,
     Amount,
     AnyQuantity,
     Loading,
@@ -79,6 +80,7 @@ class EnzymeTable(ActivityTable):
     molar_mass: MolarMass | None = None
     active_fraction: Annotated[float, BeforeValidator(_plain(1e-9, 1, "an active fraction"))] = 1.0
     half_life: Time | None = None
+    treatment: Annotated[str, BeforeValidator(_one_of(TREATMENTS))] | None = None
     inhibitors: dict[str, Annotated[InhibitorTable, _as_table("Ki")]] = Field(default_factory=dict)
     also: dict[str, ActivityTable] = Field(default_factory=dict)
 

@@ -29,11 +29,12 @@ SMALLEST_CONSTANT, LARGEST_CONSTANT = (
 
 
 class Expansion(NamedTuple):
-    """An enzyme with the species and reactions that stand for it."""
+    """An enzyme with the species and reactions that stand for it; treatment : as its table asks, None where it does not."""
 
     enzyme: Enzyme
     species: tuple[Species, ...]
     reactions: tuple[Reaction, ...]
+    treatment: str | None = None
 
 
 class _Fault(Exception):
@@ -123,7 +124,7 @@ class EnzymeReader:
         if twice:  # a reaction called "binds_ATP", say
             self._problem(path, "", f"two of its steps would be called {twice[0]}; rename the reaction")
             return None
-        return self._expand(enzyme, amount, table.loading or self.loading)
+        return self._expand(enzyme, amount, table.loading or self.loading)._replace(treatment=table.treatment)
 
     def _attempt(self, path: str, key: str, read, table: EnzymeTable):  # type: ignore[no-untyped-def]
         try:
@@ -302,7 +303,10 @@ class EnzymeReader:
                 )
             )
         water = {a.counted: a.direction * self.known[a.reaction].equation.water for a in enzyme.activities}
-        reactions = [self._reaction(enzyme, step, water.get(k, 0)) for k, step in enumerate(enzyme.steps)]
+        turns = {a.counted: ((a.reaction, a.direction),) for a in enzyme.activities}
+        reactions = [
+            self._reaction(enzyme, step, water.get(k, 0), turns.get(k, ())) for k, step in enumerate(enzyme.steps)
+        ]
         if enzyme.half_life_s is not None:
             rate = math.log(2.0) / enzyme.half_life_s
             for state in enzyme.states:
@@ -317,7 +321,7 @@ class EnzymeReader:
                 )
         return Expansion(enzyme, tuple(species), tuple(reactions))
 
-    def _reaction(self, enzyme: Enzyme, step: EnzymeStep, water: int) -> Reaction:
+    def _reaction(self, enzyme: Enzyme, step: EnzymeStep, water: int, turns: tuple[tuple[str, int], ...]) -> Reaction:
         taken = ((step.binds, 1),) if step.binds is not None else ()
         let_go = ((step.releases, 1),) if step.releases is not None else ()
         left = ((enzyme.states[step.source].name, 1), *taken)
@@ -333,6 +337,7 @@ class EnzymeReader:
             step.backward,
             "enzyme",
             enzyme=enzyme.name,
+            turns=turns,
         )
 
 

@@ -71,7 +71,8 @@ class Reaction:
     constants in (mol/L)^(1-m)/s of v = k prod [A_i]^nu_i; energy_from : what in the file set dG0', energy_note : how, where
     the reference table had a part in it; one_way : the reason. A reaction that enzymes alone carry has rate constants of
     zero and stands in System.stated only; enzyme : the one whose elementary step, or lumped reaction, this is, else None;
-    factor : what multiplies the law of mass action in both directions, None for none.
+    factor : what multiplies the law of mass action in both directions, None for none; turns : what one forward firing turns
+    over, (reaction of the file, times), for a reaction that an enzyme carries.
     """
 
     name: str
@@ -87,6 +88,7 @@ class Reaction:
     energy_note: str = ""
     enzyme: str | None = None
     factor: RateFactor | None = None
+    turns: tuple[tuple[str, int], ...] = ()
 
 
 @dataclass(frozen=True)

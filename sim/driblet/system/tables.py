@@ -14,6 +14,7 @@ from driblet.errors import Problem
 from driblet.quantities import Quantity, QuantityError, example_of, read_quantity
 
 ENGINES = ("exact",)
+TREATMENTS = ("elementary", "lumped", "auto")  # of enzymes
 LOADINGS = ("nearest", "poisson")
 RECORDS = ("summary", "trajectories", "events")  # how much a run file keeps
 WHEN = ("throughout", "at end", "once", "on average")  # when the condition of a requirement must hold
@@ -283,6 +284,7 @@ class RunTable(Table):
     record: Annotated[str, BeforeValidator(_one_of(RECORDS))] = "trajectories"
     loading: Loading = "nearest"
     seed: Annotated[int, BeforeValidator(_whole(0, LARGEST_SEED))] = 0
+    treatment: Annotated[str, BeforeValidator(_one_of(TREATMENTS))] = "elementary"
 
 
 SECTIONS = (

@@ -73,7 +73,10 @@ class TurnoverNoise:
     def occupancies(self, x: Array) -> Array:
         """Share of copies in each state, shape=(..., S)."""
         weights = np.stack([tree(x) for tree in self.trees], axis=-1)
-        return np.asarray(weights / weights.sum(axis=-1, keepdims=True))
+        whole = weights.sum(axis=-1, keepdims=True)
+        nowhere = np.zeros(len(self.trees))
+        nowhere[0] = 1.0  # without any ligand some mechanisms could be in any of their forms; they start free
+        return np.where(whole > 0, weights / np.where(whole > 0, whole, 1.0), nowhere)
 
     def ligands(self, concentrations: Mapping[str, float | Array], molecule_M: float | Array = 0.0) -> Array:
         """The variables from mol/L by species; molecule_M : mol/L of one molecule, to take off those held already."""
