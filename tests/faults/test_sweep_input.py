@@ -37,6 +37,11 @@ FAULTS: list[tuple[str, str, tuple[str, ...]]] = [
     ("replicates = 5", "title = 3", ("title: a text in quotes",)),
     (
         AXIS,
+        '"conditions.temperature" = ["20 degC", "37 degC"]',
+        ('axes."conditions.temperature": moves the equilibrium constants and not the rate constants',),
+    ),
+    (
+        AXIS,
         '"species.C" = ["1 mM"]',
         ('axes."species.C": is no key path of the system file; the nearest are species.',),
     ),

@@ -31,6 +31,7 @@ KEYS = (
     "seed",
     "keep",
     "shared_streams",
+    "temperature_independent",
     "axes",
     "derived",
 )
@@ -224,6 +225,12 @@ def _check_paths(
 ) -> None:
     where = "points_from" if "points_from" in raw else "axes"
     for axis in axes:
+        if axis.path == "conditions.temperature" and raw.get("temperature_independent") is not True:
+            text = (
+                "moves the equilibrium constants and not the rate constants, which would keep those of one temperature; "
+                "temperature_independent = true says that this is meant"
+            )
+            problems.append(Problem(f'{where}."{axis.path}"', text))
         try:
             replaced(base, {axis.path: "1"})
         except KeyPathError as error:
