@@ -142,7 +142,8 @@ replicates = 40
     one, other = results(tmp_path / "own" / "sweep").values()
     assert not np.array_equal(one, other, equal_nan=True)
     plain = driblet.run(driblet.loads(base), replicates=40)
-    assert results(tmp_path / "shared" / "sweep")[(7.0,)][2:8][4] == plain.final_counts()[:, 0].mean()
+    collect(tmp_path / "shared" / "sweep", tmp_path / "shared.h5")
+    assert read_table(tmp_path / "shared.h5").values["A.end_mean"][0] == plain.final_counts()[:, 0].mean()
 
 
 def test_points_from_a_file_zipped_and_sobol(tmp_path: Path) -> None:

@@ -25,6 +25,7 @@ from driblet_analysis.sweep.summary import summarise
 FLUSH_SECONDS = 5.0  # what is simulated is written, and reported, at least this often, points permitting
 _WAIT_SECONDS = 2.0
 _LONGEST_ERROR = 300
+_WARM_SECONDS = 5.0
 STOP_SIGNALS = (signal.SIGINT, signal.SIGTERM, signal.SIGUSR1)
 
 
@@ -223,11 +224,22 @@ def do_shard(plan: Plan, shard: int, stop: Stop, report: Callable[[Written], Non
 
 
 def warm_up(plan: Plan) -> None:
-    """Compile what the points need, so that many workers starting together find it compiled. Simulates next to nothing."""
+    """Compile what the points need, so that many workers starting together find it compiled.
+
+    Simulates the first point as it will be simulated, but for a few seconds at most.
+    """
+    system = plan.system(plan.read(range(1))[0])
+    begun: list[float] = []
 
     def enough(progress: Progress) -> None:
-        if progress.events:
+        if progress.events and not begun:
+            begun.append(progress.seconds)
+        if begun and progress.seconds - begun[0] > _WARM_SECONDS:
             raise KeyboardInterrupt
 
-    with suppress(KeyboardInterrupt, InterruptedRunError):
-        run(plan.system(plan.read(range(1))[0]), replicates=1, threads=1, on_progress=enough).close()
+    # an error of this point is told when it is worked on
+    with (
+        suppress(KeyboardInterrupt, Exception),
+        run(system, threads=1, record=record_of(system), on_progress=enough) as ensemble,
+    ):
+        summarise(ensemble, system)
