@@ -113,6 +113,7 @@ def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-
     out = console()
     system = result.system
     events = int(result.events.sum())
+    how = ", ".join(str(result.provenance[key]) for key in ("engine", "method") if key in result.provenance)
     out.print(system.title, style="bold")
     if seconds is None:
         spread = "complete already; nothing was simulated anew"
@@ -120,7 +121,7 @@ def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-
         spread = f"{duration(seconds)} of wall time, {events / max(seconds, 1e-9) / 1e6:.1f} M events/s"
     out.print(
         f"{len(result.replicate)} compartments, {duration(float(result.time_s[-1]))} each, "
-        f"{events:,} reaction events; {spread}",
+        f"{events:,} reaction events ({how}); {spread}",
         markup=False,
     )
     final = result.final_counts()
