@@ -6,6 +6,7 @@ order of Okabe & Ito, "Color Universal Design", 2008).
 
 from __future__ import annotations
 
+import time
 from collections import Counter
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -30,6 +31,7 @@ COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#6
 LAW_COLOUR = "#1F1F1F"
 FORMATS = (".png", ".pdf", ".svg")
 MOST_ROWS = 10
+LAW_SECONDS = 20.0  # a law is an addition to the picture, and thousands of molecules of a class each can take minutes
 _STYLE: Any = {
     "font.size": 9.5,
     "axes.titlesize": 10.5,
@@ -93,8 +95,9 @@ def time_axis(duration_s: float) -> tuple[float, str]:
 
 
 def laws_of(run: Run) -> list[CountLaw] | None:
-    """The exact law of each compartment, or None where there is none to draw."""
+    """The exact law of each compartment, or None where there is none to draw, or none within LAW_SECONDS."""
     system = run.system
+    started = time.monotonic()
     omega = run.volume_L * system.compartment.omega / system.compartment.volume_L
     laws = []
     try:
@@ -103,6 +106,8 @@ def laws_of(run: Run) -> list[CountLaw] | None:
             if law is None:
                 return None
             laws.append(law)
+            if (time.monotonic() - started) / len(laws) * len(omega) > LAW_SECONDS and len(laws) > 2:
+                return None
     except CannotAnswerError:
         return None
     return laws

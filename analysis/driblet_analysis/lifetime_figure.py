@@ -64,7 +64,9 @@ def _survival(ax: Axes, one: Lifetime, colour: str) -> None:
         asked = 1 - one.share.asked if once else one.share.asked
         ax.axhline(asked, color="#1F1F1F", linewidth=1.0, linestyle=(0, (4, 3)), label="asked")
     ax.set_xlim(0.0, length / divisor * 1.01)
-    ax.set_ylim(-0.02, 1.03)
+    # the scale begins at zero unless all that is drawn happens near one
+    room = 1.3 * (1.0 - min(float(low.min()), 1.0 if one.share.asked is None or once else one.share.asked))
+    ax.set_ylim(1.0 - room if 0.0 < room < 0.7 else -0.02, 1.0 + 0.03 * (room if 0.0 < room < 0.7 else 1.0))
     ax.set_xlabel(f"time in its span ({unit})")
     ax.set_ylabel("share of compartments")
     _title(ax, one)

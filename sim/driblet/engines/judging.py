@@ -147,11 +147,11 @@ def conclude(table, program, leaf_truth, r, q):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def credit(table, span, record, r, q, until, closed):  # type: ignore[no-untyped-def]
-    """Write down that the truth of q held from SINCE to `until`, that instant included where `closed`."""
+def credit(table, span, record, r, q, until):  # type: ignore[no-untyped-def]
+    """Write down that the truth of q held from SINCE up to `until`, that instant left out."""
     start, end = span[q, START], span[q, END]
     since, truth = record[r, q, SINCE], record[r, q, TRUTH]
-    if since > end or until < start or (until == start and not closed):
+    if since > end or until <= start:
         return
     first = max(since, start)
     if truth == 1.0:
@@ -160,7 +160,7 @@ def credit(table, span, record, r, q, until, closed):  # type: ignore[no-untyped
             record[r, q, FIRST_MET] = first
     elif np.isnan(record[r, q, FIRST_FAILURE]):
         record[r, q, FIRST_FAILURE] = first
-    if table[q, WHEN] == AT_END and (until > end or (until == end and closed)):
+    if table[q, WHEN] == AT_END and until > end:
         record[r, q, OUTCOME] = truth
 
 
@@ -170,7 +170,7 @@ def turn(table, span, program, leaf_truth, record, r, q, clock):  # type: ignore
     truth = conclude(table, program, leaf_truth, r, q)
     if truth == record[r, q, TRUTH]:
         return False
-    credit(table, span, record, r, q, clock, False)
+    credit(table, span, record, r, q, clock)
     record[r, q, TRUTH] = truth
     record[r, q, SINCE] = clock
     return True
@@ -244,14 +244,14 @@ def judge_window(table, span, leaf, program, leaf_truth, record, sums, r, column
 @njit(nogil=True, cache=CACHE, error_model="numpy")
 def cross_edges(  # type: ignore[no-untyped-def]
     moments, moment_leaves, table, span, leaf, program, leaf_value, leaf_truth, record, integrated_to, next_edge, sums, r,
-    column, until, closed,
+    column, until,
 ):  # fmt: skip
-    """Judge every window that ends before `until`, or then where `closed`; values : of the present state.
+    """Judge every window that ends before `until`; values : of the present state.
 
     Afterwards averages are integrated up to integrated_to[r].
     """
     edge = next_edge[r]
-    while edge < until or (closed and edge == until):
+    while edge < until:
         for n in range(moment_leaves, leaf.shape[0]):
             sums[U(n), column] += part(leaf_value[r, n], edge - integrated_to[r])
         integrated_to[r] = edge
@@ -288,8 +288,9 @@ def judge_all(rq, rows, counts, clock, opening):  # type: ignore[no-untyped-def]
 
     opening : at the start of a run, where there is nothing before; else after a leap or an addition.
     """
+    every = 1 if clock >= 0.0 else 2  # no literal: views of no particular layout, see recording.py
+    columns, sums = counts[::every], rq.leaf_sum.T[::every]
     for r in rows:
-        sums = rq.leaf_sum.T
         if opening:
             rq.next_edge[r] = np.inf
             for q in range(rq.moments, rq.table.shape[0]):
@@ -298,20 +299,20 @@ def judge_all(rq, rows, counts, clock, opening):  # type: ignore[no-untyped-def]
         else:
             cross_edges(
                 rq.moments, rq.moment_leaves, rq.table, rq.span, rq.leaf, rq.program, rq.leaf_value, rq.leaf_truth, rq.record,
-                rq.integrated_to, rq.next_edge, sums, r, r, clock, False,
+                rq.integrated_to, rq.next_edge, sums, r, r, clock,
             )  # fmt: skip
             for n in range(rq.moment_leaves, rq.leaf.shape[0]):
                 sums[n, r] += part(rq.leaf_value[r, n], clock - rq.integrated_to[r])
             rq.integrated_to[r] = max(rq.integrated_to[r], clock)
         for n in range(rq.moment_leaves, rq.leaf.shape[0]):
             rq.leaf_value[r, n] = take_value(
-                rq.leaf, rq.term_start, rq.factor_start, rq.factor_species, rq.factor_offset, rq.coefficient, r, n, counts, r
+                rq.leaf, rq.term_start, rq.factor_start, rq.factor_species, rq.factor_offset, rq.coefficient, r, n, columns, r
             )  # fmt: skip
         for q in range(rq.moments):
             for k in range(rq.table[q, FIRST_LEAF], rq.table[q, END_LEAF]):
                 leaf_change(
                     rq.leaf, rq.term_start, rq.factor_start, rq.factor_species, rq.factor_offset, rq.coefficient,
-                    rq.leaf_truth, r, k, counts, r,
+                    rq.leaf_truth, r, k, columns, r,
                 )  # fmt: skip
             if opening:
                 rq.record[r, q, TRUTH] = conclude(rq.table, rq.program, rq.leaf_truth, r, q)
@@ -321,15 +322,18 @@ def judge_all(rq, rows, counts, clock, opening):  # type: ignore[no-untyped-def]
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
 def close_judgement(rq, end):  # type: ignore[no-untyped-def]
-    """The outcomes of replicates whose records end at end[r]."""
+    """The outcomes of replicates whose records end at end[r], that instant included."""
+    every = 1 if end.size > 0 else 2
+    sums = rq.leaf_sum.T[::every]
     for r in range(end.size):
+        until = np.nextafter(end[r], np.inf)
         cross_edges(
             rq.moments, rq.moment_leaves, rq.table, rq.span, rq.leaf, rq.program, rq.leaf_value, rq.leaf_truth, rq.record,
-            rq.integrated_to, rq.next_edge, rq.leaf_sum.T, r, r, end[r], True,
+            rq.integrated_to, rq.next_edge, sums, r, r, until,
         )  # fmt: skip
         for q in range(rq.table.shape[0]):
             if q < rq.moments:
-                credit(rq.table, rq.span, rq.record, r, q, end[r], True)
+                credit(rq.table, rq.span, rq.record, r, q, until)
             through = end[r] >= rq.span[q, END]
             rq.record[r, q, JUDGED_UNTIL] = min(end[r], rq.span[q, END])
             if rq.table[q, WHEN] == THROUGHOUT:

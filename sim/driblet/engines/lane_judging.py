@@ -184,6 +184,6 @@ def cross_lane_edges(  # type: ignore[no-untyped-def]
     integrated_to[r] = lanes.integrated_to[lane]
     cross_edges(
         moments, moment_leaves, table, span, leaf, program, leaf_value, leaf_truth, record, integrated_to, next_edge, sums, r,
-        lane, until, False,
+        lane, until,
     )  # fmt: skip
     lanes.integrated_to[lane] = integrated_to[r]

@@ -204,7 +204,7 @@ def advance_scalar(  # type: ignore[no-untyped-def]
                     until = min(later, time[grid_size - 1])
                     cross_edges(
                         moments, moment_leaves, plan, spans, leaves, program, leaf_value, leaf_truth, record, integrated_to,
-                        judged_edge, sums, r, r, until, False,
+                        judged_edge, sums, r, r, until,
                     )  # fmt: skip
                 if halting:
                     if halt[r] == np.inf and not later <= mark:
@@ -271,17 +271,9 @@ def advance_scalar(  # type: ignore[no-untyped-def]
                     if q >= moments:
                         for k in range(first, last):
                             leaf_value[r, k] = take_value(
-                                leaves,
-                                term_start,
-                                factor_start,
-                                factor_species,
-                                factor_offset,
-                                coefficient,
-                                r,
-                                k,
-                                columns,
-                                r,
-                            )
+                                leaves, term_start, factor_start, factor_species, factor_offset, coefficient, r, np.int64(k),
+                                columns, r,
+                            )  # fmt: skip
                         continue
                     changed = 0
                     for k in range(first, last):
