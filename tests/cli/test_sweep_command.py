@@ -191,6 +191,13 @@ def test_trajectories_are_kept_and_come_out_as_run_files(tmp_path: Path, capsys:
     assert main(["show", str(tmp_path / "six.h5")]) == 0
 
 
+def test_a_system_without_a_title_has_the_name_of_its_file(tmp_path: Path) -> None:
+    base = SMALL.replace('title = "small"\n', "")
+    plan = make_plan(write_sweep(tmp_path, SWEEP, base), tmp_path / "sweep").plan
+    assert plan.system(plan.read(range(1))[0]).title == "base"
+    assert work_locally(tmp_path / "sweep", workers=1, part=(1, 6)).failed == 0
+
+
 def test_a_long_plan_is_cut_into_few_files(tmp_path: Path) -> None:
     text = 'system = "base.toml"\n[axes]\n"run.seed" = { from = 1, to = 3000, points = 3000 }\n'
     plan = make_plan(write_sweep(tmp_path, text), tmp_path / "sweep").plan

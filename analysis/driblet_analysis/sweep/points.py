@@ -50,7 +50,7 @@ def make_points(sweep: Sweep) -> Points:
         try:
             changes = sweep.changes(row)
             rows.append(tuple(changes.values()))
-            sample_times(point_system(sweep.raw, changes, "").settings)
+            sample_times(point_system(sweep.raw, changes, sweep.source).settings)
         except DerivedError as error:
             faults.add(number, row, Problem("derived", str(error)))
         except KeyPathError as error:

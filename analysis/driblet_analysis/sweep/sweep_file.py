@@ -94,7 +94,8 @@ def read_sweep(path: str | Path) -> Sweep:
         raise InputError(source, problems)
     system_path = Path(path).parent / system
     # whatever is wrong with the system by itself is told under its own name; its text carries the files it names
-    base = _with_settings(tomllib.loads(load(system_path).text), raw)
+    system_read = load(system_path)
+    base = _with_settings({"title": system_read.title, **tomllib.loads(system_read.text)}, raw)
     title = raw.get("title", "")
     if not isinstance(title, str):
         problems.append(Problem("title", "a text in quotes is needed"))
