@@ -24,14 +24,13 @@ from driblet.engines.contract import (
     new_state,
 )
 from driblet.engines.exact import ExactEngine
-from driblet.engines.judging import close_judgement, judge_all
 from driblet.engines.lanes import LANES
 from driblet.errors import InterruptedRunError, one_problem
 from driblet.events import EventRecord
 from driblet.loading import additions_of, prepare
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.readouts import evaluate
-from driblet.requirements import CompiledRequirements
+from driblet.requirements import CompiledRequirements, conclude_all, look_at_all
 from driblet.segments import begin, keep, segments
 from driblet.store import Block, Layout
 from driblet.sums import SumsPlan
@@ -150,7 +149,7 @@ class PackRunner:
         log = EventRecord(len(replicates)) if self.settings.record == "events" else None
         judging = self.requirements.recorder(start.omega, self.stop_when_decided)
         if judging is not None:
-            judge_all(judging, np.arange(len(replicates)), state.counts.T, 0.0, True)
+            look_at_all(judging, np.arange(len(replicates)), state.counts.T, 0.0, True)
         one_segment = len(self.segments) == 1 and log is None
         waiting = list(range(len(pack.units)))
 
@@ -166,7 +165,7 @@ class PackRunner:
                 ended = state._replace(**{name: array[rows] for name, array in state._asdict().items()})
                 judged = rows_of(recorders, rows).requirements
                 if judged is not None:
-                    close_judgement(judged, ended.clock)
+                    conclude_all(judged, ended.clock)
                 outcomes = self.requirements.outcomes(judged, recorded.counts, self.time_s, start.omega[rows])
                 part.update(outcomes.values())
                 numbers = (pack.units[k], pack.rows[rows])
@@ -178,7 +177,7 @@ class PackRunner:
             recorders = self.sums.recorders(state, segment.start_s, segment.end_s)._replace(requirements=judging)
             if judging is not None and segment.added:
                 going_on = np.flatnonzero(state.reason == RUNNING)
-                judge_all(judging, going_on, state.counts.T, segment.start_s, False)
+                look_at_all(judging, going_on, state.counts.T, segment.start_s, False)
             if log is not None:
                 recorders = log.attach(recorders)
             while (state.reason == RUNNING).any():

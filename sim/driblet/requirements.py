@@ -27,6 +27,8 @@ from driblet.engines.judging import (
     TRUTH,
     UNDECIDED,
     Requirements,
+    close_judgement,
+    judge_all,
 )
 from driblet.network import Network
 from driblet.outcomes import EVENT, GRID, Outcomes
@@ -101,6 +103,23 @@ class CompiledRequirements:
 def _copy(target: Outcomes, q: int, source: Outcomes) -> None:
     for name in ("met", "first_failure_s", "first_met_s", "time_met_s", "judged_until_s"):
         getattr(target, name)[:, q] = getattr(source, name)[:, 0]
+
+
+def look_at_all(
+    requirements: Requirements, rows: NDArray[np.int64], counts: Array, time_s: float, opening: bool
+) -> None:
+    """Judge replicates at the start of a run (`opening`), or where something but a firing changed them.
+
+    rows : which; counts : (species, R).
+    """
+    with np.errstate(all="ignore"):  # for kernels that run as plain Python
+        judge_all(requirements, rows, counts, time_s, opening)
+
+
+def conclude_all(requirements: Requirements, end_s: Array) -> None:
+    """The outcomes of replicates whose records end at end_s, (R,)."""
+    with np.errstate(all="ignore"):
+        close_judgement(requirements, end_s)
 
 
 class _Tables:

@@ -18,12 +18,12 @@ import driblet
 from driblet.condition_forms import NotInFormError, form_of
 from driblet.engines.contract import RUNNING, new_samples, new_state
 from driblet.engines.exact import ExactEngine
-from driblet.engines.judging import Requirements, close_judgement, judge_all
+from driblet.engines.judging import Requirements
 from driblet.engines.recording import recorders_for
 from driblet.network import Network
 from driblet.outcomes import Outcomes
 from driblet.readouts import extended
-from driblet.requirements import CompiledRequirements, judge_on_grid
+from driblet.requirements import CompiledRequirements, conclude_all, judge_on_grid, look_at_all
 from driblet.system import System
 from driblet.system.expressions import (
     Comparison,
@@ -146,10 +146,10 @@ def judged_together(
     samples = new_samples(times, R, len(network.species), len(network.channels))
     recorders = recorders_for(state, requirements=requirements)
     engine = ExactEngine(network.arrays, len(network.species), method, lanes=8)
-    judge_all(requirements, np.arange(R), state.counts.T, 0.0, True)
+    look_at_all(requirements, np.arange(R), state.counts.T, 0.0, True)
     while (state.reason == RUNNING).any():
         engine.advance(network.rates(np.full(R, paths[0].omega)), state, samples, budget, recorders)
-    close_judgement(requirements, state.clock)
+    conclude_all(requirements, state.clock)
     return compiled.outcomes(requirements, samples.counts, times, np.full(R, paths[0].omega))
 
 
@@ -157,8 +157,8 @@ def of_states(system: System, states: list[list[int]], moments: list[float], end
     """What is said of one compartment that is in these states from these moments on."""
     compiled, requirements = recorded(system, system.compartment.omega, 1)
     for state, moment in zip(states, moments, strict=True):
-        judge_all(requirements, np.arange(1), np.array([[float(n)] for n in state]), moment, moment == 0.0)
-    close_judgement(requirements, np.array([end]))
+        look_at_all(requirements, np.arange(1), np.array([[float(n)] for n in state]), moment, moment == 0.0)
+    conclude_all(requirements, np.array([end]))
     return compiled.outcomes(
         requirements, np.zeros((1, 1, len(states[0])), dtype=np.int64), np.array([0.0]), np.ones(1)
     )
@@ -496,7 +496,7 @@ def together() -> tuple[System, list[Path], Outcomes]:
 @pytest.mark.parametrize(
     ("method", "budget"), [("scalar", 1), ("scalar", 13), ("lanes", 1), ("lanes", 40), ("lanes", 1 << 20)]
 )
-def test_how_an_engine_runs_never_changes_an_outcome(
+def test_chunks_and_lanes_never_change_an_outcome(
     together: tuple[System, list[Path], Outcomes], method: str, budget: int
 ) -> None:
     system, paths, expected = together
