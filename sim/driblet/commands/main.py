@@ -28,6 +28,10 @@ COMMANDS: dict[str, tuple[str, str]] = {
     "run": ("driblet.commands.run:run", "Simulate an ensemble of compartments into a run file."),
     "show": ("driblet.commands.show:show", "Print what a run file holds."),
     "check": ("driblet_analysis.commands.check:check", "Hold a run against the energies of its system."),
+    "compare": (
+        "driblet_analysis.commands.compare:compare",
+        "Hold one treatment of a system's enzymes against another.",
+    ),
     "lifetime": (
         "driblet_analysis.commands.lifetime:lifetime",
         "Tell how long requirements hold, in how many compartments.",
