@@ -18,7 +18,7 @@ from driblet_analysis.sweep.axes import AxisError, column_of
 from driblet_analysis.sweep.directory import NAME, Plan, read_plan, read_values, write_plan
 from driblet_analysis.sweep.estimate import Estimate, estimate_work
 from driblet_analysis.sweep.keypaths import toml_text
-from driblet_analysis.sweep.points import Points, Row, make_points, place, point_system
+from driblet_analysis.sweep.points import Points, Row, make_points, place, point_system, simulated
 from driblet_analysis.sweep.summary import summary_columns
 from driblet_analysis.sweep.sweep_file import Sweep, read_sweep
 
@@ -128,7 +128,8 @@ def _check_place(directory: Path) -> None:
 
 def _estimate(sweep: Sweep, points: Points) -> Estimate:
     def system(number: int):  # type: ignore[no-untyped-def]
-        return point_system(sweep.raw, dict(zip(points.paths, points.rows[number], strict=True)), sweep.source)
+        changes = dict(zip(points.paths, points.rows[number], strict=True))
+        return simulated(point_system(sweep.raw, changes, sweep.source))
 
     return estimate_work(system, len(points), sweep.keep, len(summary_columns(system(0))))
 

@@ -14,6 +14,7 @@ from driblet.ensemble import sample_times
 from driblet.errors import InputError, Problem
 from driblet.system import System
 from driblet.system.build import build
+from driblet.treatments import with_treatments
 from driblet_analysis.sweep.axes import AxisError, Column, canonical, column_of, sobol_fractions, stream_key
 from driblet_analysis.sweep.derived import DerivedError
 from driblet_analysis.sweep.keypaths import KeyPathError, Scalar, replaced
@@ -50,7 +51,7 @@ def make_points(sweep: Sweep) -> Points:
         try:
             changes = sweep.changes(row)
             rows.append(tuple(changes.values()))
-            sample_times(point_system(sweep.raw, changes, sweep.source).settings)
+            simulated(point_system(sweep.raw, changes, sweep.source))
         except DerivedError as error:
             faults.add(number, row, Problem("derived", str(error)))
         except KeyPathError as error:
@@ -68,6 +69,12 @@ def make_points(sweep: Sweep) -> Points:
             raise InputError(sweep.source, [Problem(place(sweep, path), str(error))]) from error
     hashes = [stream_key(sweep.paths, row) for row in values]
     return Points(paths, rows, tuple(columns), np.array(hashes, dtype=np.uint64))
+
+
+def simulated(system: System) -> System:
+    """The system as a run treats it, its enzymes lumped where that was asked. Raises InputError where it cannot be run."""
+    times = sample_times(system.settings)
+    return with_treatments(system, None, float(times[1]))[0] if system.enzymes else system
 
 
 def _causes(sweep: Sweep, problems: Sequence[Problem]) -> list[Problem]:

@@ -23,6 +23,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import NamedTuple
 
 import numpy as np
@@ -121,6 +122,7 @@ class Problem:
     interaction: float = 1.0
 
 
+@lru_cache(maxsize=1024)  # a sweep builds thousands of systems with the same enzymes
 def solve(problem: Problem) -> ChainConstants:
     """All constants of a chain within the limits. Raises MechanismError, which tells the largest kcat where that helps."""
     _check_encounters(problem)
