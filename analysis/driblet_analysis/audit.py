@@ -332,7 +332,7 @@ def _warnings(system: System, network: Network, copies: Array, course: dict[str,
             found.append(f"{name} takes part in no reaction")
         elif not stoichiometry[i].any():
             found.append(f"{name} is only a catalyst: its count never changes")
-    carried = {e.steps[a.counted].name: a.reaction for e in system.enzymes for a in e.activities}
+    carried = {r.name: r.turns[0][0] for r in system.reactions if len(r.turns) == 1}
     can_run = {carried.get(r.name, r.name) for r, runs in zip(system.reactions, runnable(system), strict=True) if runs}
     for reaction in system.stated:
         if reaction.name not in can_run:

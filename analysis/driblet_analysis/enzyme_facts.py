@@ -13,6 +13,7 @@ from driblet.ensemble import sample_times
 from driblet.errors import InputError
 from driblet.loading import volumes
 from driblet.lumping import ELEMENTARY
+from driblet.network import Network
 from driblet.quantities import copies_per_molar
 from driblet.system import Species, System
 from driblet.system.mechanisms import Activity, Enzyme, measured_constants, turnover_rates
@@ -54,7 +55,7 @@ def catalysed_rates(system: System) -> dict[str, dict[str, float]]:
     found: dict[str, dict[str, float]] = {}
     for enzyme in system.enzymes:
         copies = _free(system, enzyme).mean_copies(system.compartment.omega)
-        for reaction, rate in turnover_rates(enzyme, here).items():
+        for reaction, rate in _turnovers(system, enzyme, here).items():
             found.setdefault(reaction, {})[enzyme.name] = copies * rate
     return found
 
@@ -99,7 +100,7 @@ def _facts(system: System, enzyme: Enzyme, here: Mapping[str, float]) -> dict[st
     species = _free(system, enzyme)
     omega = system.compartment.omega
     mean = species.mean_copies(omega)
-    turnovers = turnover_rates(enzyme, here)
+    turnovers = _turnovers(system, enzyme, here)
     return {
         "name": enzyme.name,
         "concentration_M": mean / omega,
@@ -130,6 +131,24 @@ def _facts(system: System, enzyme: Enzyme, here: Mapping[str, float]) -> dict[st
     }
 
 
+def _turnovers(system: System, enzyme: Enzyme, here: Mapping[str, float]) -> dict[str, float]:
+    """Net turnovers of each reaction per molecule, 1/s, at concentrations `here`."""
+    if enzyme.steps:
+        return turnover_rates(enzyme, here)
+    network = Network.of(system)
+    omega = system.compartment.omega
+    rates = network.rates(np.array([omega]))[0]
+    n = np.array([1.0 if s.name == enzyme.name else here.get(s.name, 0.0) * omega for s in system.free_species])
+    factors = network.factors(n, rates, exact=False)
+    (activity,) = enzyme.activities
+    net = 0.0
+    for j, channel in enumerate(network.channels):
+        if network.reactions[channel.reaction] == f"{enzyme.name}.{activity.reaction}":
+            flow = rates[j] * factors[j] * np.prod([n[i] ** k for i, k in channel.reactants])
+            net += channel.direction * float(flow)
+    return {activity.reaction: net}
+
+
 def _dissociation(forward: float, backward: float, binds: str | None, releases: str | None) -> float | None:
     if binds is not None:
         return backward / forward
@@ -137,6 +156,21 @@ def _dissociation(forward: float, backward: float, binds: str | None, releases: 
 
 
 def _activity(enzyme: Enzyme, activity: Activity, turnover: float) -> dict[str, Any]:
+    if not enzyme.steps:  # no mechanism: the constants are what the file states
+        return {
+            "reaction": activity.reaction,
+            "mechanism": activity.mechanism,
+            "direction": "forward" if activity.direction == 1 else "backward",
+            "binds": list(activity.substrates),
+            "releases": list(activity.products),
+            "kcat_per_s": {"stated": activity.kcat_per_s, "from_steps": None},
+            "KM_M": [
+                {"species": name, "stated": stated, "from_steps": None}
+                for name, stated in zip(activity.substrates, activity.KM_M, strict=True)
+            ],
+            "other_way": {"kcat_per_s": None, "KM_M": []},
+            "turnovers_per_s": turnover,
+        }
     there, back = measured_constants(enzyme, activity), measured_constants(enzyme, activity, backward=True)
     return {
         "reaction": activity.reaction,
@@ -168,6 +202,10 @@ def disagreements(facts: list[dict[str, Any]], tolerance: float = 1e-6) -> list[
             pairs = [("kcat", reaction["kcat_per_s"]), *((f"K_M of {k['species']}", k) for k in reaction["KM_M"])]
             for what, pair in pairs:
                 stated, found_value = pair["stated"], pair["from_steps"]
-                if stated is not None and not math.isclose(stated, found_value, rel_tol=tolerance):
+                if (
+                    stated is not None
+                    and found_value is not None
+                    and not math.isclose(stated, found_value, rel_tol=tolerance)
+                ):
                     found.append(f"{enzyme['name']}, {reaction['reaction']}: the steps give {what} = {found_value:.6g}")
     return found

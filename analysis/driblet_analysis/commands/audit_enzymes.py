@@ -13,7 +13,8 @@ def print_enzymes(out: Any, facts: dict[str, Any]) -> None:
         out.print(_amounts(facts["enzymes"]))
         out.print(_constants(facts["enzymes"]))
         for enzyme in facts["enzymes"]:
-            out.print(_steps(enzyme))
+            if enzyme["steps"]:
+                out.print(_steps(enzyme))
         _print_rates(out, facts)
         if facts["lumping"]:
             _print_lumping(out, facts["lumping"])
@@ -56,9 +57,11 @@ def _constants(enzymes: list[dict[str, Any]]) -> Any:
             rows.append([*head, "kcat (/s)", number(kcat["stated"]), number(kcat["from_steps"])])
             for KM in reaction["KM_M"]:
                 stated = None if KM["stated"] is None else KM["stated"] * 1e3
-                rows.append(["", "", f"K_M {KM['species']} (mM)", number(stated), number(KM["from_steps"] * 1e3)])
+                from_steps = None if KM["from_steps"] is None else KM["from_steps"] * 1e3
+                rows.append(["", "", f"K_M {KM['species']} (mM)", number(stated), number(from_steps)])
             other = reaction["other_way"]
-            rows.append(["", "", "reverse kcat (/s)", "–", number(other["kcat_per_s"])])
+            if other["kcat_per_s"] is not None:
+                rows.append(["", "", "reverse kcat (/s)", "–", number(other["kcat_per_s"])])
             for KM in other["KM_M"]:
                 rows.append(["", "", f"K_M {KM['species']} (mM)", "–", number(KM["from_steps"] * 1e3)])
     title = "initial-rate constants: other substrates saturating, no product"

@@ -85,6 +85,23 @@ class EnzymeTable(ActivityTable):
     also: dict[str, ActivityTable] = Field(default_factory=dict)
 
 
+class SaturableTable(Table):
+    """An enzyme without a mechanism."""
+
+    law: Annotated[Literal["saturable"], BeforeValidator(_one_of(("saturable",)))]
+    amount: Annotated[Quantity, BeforeValidator(_enzyme_amount)]
+    catalyses: Text
+    direction: Annotated[Literal["forward", "backward"], BeforeValidator(_one_of(DIRECTIONS))] | None = None
+    kcat: AnyQuantity | None = None
+    activity: AnyQuantity | None = None
+    KM: dict[str, AnyQuantity] = Field(default_factory=dict)
+    loading: Loading | None = None
+    label: Text | None = None
+    molar_mass: MolarMass | None = None
+    active_fraction: Annotated[float, BeforeValidator(_plain(1e-9, 1, "an active fraction"))] = 1.0
+    half_life: Time | None = None
+
+
 class AdditionTable(Table):
     at: Time
     species: Text

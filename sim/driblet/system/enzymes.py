@@ -14,14 +14,16 @@ from typing import NamedTuple
 
 from driblet.errors import Problem
 from driblet.quantities import Quantity, QuantityError
-from driblet.system.enzyme_tables import ActivityTable, EnzymeTable
+from driblet.system.enzyme_tables import ActivityTable, EnzymeTable, SaturableTable
 from driblet.system.equation import RESERVED, Equation
 from driblet.system.expressions import nearest
 from driblet.system.mechanisms import MECHANISMS, ActivitySpec, Assembler, Enzyme, EnzymeStep, MechanismError
 from driblet.system.model import Reaction, Species
+from driblet.system.saturable import MOST_MOLECULES, saturable_enzyme, saturable_reaction
 from driblet.system.tables import read_table
 
 LARGEST_COUNT = 2.0**53
+LUMPED = "lumped"
 SMALLEST_CONSTANT, LARGEST_CONSTANT = (
     1e-30,
     1e30,
@@ -80,6 +82,8 @@ class EnzymeReader:
             self.problems.append(Problem(path, f"is also the name of a species; call the enzyme {name}_enzyme, say"))
         if name in RESERVED:
             self.problems.append(Problem(path, "is a reserved word"))
+        if isinstance(value, Mapping) and "law" in value:
+            return self._saturable(name, value, path, before)
         table = read_table(EnzymeTable, value, path, self.problems)
         if table is None:
             return None
@@ -126,7 +130,51 @@ class EnzymeReader:
             return None
         return self._expand(enzyme, amount, table.loading or self.loading)._replace(treatment=table.treatment)
 
-    def _attempt(self, path: str, key: str, read, table: EnzymeTable):  # type: ignore[no-untyped-def]
+    def _saturable(self, name: str, value: Mapping[str, object], path: str, before: int) -> Expansion | None:
+        """An enzyme without a mechanism: one state, one reaction."""
+        table = read_table(SaturableTable, value, path, self.problems)
+        if table is None:
+            return None
+        try:
+            reaction = self._catalysed(table.catalyses, "catalyses")
+            found = None if reaction is None else self._saturable_constants(table, reaction)
+        except _Fault as fault:
+            self._problem(path, fault.key, fault.text)
+            found = None
+        amount = self._attempt(path, "amount", self._amount, table)
+        if len(self.problems) > before or amount is None or reaction is None or found is None:
+            return None
+        direction, kcat, KM = found
+        facts = {
+            "half_life_s": table.half_life,
+            "active_fraction": table.active_fraction,
+            "molar_mass": table.molar_mass,
+        }
+        enzyme = saturable_enzyme(name, table.label or name, reaction, direction, kcat, KM, **facts)
+        made = self._expand(enzyme, amount, table.loading or self.loading)
+        carried = saturable_reaction(name, reaction, direction, kcat, KM)
+        return made._replace(reactions=(carried, *made.reactions), treatment=LUMPED)
+
+    def _saturable_constants(self, table: SaturableTable, reaction: Reaction) -> tuple[int, float, dict[str, float]]:
+        direction = -1 if table.direction == "backward" else 1
+        sides = (reaction.equation.reactants, reaction.equation.products)[::direction]
+        for terms, what in zip(sides, ("takes", "gives"), strict=True):
+            molecules = sum(number for _, number in terms)
+            if molecules > MOST_MOLECULES:
+                raise _Fault(
+                    "catalyses", f"{reaction.name} {what} {molecules} molecules; a saturable law has at most 2 a side"
+                )
+        if (table.kcat is None) == (table.activity is None):
+            raise _Fault("kcat", "one of kcat and activity is needed")
+        kcat = self._kcat(table, table)
+        ligands = tuple(n for terms in sides for n, _ in terms)
+        KM = self._constants("KM", table.KM, reaction.name, ligands, ())
+        missing = [n for n, _ in sides[0] if n not in KM]
+        if missing:
+            raise _Fault("KM", f"the K_M of {', '.join(missing)} is missing")
+        return direction, kcat, KM
+
+    def _attempt(self, path: str, key: str, read, table: EnzymeTable | SaturableTable):  # type: ignore[no-untyped-def]
         try:
             return read(table)
         except _Fault as fault:
@@ -138,7 +186,7 @@ class EnzymeReader:
     def _problem(self, path: str, key: str, text: str) -> None:
         self.problems.append(Problem(f"{path}.{key}" if key else path, text))
 
-    def _amount(self, table: EnzymeTable) -> tuple[float | None, float | None]:
+    def _amount(self, table: EnzymeTable | SaturableTable) -> tuple[float | None, float | None]:
         """(mol/L, None) or (None, copies) of active enzyme."""
         given = table.amount
         if given.kind == "copies":
@@ -164,18 +212,11 @@ class EnzymeReader:
     def _activity(
         self, name: str, table: ActivityTable, enzyme: EnzymeTable, assembler: Assembler, certain: bool
     ) -> ActivitySpec | None:
-        reaction = self.known.get(name)
+        reaction = self._catalysed(name, "catalyses" if table is enzyme else "")
         if reaction is None:
-            if name not in self.declared:
-                key = "catalyses" if table is enzyme else ""
-                raise _Fault(key, f'"{name}" is not in [reactions]{nearest(name, list(self.declared))}')
             return None
+        assert reaction.K is not None
         equation = reaction.equation
-        if reaction.K is None:
-            raise _Fault("catalyses", f'{name} is one way; an enzyme needs the energy of its reaction: write "<=>"')
-        both = {n for n, _ in equation.reactants} & {n for n, _ in equation.products}
-        if both:
-            raise _Fault("catalyses", f"{', '.join(sorted(both))} stands on both sides of {name}; leave it out of both")
         direction = -1 if table.direction == "backward" else 1
         sides = (equation.reactants, equation.products)[::direction]
         mechanism, substrates, products = self._order(name, table, *sides)
@@ -206,6 +247,21 @@ class EnzymeReader:
         if missing:
             raise _Fault("KM", f"the K_M of {', '.join(missing)} is missing")
         return ActivitySpec(name, mechanism, direction, substrates, products, K, kcat, KM, Kd, table.interaction or 1.0)
+
+    def _catalysed(self, name: str, key: str) -> Reaction | None:
+        """A reaction that an enzyme can catalyse, None for one whose own fault is told elsewhere."""
+        reaction = self.known.get(name)
+        if reaction is None:
+            if name not in self.declared:
+                raise _Fault(key, f'"{name}" is not in [reactions]{nearest(name, list(self.declared))}')
+            return None
+        equation = reaction.equation
+        if reaction.K is None:
+            raise _Fault("catalyses", f'{name} is one way; an enzyme needs the energy of its reaction: write "<=>"')
+        both = {n for n, _ in equation.reactants} & {n for n, _ in equation.products}
+        if both:
+            raise _Fault("catalyses", f"{', '.join(sorted(both))} stands on both sides of {name}; leave it out of both")
+        return reaction
 
     def _order(
         self,
@@ -240,7 +296,7 @@ class EnzymeReader:
             ordered.append(stated or written)
         return table.mechanism, ordered[0], ordered[1]
 
-    def _kcat(self, table: ActivityTable, enzyme: EnzymeTable) -> float:
+    def _kcat(self, table: ActivityTable | SaturableTable, enzyme: EnzymeTable | SaturableTable) -> float:
         if table.kcat is not None:
             return _positive("kcat", table.kcat, table.kcat.to_power, 0, 1)
         assert table.activity is not None
