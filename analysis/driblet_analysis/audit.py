@@ -15,7 +15,9 @@ from driblet.ensemble import sample_times
 from driblet.errors import CannotAnswerError, InputError
 from driblet.lumping import LUMPED
 from driblet.network import BACKWARD, FORWARD, Network
+from driblet.outcomes import when_text
 from driblet.quantities import power_unit
+from driblet.requirements import CompiledRequirements
 from driblet.system import Reaction, System
 from driblet.system.build import stoichiometric_matrix
 from driblet.treatments import with_treatments
@@ -95,9 +97,29 @@ def audit_facts(system: System) -> dict[str, Any]:
         "equilibrium": equilibrium,
         "magnesium": magnesium,
         "buffer": buffer,
+        "requirements": _requirements(system),
         "run": _run_facts(system, _as_treated(system) or course),
         "warnings": warnings,
     }
+
+
+def _requirements(system: System) -> list[dict[str, Any]]:
+    """What a run will judge, and where: after every event, or on its samples for the reason told."""
+    if not system.requirements:
+        return []
+    made, _ = with_treatments(system)
+    compiled = CompiledRequirements.of(made, Network.of(made), system.settings.duration_s)
+    return [
+        {
+            "name": r.name,
+            "must": r.must.text,
+            "when": when_text(r.when, r.averaged_over_s),
+            "share": r.share,
+            "looked_at": looked_at,
+            "reason": compiled.by_grid.get(q),
+        }
+        for q, (r, looked_at) in enumerate(zip(system.requirements, compiled.resolutions(), strict=True))
+    ]
 
 
 def _totals(system: System, copies: dict[str, float]) -> dict[str, float]:

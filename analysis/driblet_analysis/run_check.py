@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.drive import emergent_affinities, is_driven
+from driblet.engines.contract import STOP_CONDITION
 from driblet.errors import CannotAnswerError, one_problem
 from driblet.lumping import LUMPED, treated
 from driblet.network import Network
@@ -51,6 +52,12 @@ def check_run(run: Run, against: System | None = None) -> CheckResult:
     sums = run.sums
     if sums is None:
         return CheckResult("cannot answer", "the run holds no sums of firings and occupancies; run the system again")
+    if (run.end_reason == STOP_CONDITION).any():
+        return CheckResult(
+            "cannot answer",
+            "compartments ended as soon as their requirements were decided, which picks what is averaged; run again "
+            "without --stop-when-decided",
+        )
     network = Network.of(system)
     omega = run.volume_L * system.compartment.omega / system.compartment.volume_L
     firings = sum_firings(sums.window_firings[:, -1], sums.monomial_time.sum(axis=1), network.rates(omega))

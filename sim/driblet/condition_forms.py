@@ -277,7 +277,8 @@ class _Algebra:
         if node.kind == "gibbs":
             return self.energy(self.system.reaction(node.name))
         if node.kind != "total" and node.name in self.estimated:
-            raise NotInFormError(f"the free count of {node.name} is estimated, its enzyme being lumped")
+            text = f"the free count of {node.name} is estimated, its enzyme being lumped; total({node.name}) is counted"
+            raise NotInFormError(text)
         power = -1 if node.kind == "conc" else 0
         total = Polynomial({})
         for name, number in copies_in(self.system, node):

@@ -146,13 +146,13 @@ def run(
     network = Network.of(system)
     if not statistics and settings.record == "summary":
         raise one_problem("run", "statistics", 'record = "summary" keeps nothing else: leave one of the two')
-    looked_at = _requirements(system, network, settings, stop_when_decided)
+    judged = _requirements(system, network, settings, stop_when_decided)
     histograms = settings.record != "trajectories"
     duration_s = float(sample_times(settings)[-1])
     sums = SumsPlan.of(system, network, duration_s, settings.burn_in_s, kept=statistics, histograms=histograms)
     times = sample_times(settings) if settings.record != "summary" else np.array([0.0, settings.duration_s])
     chosen = choose_method(len(network.channels), settings.replicates, settings.record == "events")
-    layout = _layout(system, settings, times, key, sums, method or chosen, looked_at, stop_when_decided, choices)
+    layout = _layout(system, settings, times, key, sums, method or chosen, judged, stop_when_decided, choices)
     path = Path(output) if output is not None else None
     if path is not None and resume and path.is_file():
         existing = Run(path)
@@ -168,8 +168,8 @@ def run(
 
 
 def _requirements(system: System, network: Network, settings: RunSettings, stop_when_decided: bool) -> dict[str, str]:
-    """Where each requirement will be looked at. Raises InputError for spans that do not fit into the run, and for stops that
-    could never come."""
+    """Where each requirement will be looked at, and why on samples only, as provenance keeps it. Raises InputError for spans
+    that do not fit into the run, and for stops that could never come."""
     from driblet.requirements import CompiledRequirements
     from driblet.system.requirements import span_problems
 
@@ -184,7 +184,13 @@ def _requirements(system: System, network: Network, settings: RunSettings, stop_
         q, why = next(iter(compiled.by_grid.items()))
         text = f"cannot be decided before the end: it is judged on samples only ({why})"
         raise one_problem(source, f"requirements.{system.requirements[q].name}", text)
-    return dict(zip((r.name for r in system.requirements), compiled.resolutions(), strict=True))
+    if not system.requirements:
+        return {}
+    names = [r.name for r in system.requirements]
+    kept = {"requirements_looked_at": json.dumps(dict(zip(names, compiled.resolutions(), strict=True)))}
+    if compiled.by_grid:
+        kept["requirements_on_samples"] = json.dumps({names[q]: why for q, why in compiled.by_grid.items()})
+    return kept
 
 
 def _row_bytes(system: System, times: NDArray[np.float64]) -> int:
@@ -200,7 +206,7 @@ def _layout(
     key: int,
     sums: SumsPlan,
     method: str,
-    looked_at: Mapping[str, str],
+    judged: Mapping[str, str],
     stop_when_decided: bool,
     choices: tuple[Choice, ...] = (),
 ) -> Layout:
@@ -225,7 +231,7 @@ def _layout(
     provenance = {
         **facts,
         "method": method,
-        **({"requirements_looked_at": json.dumps(looked_at)} if looked_at else {}),
+        **judged,
         "driblet_version": __version__,
         "numpy_version": np.__version__,
         "numba_version": numba.__version__,

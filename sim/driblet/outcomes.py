@@ -81,7 +81,8 @@ class ShareRow(NamedTuple):
     name, must, when : as in the file; asked : the share it states, or None; share : found, with Wilson's 95 % interval;
     met : whether the share found is the asked one or more, None where none is asked for; certain : whether the interval
     leaves no doubt of it; needed : compartments that would, None where that cannot be said; failing, undecided :
-    compartments; looked_at : EVENT, LEAP or GRID; bound : "", or what the share is instead of exact.
+    compartments; looked_at : EVENT, LEAP or GRID; bound : "", or what the share is instead of exact; why : it was not looked at
+    after every event.
     """
 
     name: str
@@ -96,6 +97,7 @@ class ShareRow(NamedTuple):
     undecided: int
     looked_at: str
     bound: str
+    why: str = ""
 
 
 def shares(run: Run) -> list[ShareRow]:
@@ -124,6 +126,7 @@ def shares(run: Run) -> list[ShareRow]:
                 undecided,
                 looked_at,
                 bound(requirement.when, looked_at),
+                run.requirements_on_samples.get(requirement.name, ""),
             )
         )
     return rows

@@ -17,8 +17,12 @@ from numpy.typing import NDArray
 
 from driblet.errors import one_problem
 from driblet.outcomes import GRID, Outcomes
+from driblet.quantities import copies_per_molar
+from driblet.readouts import evaluate
 from driblet.store import SERIES, digest, open_run, reading
 from driblet.system import System, loads
+from driblet.system.expressions import Names, read_value
+from driblet.system.standard_readouts import standard_readout
 from driblet.treatments import with_treatments
 
 
@@ -184,7 +188,11 @@ class Run:
         return self._read("end_reason")
 
     def readout(self, name: str) -> NDArray[np.float64]:
-        """A readout of the system file, shape=(replicates, times). Raises KeyError for an unknown name."""
+        """A readout of the system file or one by standard name, shape=(replicates, times). Raises KeyError for another."""
+        if name not in self.readout_units and standard_readout(name, [s.name for s in self.system.species]):
+            expression = read_value(name, Names([s.name for s in self.system.species]))
+            omega = copies_per_molar(1.0) * self.volume_L[:, None]
+            return evaluate(self.system, expression, self.counts, omega)
         if name not in self.readout_units:
             raise KeyError(f"{name!r} is not a readout of this run; known: {', '.join(self.readout_units) or 'none'}")
         return self._read(f"readout_{name}")
@@ -203,7 +211,6 @@ class Run:
         return "requirements_looked_at" in self.provenance
 
     def _judged_on_samples(self) -> Outcomes:
-        from driblet.quantities import copies_per_molar
         from driblet.requirements import judge_on_grid
 
         omega = copies_per_molar(1.0) * self.volume_L
@@ -223,6 +230,11 @@ class Run:
         if not self._judged_while_running:
             return {one.name: GRID for one in self.system.requirements}
         return dict(json.loads(str(self.provenance["requirements_looked_at"])))
+
+    @property
+    def requirements_on_samples(self) -> Mapping[str, str]:
+        """The requirements that were judged on samples only, and why."""
+        return dict(json.loads(str(self.provenance.get("requirements_on_samples", "{}"))))
 
     def final_counts(self) -> NDArray[np.int64]:
         """Counts at the end, int64, shape=(replicates, species), without reading the rest."""
@@ -283,11 +295,16 @@ class Run:
         for name, unit in self.readout_units.items():
             data[f"readout_{name}"] = (("replicate", "time"), self.readout(name), {"units": unit})  # type: ignore[assignment]
         data["volume"] = (("replicate",), self.volume_L, {"units": "L"})  # type: ignore[assignment]
+        if self.system.requirements:
+            for field, values in vars(self.outcomes).items():
+                unit = "s" if field.endswith("_s") else "1"
+                data[f"requirement_{field}"] = (("replicate", "requirement"), values, {"units": unit})  # type: ignore[assignment]
         coordinates = {
             "replicate": self.replicate,
             "time": ("time", self.time_s, {"units": "s"}),
             "species": list(self.species),
             "reaction": list(self.reactions),
+            **({"requirement": [r.name for r in self.system.requirements]} if self.system.requirements else {}),
         }
         return xarray.Dataset(data, coords=coordinates, attrs={"title": self.system.title})
 

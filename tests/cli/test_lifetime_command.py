@@ -186,3 +186,59 @@ def test_a_run_without_requirements_cannot_answer(tmp_path: Path, capsys: pytest
     assert "states no requirement" in capsys.readouterr().err
     assert main(["run", str(file), "-o", str(tmp_path / "x.h5"), "--stop-when-decided"]) == 2
     assert "there is no requirement to decide" in capsys.readouterr().err
+
+
+def test_audit_tells_where_a_requirement_will_be_judged(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    file = tmp_path / "a.toml"
+    product = " * ".join(["A"] * 7)
+    file.write_text(SYSTEM.replace("SHARE", "0.7").replace('"per_copy < 1"', f'"{product} > 5"'))
+    assert main(["audit", str(file), "--json"]) == 0
+    alive, rich, _ = json.loads(capsys.readouterr().out)["requirements"]
+    assert (alive["looked_at"], alive["reason"]) == ("event", None)
+    assert rich["looked_at"] == "grid"
+    assert "more than 6 counts" in rich["reason"]
+    assert main(["audit", str(file)]) == 0
+    out = " ".join(capsys.readouterr().out.split())
+    assert "requirement alive: A > 0, throughout, in 70 % of compartments; judged after every event" in out
+    assert "judged on samples only (more than 6 counts multiply)" in out
+
+
+def test_check_does_not_judge_compartments_that_stopped_early(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    file, run_file = tmp_path / "a.toml", tmp_path / "a.h5"
+    text = SYSTEM.replace("SHARE", "0.7")
+    file.write_text(text.split("[requirements.rich]")[0] + "[run]" + text.split("[run]")[1])
+    assert main(["run", str(file), "-o", str(run_file), "--stop-when-decided", "--threads", "1"]) == 0
+    capsys.readouterr()
+    assert main(["check", str(run_file)]) == 3
+    assert "without --stop-when-decided" in " ".join(capsys.readouterr().out.split())
+
+
+def test_the_starter_holds_a_requirement_to_uncomment(tmp_path: Path) -> None:
+    import driblet
+    from driblet.commands.new import STARTER
+
+    lines = STARTER.split("\n")
+    start = lines.index(next(line for line in lines if line.startswith("# [requirements")))
+    lines[start : start + 4] = [line.removeprefix("# ") for line in lines[start : start + 4]]
+    (requirement,) = driblet.loads("\n".join(lines)).requirements
+    assert (requirement.name, requirement.share) == ("enough", 0.95)
+
+
+def test_from_python(runs: dict[str, Path]) -> None:
+    xarray = pytest.importorskip("xarray")
+    from driblet.results import Run
+
+    with Run(runs["0.7"]) as run:
+        data = run.to_xarray()
+        assert list(data["requirement"].values) == ["alive", "rich", "much"]
+        assert data["requirement_met"].dims == ("replicate", "requirement")
+        assert data["requirement_first_failure_s"].attrs["units"] == "s"
+        assert run.readout("A_per_B").shape == run.readout("per_copy").shape
+        with pytest.raises(KeyError):
+            run.readout("energy_charge")
+    with xarray.open_dataset(runs["0.7"], engine="h5netcdf") as opened:
+        assert "counts" in opened
+    with xarray.open_dataset(runs["0.7"], engine="h5netcdf", group="requirements", phony_dims="sort") as opened:
+        assert opened["met"].shape == (150, 3)

@@ -7,6 +7,7 @@ from typing import Any
 
 import click
 
+from driblet.commands.requirement_rows import percent
 from driblet.commands.screen import CAUTION, console, duration, number, print_json, table
 from driblet_analysis.commands.audit_enzymes import print_enzymes
 
@@ -58,6 +59,10 @@ def _print(facts: dict[str, Any]) -> None:
         out.print(f"no equilibrium composition: {equilibrium['reason']}", markup=False)
     elif equilibrium["reason"]:
         out.print(f"no exact finite-count means: {equilibrium['reason']}", markup=False)
+    for one in facts["requirements"]:
+        asked = "" if one["share"] is None else f", in {percent(one['share'])} % of compartments"
+        where = "judged after every event" if one["reason"] is None else f"judged on samples only ({one['reason']})"
+        out.print(f"requirement {one['name']}: {one['must']}, {one['when']}{asked}; {where}", markup=False)
     run = facts["run"]
     if run["duration_s"] is not None:
         out.print(

@@ -42,6 +42,11 @@ forward  = "2000 /M/s"                # the backward rate constant follows from 
 charged = "sugarP / (sugar + sugarP)"
 dG      = "gibbs(transfer)"
 
+# [requirements.enough]               # what must hold, when, in which share of compartments; `driblet lifetime run.h5`
+# must = "charged > 0.5"              # < > <= >=, and, or, not; conc(X) and gibbs(r) compare with a unit: "dG < -2 kJ/mol"
+# when = "at end"                     # or "throughout", "once", "on average"; during = ["1 s", "5 s"]
+# share = 0.95
+
 [run]
 replicates = 200                      # compartments
 duration = "5 s"

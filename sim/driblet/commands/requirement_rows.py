@@ -72,7 +72,8 @@ def requirement_notes(rows: list[ShareRow]) -> list[str]:
             notes.append(f"{row.name}: the interval holds the asked {percent(row.asked or 0.0)} %, so it is open{more}")
         if row.bound in ("upper bound", "lower bound"):
             what = "failures" if row.bound == "upper bound" else "successes"
-            notes.append(f"{row.name}: {what} between two looks go unseen, so the share is {_article(row.bound)}")
+            why = f" ({row.why})" if row.why else ""
+            notes.append(f"{row.name}: {what} between two looks go unseen, so the share is {_article(row.bound)}{why}")
         if row.undecided:
             notes.append(
                 f"{row.name}: {row.undecided} compartments stopped before it was decided; counted as not meeting it"
