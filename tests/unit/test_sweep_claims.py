@@ -14,7 +14,7 @@ from pathlib import Path
 import pytest
 
 from driblet_analysis.sweep import claims
-from driblet_analysis.sweep.claims import STALE_SECONDS, standing_of, standings, take
+from driblet_analysis.sweep.claims import STALE_SECONDS, Pulse, standing_of, standings, take
 
 RACE = """
 import os, sys, time
@@ -150,7 +150,7 @@ def test_a_number_given_to_another_process_is_not_the_owner(tmp_path: Path) -> N
 
 def test_an_owner_elsewhere_is_judged_by_its_signs_of_life(tmp_path: Path) -> None:
     path = _claim_of(tmp_path, host="elsewhere", pid=1)
-    assert standing_of(tmp_path, 7).state == "held"
+    assert standing_of(tmp_path, 7).state == "beating"
     for age, state in ((40, "silent"), (STALE_SECONDS + 5, "free")):
         then = time.time() - age
         os.utime(path, (then, then))
@@ -160,7 +160,20 @@ def test_an_owner_elsewhere_is_judged_by_its_signs_of_life(tmp_path: Path) -> No
 def test_the_clock_of_this_machine_does_not_matter(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     _claim_of(tmp_path, host="elsewhere", pid=1)
     monkeypatch.setattr(time, "time", lambda: 4e9)
-    assert standing_of(tmp_path, 7).state == "held"
+    assert standing_of(tmp_path, 7).state == "beating"
+
+
+def test_a_beat_while_we_watch_ends_the_doubt(tmp_path: Path) -> None:
+    path = _claim_of(tmp_path, host="elsewhere", pid=1)
+    pulse = Pulse()
+    assert pulse.doubtful(7, standing_of(tmp_path, 7))
+    assert pulse.doubtful(7, standing_of(tmp_path, 7))
+    time.sleep(0.01)
+    os.utime(path)
+    assert not pulse.doubtful(7, standing_of(tmp_path, 7))
+    here = take(tmp_path, 8, None)
+    assert not pulse.doubtful(8, standing_of(tmp_path, 8))
+    here.release()
 
 
 def test_a_worker_shows_signs_of_life(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
@@ -179,3 +192,17 @@ def test_a_claim_that_cannot_be_read_is_no_free_shard(tmp_path: Path) -> None:
     path = _claim_of(tmp_path)
     path.write_text("{")
     assert standings(tmp_path)[7].state == "silent"
+
+
+def test_work_waits_for_a_worker_elsewhere_that_may_be_dead(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Its claim falls silent and goes stale while we wait; then its shard is done here."""
+    from driblet_analysis.sweep import make_plan, work, work_locally
+    from tests.sweep_texts import POINTS, write_sweep
+
+    monkeypatch.setattr(claims, "BEAT_SECONDS", 0.5)
+    monkeypatch.setattr(claims, "STALE_SECONDS", 3.0)
+    monkeypatch.setattr(work, "_WAIT_SECONDS", 0.1)
+    directory = tmp_path / "sweep"
+    make_plan(write_sweep(tmp_path), directory)
+    _claim_of(directory, host="elsewhere", pid=1)
+    assert work_locally(directory, workers=1).written == POINTS

@@ -40,13 +40,33 @@ _FILE_NAME = re.compile(r"(\d{6,})\.(\d+)")
 class Standing(NamedTuple):
     """The newest claim on a shard.
 
-    Attributes: generation; state : "held", "silent" (not stale yet), "free" or "done"; suspects : points at which earlier
-    owners died.
+    Attributes: generation; state : "held" (its owner runs on this machine), "beating" (elsewhere, and showed a sign of life
+    lately), "silent" (elsewhere, not stale yet), "free" or "done"; suspects : points at which earlier owners died; beat : time
+    of the last sign of life by the file server's clock, s.
     """
 
     generation: int
     state: str
     suspects: tuple[int, ...]
+    beat: float
+
+    @property
+    def taken(self) -> bool:
+        """Whether a worker seems to be at it."""
+        return self.state in ("held", "beating", "silent")
+
+
+class Pulse:
+    """Tells which claims of workers elsewhere may be those of dead ones: all that have not beaten while we watched."""
+
+    def __init__(self) -> None:
+        self._first: dict[int, float] = {}
+
+    def doubtful(self, shard: int, standing: Standing) -> bool:
+        """Whether a claim may still turn out to be stale."""
+        if standing.state not in ("beating", "silent"):
+            return False
+        return self._first.setdefault(shard, standing.beat) == standing.beat
 
 
 class Claim:
@@ -184,19 +204,19 @@ def _standing(folder: Path, shard: int, generation: int, now: float) -> Standing
         beat = path.stat().st_mtime
         facts = json.loads(path.read_text("utf-8"))
     except (OSError, ValueError):
-        return Standing(generation, "silent", ())  # being replaced at this moment
+        return Standing(generation, "silent", (), now)  # being replaced at this moment
     suspects = tuple(int(s) for s in facts.get("suspects", ()))
     if facts.get("state") in ("released", "done"):
-        return Standing(generation, "done" if facts["state"] == "done" else "free", suspects)
+        return Standing(generation, "done" if facts["state"] == "done" else "free", suspects, beat)
     if isinstance(facts.get("at"), int):
         suspects = (*suspects, facts["at"])
     alive = _alive(facts)
     if alive is None:
         silent = now - beat
-        state = "free" if silent > STALE_SECONDS else "silent" if silent > 2 * BEAT_SECONDS else "held"
+        state = "free" if silent > STALE_SECONDS else "silent" if silent > 2 * BEAT_SECONDS else "beating"
     else:
         state = "held" if alive else "free"
-    return Standing(generation, state, suspects)
+    return Standing(generation, state, suspects, beat)
 
 
 def _server_time(folder: Path) -> float:

@@ -9,14 +9,13 @@ from __future__ import annotations
 import platform
 import secrets
 import threading
-import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
 from driblet.errors import DribletError, InputError, one_problem
-from driblet_analysis.sweep.claims import BEAT_SECONDS, FOLDER, standings
+from driblet_analysis.sweep.claims import FOLDER, Pulse, standings
 from driblet_analysis.sweep.directory import Plan, read_plan
 from driblet_analysis.sweep.files import writing
 from driblet_analysis.sweep.local import Outcome, Progress, Session, repair
@@ -178,14 +177,13 @@ class _Driver:
 
     def _given_up(self) -> list[int]:
         """Shards found in other hands that are free after all: waits while their owners may be dead."""
-        seen = time.monotonic()
+        pulse = Pulse()
         while not self.ended:
-            todo = set(self.session.open_shards()) & self.taken - self.lost
+            todo = sorted(set(self.session.open_shards()) & self.taken - self.lost)
             claimed = standings(self.session.plan.directory)
-            states = {s: claimed[s].state if s in claimed else "free" for s in todo}
-            free = [s for s, state in states.items() if state in ("free", "done")]
-            patience = time.monotonic() - seen < 2 * BEAT_SECONDS + 5.0
-            if free or not any(state == "silent" or patience for state in states.values()):
+            free = [s for s in todo if s not in claimed or not claimed[s].taken]
+            doubtful = [s for s in todo if s in claimed and pulse.doubtful(s, claimed[s])]
+            if free or not doubtful:
                 return free
             self.stop.asked.wait(_POLL_SECONDS)
         return []

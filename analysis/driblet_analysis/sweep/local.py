@@ -10,7 +10,7 @@ import sys
 import threading
 import time
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, NamedTuple
 
@@ -164,7 +164,7 @@ class Session:
         on_disk = self.on_disk()
         left = {s: len(self.plan.shard(s)) - on_disk[s] for s in self.shards}
         claimed = standings(self.plan.directory) if any(left.values()) else {}
-        held = sum(n for s, n in left.items() if s in claimed and claimed[s].state in ("held", "silent"))
+        held = sum(n for s, n in left.items() if s in claimed and claimed[s].taken)
         return Outcome(
             self.done + self.failed, self.failed, sum(left.values()), held, stop.asked.is_set(), tuple(notes)
         )
@@ -176,8 +176,6 @@ class _Child:
     pipe: int
     waiting: bytes = b""
     fault: str = ""
-    points: int = 0
-    extra: dict[str, Any] = field(default_factory=dict)
 
 
 class _Pool:

@@ -63,9 +63,10 @@ def read_status(directory: str | Path) -> Status:
         status.left += left
         standing = claimed.get(shard)
         if standing is not None and left:
-            status.at_work += left if standing.state == "held" else 0
+            at_work = standing.state in ("held", "beating")
+            status.at_work += left if at_work else 0
             status.silent += left if standing.state == "silent" else 0
-            status.workers += standing.state == "held"
+            status.workers += at_work
             suspects.update(s for s in standing.suspects if standing.state == "free" and s not in done)
     status.suspects = sorted(suspects)
     if status.done + status.failed:

@@ -17,7 +17,7 @@ from typing import NamedTuple
 from driblet.ensemble import Progress, run
 from driblet.errors import DribletError, InterruptedRunError
 from driblet.system import System
-from driblet_analysis.sweep.claims import Claim, Standing, standing_of, standings, take
+from driblet_analysis.sweep.claims import Claim, Pulse, Standing, standing_of, standings, take
 from driblet_analysis.sweep.directory import Plan, Point
 from driblet_analysis.sweep.shards import Result, ShardFile, is_complete, shard_files, union, write_results
 from driblet_analysis.sweep.summary import summarise
@@ -123,11 +123,12 @@ class Worker:
     ) -> None:
         self.plan, self.shards, self.stop, self.report, self.retry = plan, shards, stop, report, retry
         self._retried: set[int] = set()
+        self._pulse = Pulse()
 
     def run(self) -> None:
         """Take and do shards. Raises InputError when the directory cannot be written."""
         while not self.stop.asked.is_set():
-            free, silent = self._look()
+            free, doubtful = self._look()
             for shard, standing in free:
                 if self.stop.asked.is_set():
                     return
@@ -136,16 +137,16 @@ class Worker:
                     with claim:
                         self.do(claim)
             if not free:
-                if not silent:
+                if not doubtful:
                     return
                 self.stop.asked.wait(_WAIT_SECONDS)  # a worker elsewhere may be dead: soon its claims tell
 
-    def _look(self) -> tuple[list[tuple[int, Standing | None]], list[int]]:
+    def _look(self) -> tuple[list[tuple[int, Standing | None]], bool]:
         files, claimed = shard_files(self.plan), standings(self.plan.directory)
         fresh: list[tuple[int, Standing | None]] = []
         resumed: list[tuple[int, Standing | None]] = []
         suspect: list[tuple[int, Standing | None]] = []
-        silent: list[int] = []
+        doubtful = False
         for shard in self.shards:
             standing = claimed.get(shard)
             if is_complete(self.plan, shard, files.get(shard, ())) and not self._to_retry(shard):
@@ -154,9 +155,9 @@ class Worker:
                 fresh.append((shard, standing))
             elif standing.state == "free" or (standing.state == "done" and self.retry):
                 (suspect if standing.suspects else resumed).append((shard, standing))
-            elif standing.state == "silent":
-                silent.append(shard)
-        return [*fresh, *resumed, *suspect], silent
+            else:
+                doubtful |= self._pulse.doubtful(shard, standing)
+        return [*fresh, *resumed, *suspect], doubtful
 
     def _to_retry(self, shard: int) -> bool:
         if not self.retry or shard in self._retried:
