@@ -145,7 +145,7 @@ def judged_together(
     times = np.linspace(0.0, system.settings.duration_s, 5)
     samples = new_samples(times, R, len(network.species), len(network.channels))
     recorders = recorders_for(state, requirements=requirements)
-    engine = ExactEngine(network.arrays, len(network.species), method, lanes=8)
+    engine = ExactEngine(network.arrays, len(network.species), None if method == "either" else method, lanes=8)
     look_at_all(requirements, np.arange(R), state.counts.T, 0.0, True)
     while (state.reason == RUNNING).any():
         engine.advance(network.rates(np.full(R, paths[0].omega)), state, samples, budget, recorders)
@@ -494,7 +494,8 @@ def together() -> tuple[System, list[Path], Outcomes]:
 
 
 @pytest.mark.parametrize(
-    ("method", "budget"), [("scalar", 1), ("scalar", 13), ("lanes", 1), ("lanes", 40), ("lanes", 1 << 20)]
+    ("method", "budget"),
+    [("scalar", 1), ("scalar", 13), ("lanes", 1), ("lanes", 40), ("lanes", 1 << 20), ("either", 300)],
 )
 def test_chunks_and_lanes_never_change_an_outcome(
     together: tuple[System, list[Path], Outcomes], method: str, budget: int
@@ -550,3 +551,63 @@ def test_stopping_when_all_is_decided_changes_no_outcome(method: str) -> None:
     np.testing.assert_array_equal(again.judged_until_s, early.judged_until_s)
     other = judged_together(system, paths, method="lanes" if method == "scalar" else "scalar", stop=True)
     np.testing.assert_array_equal(other.judged_until_s, early.judged_until_s)
+
+
+ADDED = """
+[additions.more]
+at = "1 s"
+species = "A"
+amount = "8 copies"
+
+[additions.again]
+at = "1.5 s"
+species = "A"
+amount = "3 copies"
+
+[requirements.few]
+must = "A <= 10"
+when = "throughout"
+
+[requirements.many]
+must = "A > 17"
+when = "once"
+
+[requirements.mean]
+must = "A < 13"
+when = "on average"
+
+[requirements.steps]
+must = "A + B < 18.5"
+when = "throughout"
+averaged_over = "0.4 s"
+"""
+
+
+@pytest.mark.parametrize("method", ["lanes", "scalar"])
+def test_what_is_added_in_mid_run_is_judged_when_it_comes(method: str) -> None:
+    """Ten copies that hardly react, 8 more at 1 s, 3 more at 1.5 s: the mean over 2 s is 10 + 8/2 + 3/4 = 14.75, and the
+    stretch from 1.2 to 1.6 s, which the second addition falls into, averages 18 + 3/4."""
+    system = driblet.loads(changed(SMALL, ('forward = "1 /s"', 'forward = "1e-9 /s"')) + ADDED)
+    got = driblet.run(system, replicates=20, method=method).outcomes
+    np.testing.assert_array_equal(got.met, np.tile([0, 1, 0, 0], (20, 1)))
+    np.testing.assert_allclose(got.first_failure_s[:, 0], 1.0)
+    np.testing.assert_allclose(got.time_met_s[:, 0], 1.0)
+    np.testing.assert_allclose(got.first_met_s[:, 1], 1.0)
+    np.testing.assert_allclose(got.first_failure_s[:, 3], 1.6)
+    np.testing.assert_allclose(got.time_met_s[:, 3], 1.2)
+    looser = driblet.loads(
+        changed(SMALL, ('forward = "1 /s"', 'forward = "1e-9 /s"')) + changed(ADDED, ("A < 13", "A < 14.8"))
+    )
+    assert driblet.run(looser, replicates=3, method=method).outcomes.met[0, 2] == 1
+    early = driblet.run(system, replicates=3, method=method, stop_when_decided=True)
+    assert early.outcomes.met[0].tolist() == [0, 1, 0, 0]
+
+
+def test_a_run_file_holds_the_outcomes_of_a_run_in_memory(tmp_path: Any) -> None:
+    """Blocks go to shards and are merged; every compartment keeps its own outcomes."""
+    system = driblet.loads(RELAY + STOPS)
+    whole = driblet.run(system, replicates=130, seed=5)
+    with driblet.run(system, tmp_path / "run.h5", replicates=130, seed=5, threads=1) as kept:
+        for name in Outcomes.__dataclass_fields__:
+            np.testing.assert_array_equal(getattr(kept.outcomes, name), getattr(whole.outcomes, name))
+        assert kept.requirement_resolution == dict.fromkeys(("full", "seen", "even"), "event")
