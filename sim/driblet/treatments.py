@@ -60,8 +60,9 @@ class LumpingFacts:
         """Where the criteria fail, each with its number."""
         if self.cannot:
             return (self.cannot,)
-        found = []
-        assert self.settling_s is not None
+        found: list[str] = []
+        if self.settling_s is None:
+            return ()  # nobody asked
         if self.ligand_s is not None and self.ligand_s < SETTLED * self.settling_s:
             times = self.ligand_s / self.settling_s
             found.append(
@@ -82,12 +83,13 @@ class LumpingFacts:
 
 @dataclass(frozen=True)
 class Choice:
-    """How one enzyme is treated: what was asked for, what is taken, and the facts behind it."""
+    """How one enzyme is treated: what was asked for, what is taken, the facts behind it, and what the file says."""
 
     enzyme: str
     asked: str
     taken: str
     facts: LumpingFacts
+    stated: str = ELEMENTARY
 
     @property
     def why(self) -> str:
@@ -130,7 +132,7 @@ def with_treatments(
         taken = ask
         if ask == AUTO:
             taken = ELEMENTARY if own.failures else LUMPED
-        choices.append(Choice(enzyme.name, ask, taken, own))
+        choices.append(Choice(enzyme.name, ask, taken, own, dict(system.treatments).get(enzyme.name, ELEMENTARY)))
     made = treated(system, {c.enzyme: c.taken for c in choices})
     doubts = [c.why for c in choices if c.taken == LUMPED and c.facts.failures]
     doubts += _estimates(made)
@@ -295,7 +297,7 @@ def _rapid_equilibrium(enzyme: Enzyme, here: Mapping[str, float], net: list[floa
 
 def treatment_facts(choices: tuple[Choice, ...]) -> dict[str, str]:
     """What a run file keeps of the choices, as JSON under one key; nothing where all enzymes are elementary unasked."""
-    if all(c.asked == c.taken == ELEMENTARY for c in choices):
+    if all(c.asked == c.taken == c.stated == ELEMENTARY for c in choices):
         return {}
     kept = {
         c.enzyme: {

@@ -142,6 +142,13 @@ def test_a_run_keeps_its_treatments_and_its_system_has_them(tmp_path: Path) -> N
         driblet.run(system, tmp_path / "a.h5", resume=True)
 
 
+def test_a_run_against_what_its_file_says_keeps_its_own_system(tmp_path: Path) -> None:
+    system = driblet.loads(TEXT.replace(IN_RUN, IN_RUN + 'treatment = "lumped"\n'))
+    run = driblet.run(system, tmp_path / "a.h5", treatment={"kinase": "elementary"})
+    assert run.treatments == {"kinase": "elementary", "other": "lumped"}
+    assert [s.name for s in run.system.free_species] == list(run.species)
+
+
 def test_requirements_on_totals_are_judged_at_every_event_and_on_free_counts_on_the_grid() -> None:
     system = driblet.loads(TEXT)
     lumped = treated(system, {"kinase": "lumped"})

@@ -14,7 +14,7 @@ def treatment_lines(lumping: Mapping[str, Mapping[str, Any]]) -> list[str]:
     """Lines about the enzymes of a run; lumping : Run.lumping."""
     lines = []
     for fact in lumping.values():
-        if fact["taken"] != fact["asked"] or fact["asked"] == "auto":
+        if fact["asked"] == "auto":
             lines.append(f"{fact['why']} (auto)")
     for name, fact in lumping.items():
         if fact["taken"] != "lumped":

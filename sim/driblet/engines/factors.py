@@ -41,38 +41,48 @@ def most_nodes(network: NetworkArrays) -> int:
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def renew_factors(  # type: ignore[no-untyped-def]
-    channels, rows, leaf, start, parent, species, offset, reactant, shift, constants, counts, scratch, value, pace
-):
-    """Propensities of those of `channels` that have a factor, one replicate.
+def factor_value(first, top, end, parent, species, offset, constants, below_at, above_at, counts, scratch):  # type: ignore[no-untyped-def]
+    """The factor of the channel whose nodes lie from `first` to `end`, those of its numerator before `top`, one replicate.
 
-    channels : int64, any; rows : as factor_rows; leaf : where in `value` a propensity stands; start, parent, species,
-    offset : factor_start and node_* of the network; reactant, shift : of the network; constants : a row of `rates`;
-    scratch : (most nodes + 1,), the first 1; pace : (rows,).
+    parent, species, offset : node_* of the network; constants : a row of `rates`, where coefficients of denominators begin at
+    `below_at` and of numerators at `above_at`; counts : (N + 1,); scratch : (most nodes + 1,), the first 1.
+    """
+    above, below = 0.0, 0.0
+    for t in range(first, end):
+        x = counts[U(species[t])] - offset[t]
+        q = scratch[U(parent[t])] * (x if x > 0.0 else 0.0)
+        scratch[t - first + _ONE] = q
+        below += constants[below_at + t] * q
+        if t < top:
+            above += constants[above_at + t] * q
+    if not below > 0.0:
+        return 0.0
+    return above / below if top > first else 1.0 / below
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
+def renew_factors(  # type: ignore[no-untyped-def]
+    rows, leaf, start, parent, species, offset, reactant, shift, constants, counts, scratch, value, pace
+):
+    """Propensities of all channels that have a factor, one replicate.
+
+    rows : as factor_rows; leaf : where in `value` a propensity stands; start : factor_start; reactant, shift : of the
+    network; pace : (rows,).
     """
     below_at = U(leaf.size)
     above_at = below_at + U(parent.size)
-    for d in channels:
-        j = U(d)
+    for j in range(leaf.size):
         if rows[j] < 0:
             continue
-        own = counts[U(reactant[j, 0])] * (counts[U(reactant[j, 1])] - shift[j, 1])
-        own *= counts[U(reactant[j, 2])] - shift[j, 2]
+        own = counts[reactant[j, 0]] * (counts[reactant[j, 1]] - shift[j, 1])
+        own *= counts[reactant[j, 2]] - shift[j, 2]
         if own > 0.0:
-            first, top = U(start[j, 0]), U(start[j, 1])
-            above, below = 0.0, 0.0
-            for t in range(first, U(start[j, 2])):
-                x = counts[U(species[t])] - offset[t]
-                q = scratch[U(parent[t])] * (x if x > 0.0 else 0.0)
-                scratch[t - first + _ONE] = q
-                below += constants[below_at + t] * q
-                if t < top:
-                    above += constants[above_at + t] * q
-            if top == first:
-                above = 1.0
-            own = own * (above / below) if below > 0.0 else 0.0
+            first, top, end = U(start[j, 0]), U(start[j, 1]), U(start[j, 2])
+            own *= factor_value(
+                first, top, end, parent, species, offset, constants, below_at, above_at, counts, scratch
+            )
         pace[rows[j]] = own
-        value[U(leaf[j])] = constants[j] * own
+        value[leaf[j]] = constants[j] * own
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
@@ -117,7 +127,7 @@ def sum_with_factors(  # type: ignore[no-untyped-def]
         for lane in range(width):
             own_lane = counts[a, lane] * (counts[b, lane] - o) * (counts[c, lane] - p)
             ratio = scratch[above, lane] / scratch[below, lane]
-            own_lane = own_lane * ratio if scratch[below, lane] > 0.0 else 0.0
+            own_lane *= ratio if scratch[below, lane] > 0.0 else 0.0
             pace[f, lane] = own_lane
             sums[row, lane] = sums[before, lane] + rate[j, lane] * own_lane
     for k in range(upper.size):

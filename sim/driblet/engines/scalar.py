@@ -18,7 +18,7 @@ from driblet.engines.contract import (
     STOP_CONDITION,
     TIME_REACHED,
 )
-from driblet.engines.factors import renew_factors
+from driblet.engines.factors import factor_value, renew_factors
 from driblet.engines.judging import (
     END_LEAF,
     FIRST_LEAF,
@@ -162,7 +162,9 @@ def advance_scalar(  # type: ignore[no-untyped-def]
         sums, affected_start, affected = leaf_sum.T[::every], judging.affected_start, judging.affected
     time, edge, next_edge = samples.time, averages.edge, averages.next_edge
     factor, offset, dummy = averages.factor, averages.offset, species
-    all_channels, leaf, scratch = np.arange(rows.leaf.size), rows.leaf, np.ones(nodes + 1)
+    leaf, scratch = rows.leaf, np.ones(nodes + 1)
+    below_at = np.uint64(leaf.size)
+    above_at = below_at + np.uint64(network.node_parent.size)
     start, parent, node, less = network.factor_start, network.node_parent, network.node_species, network.node_offset
     reactant, shift, depend = network.reactant, network.offset, network.depend_channel
     paces = np.zeros((replicates, rows.leaf.size if nodes > 0 else 0))
@@ -177,9 +179,8 @@ def advance_scalar(  # type: ignore[no-untyped-def]
         sum_all(network, rows, constants, counts, value, cumulative)
         if factor_row is not None:
             renew_factors(
-                all_channels, factor_row, leaf, start, parent, node, less, reactant, shift, constants, counts, scratch,
-                value, pace,
-            )  # fmt: skip
+                factor_row, leaf, start, parent, node, less, reactant, shift, constants, counts, scratch, value, pace
+            )
             sum_up(rows, value, cumulative)
         clock = state.clock[r]
         sample = state.next_sample[r]
@@ -256,11 +257,19 @@ def advance_scalar(  # type: ignore[no-untyped-def]
                 d = np.uint64(network.depend_channel[k])
                 value[np.uint64(rows.leaf[d])] = propensity(network, constants[d], counts, d)
             if factor_row is not None:
-                changed = depend[network.depend_start[j] : network.depend_start[j + _ONE]]
-                renew_factors(
-                    changed, factor_row, leaf, start, parent, node, less, reactant, shift, constants, counts, scratch,
-                    value, pace,
-                )  # fmt: skip
+                for k in range(np.uint64(network.depend_start[j]), np.uint64(network.depend_start[j + _ONE])):
+                    d = np.uint64(depend[k])
+                    f = factor_row[d]
+                    if f >= 0:
+                        own = counts[np.uint64(reactant[d, 0])] * (counts[np.uint64(reactant[d, 1])] - shift[d, 1])
+                        own *= counts[np.uint64(reactant[d, 2])] - shift[d, 2]
+                        if own > 0.0:
+                            own *= factor_value(
+                                np.uint64(start[d, 0]), np.uint64(start[d, 1]), np.uint64(start[d, 2]), parent, node, less,
+                                constants, below_at, above_at, counts, scratch,
+                            )  # fmt: skip
+                        pace[f] = own
+                        value[np.uint64(leaf[d])] = constants[d] * own
             refresh_sums(rows, refresh, j, value, cumulative)
             firings[j] += 1
             if judging is not None:
