@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from dataclasses import replace
 from pathlib import Path
 
@@ -9,6 +10,7 @@ import numpy as np
 import pytest
 
 import driblet
+from driblet.commands.main import main
 from driblet.free_counts import estimated_names, free_counts
 from driblet.lumping import treated
 from driblet.network import Network
@@ -254,3 +256,58 @@ def test_bad_treatments_in_a_file() -> None:
 def test_the_option_of_the_command_line() -> None:
     assert read_treatments("lumped") == "lumped"
     assert read_treatments("kinase=lumped, other=auto") == {"kinase": "lumped", "other": "auto"}
+
+
+def test_an_enzyme_of_too_many_states_stays_elementary_or_is_refused() -> None:
+    drugs = [f"d{i}" for i in range(14)]
+    text = TEXT.replace(
+        "[reactions.relay]",
+        "\n".join(f'{d} = {{ amount = "1 uM", held = true }}' for d in drugs) + "\n[reactions.relay]",
+    )
+    text = text.replace('inhibitors.drug = "20 uM"', "\n".join(f'inhibitors.{d} = "20 uM"' for d in drugs))
+    system = driblet.loads(text)
+    _, choices = with_treatments(system, {"kinase": "auto"}, 0.5)
+    assert choices[0].taken == "elementary"
+    assert choices[0].why == (
+        "kinase stays elementary: 19 states are too many to lump; at most 16 are allowed: run it elementary"
+    )
+    with pytest.raises(driblet.InputError, match=r"enzymes\.kinase\.treatment: 19 states are too many to lump"):
+        driblet.run(system, treatment={"kinase": "lumped"})
+
+
+def test_the_command_says_why_and_how_regular_turnovers_are(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    file = tmp_path / "a.toml"
+    text = (
+        TEXT.replace('"20 aL"', '"1 fL"')
+        .replace('"400 copies"', '"40 copies"')
+        .replace('duration = "4 s"', 'duration = "2 s"')
+    )
+    file.write_text(text)
+    output = ["-o", str(tmp_path / "a.h5"), "--replicates", "8"]
+    assert main(["run", str(file), *output, "--treatment", "auto"]) == 0
+    out = " ".join(capsys.readouterr().out.split())
+    assert "kinase is lumped: its states settle in" in out
+    assert "(auto)" in out
+    assert "Variance over mean of net turnovers at the start: relay" in out
+    assert "note: readout free: free ATP estimated from the states of kinase" in out
+    assert main(["show", str(tmp_path / "a.h5")]) == 0
+    assert "kinase lumped" in " ".join(capsys.readouterr().out.split())
+    assert main(["run", str(file), *output, "--force", "--treatment", "kinase=lump"]) == 2
+    assert 'treatment: "lump" is not a treatment; known: elementary, lumped, auto' in capsys.readouterr().err
+
+
+def test_audit_shows_the_criteria(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    file = tmp_path / "a.toml"
+    file.write_text(TEXT)
+    assert main(["audit", str(file)]) == 0
+    out = " ".join(capsys.readouterr().out.split())
+    assert "lumping, at the start" in out
+    assert (
+        "other should not be lumped: it is 17 % of sugarP" in out
+        or "it is 17 % of sugarP, where 5 % are the most" in out
+    )
+    assert main(["audit", str(file), "--json"]) == 0
+    rows = {row["name"]: row for row in json.loads(capsys.readouterr().out)["lumping"]}
+    assert rows["other"]["allowed"] is False
+    assert rows["kinase"]["settling_s"] > 0
+    assert rows["kinase"]["rapid_equilibrium_allowed"] is False
