@@ -17,23 +17,36 @@ from dataclasses import replace
 from numbers import Integral, Real
 from pathlib import Path
 from queue import SimpleQueue
-from typing import Any, NamedTuple
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
+from driblet.engine_choice import EngineChoice, choose_engine
 from driblet.errors import InputError, InterruptedRunError, Problem, one_problem
 from driblet.events import event_arrays
 from driblet.interrupts import noted_interrupts
+from driblet.leap_record import leap_arrays
 from driblet.network import Network
-from driblet.outcomes import Outcomes
+from driblet.outcomes import EVENT, LEAP, Outcomes
 from driblet.results import Run
 from driblet.store import FORMAT, Block, Layout, RunWriter, discard_parts
 from driblet.sums import SumsPlan
 from driblet.system import RunSettings, System
-from driblet.system.tables import ENGINES, LARGEST_SEED, LONGEST_TIME, MOST_REPLICATES, SHORTEST_TIME
+from driblet.system.tables import (
+    ENGINES,
+    LARGEST_SEED,
+    LONGEST_TIME,
+    MOST_REPLICATES,
+    SHORTEST_TIME,
+    TOLERANCES,
+    unknown_engine,
+)
 from driblet.treatments import Choice, treatment_facts, with_treatments
 from driblet.version import __version__
+
+if TYPE_CHECKING:
+    from driblet.packs import Pack, PackRunner
 
 _UNIT_BYTES = 8 << 20
 _POLL_SECONDS = 0.1
@@ -84,7 +97,11 @@ def _check_arguments(given: Mapping[str, object], threads: int | None) -> None:
             text = f"{value!r} will not do: seconds from {SHORTEST_TIME:g} to {LONGEST_TIME:g} are needed"
             problems.append(Problem(argument, text))
     if given.get("engine", "exact") not in ENGINES:
-        problems.append(Problem("engine", f'"{given["engine"]}" is not an engine of this version: "exact" is'))
+        problems.append(Problem("engine", unknown_engine(given["engine"])))
+    tolerance, (least, most) = given.get("leap_tolerance", TOLERANCES[0]), TOLERANCES
+    if isinstance(tolerance, bool) or not isinstance(tolerance, Real) or not least <= float(tolerance) <= most:
+        text = f"{tolerance!r} will not do: a number from {least:g} to {most:g} is needed"
+        problems.append(Problem("leap_tolerance", text))
     if threads is not None and (isinstance(threads, bool) or not isinstance(threads, Integral) or threads < 1):
         problems.append(Problem("threads", f"{threads!r} will not do: a whole number from 1 is needed"))
     if problems:
@@ -100,6 +117,7 @@ def run(
     sample_every: float | None = None,
     seed: int | None = None,
     engine: str | None = None,
+    leap_tolerance: float | None = None,
     burn_in: float | None = None,
     record: str | None = None,
     threads: int | None = None,
@@ -115,10 +133,11 @@ def run(
     """Simulate an ensemble and return it as a Run, in memory or, with `output`, in a run file.
 
     duration, sample_every : s. What is not given is taken from the system's [run]. key : sets the random streams of the
-    points of a sweep apart, 0 to 2^63 - 1. method : "lanes" or "scalar", which kernel of the exact engine runs; left out,
-    the faster one; the bits are the same. treatment : "elementary", "lumped" or "auto", of all enzymes or of some by name,
-    before what the file says. statistics : whether the time integrals that `check` needs are gathered, which
-    adds a third to the time and more. stop_when_decided : a replicate may end when the outcome of every requirement is
+    points of a sweep apart, 0 to 2^63 - 1. engine : "exact", "leap" or "auto"; leap_tolerance : the share by which a
+    reaction's gross rate may be expected to change in one leap. method : "lanes" or "scalar", which kernel of the exact
+    engine runs; left out, the faster one; the bits are the same. treatment : "elementary", "lumped" or "auto", of all enzymes
+    or of some by name, before what the file says. statistics : whether the time integrals that `check` needs are gathered,
+    which adds a third to the time and more. stop_when_decided : a replicate may end when the outcome of every requirement is
     known; its samples then hold the state of that moment to the end. With `resume`, finished replicates of an interrupted
     run are kept; a complete run is returned as it is. Raises InputError for bad settings or an output that is taken,
     InterruptedRunError after Ctrl-C.
@@ -129,12 +148,14 @@ def run(
         "sample_every_s": sample_every,
         "seed": seed,
         "engine": engine,
+        "leap_tolerance": leap_tolerance,
         "burn_in_s": burn_in,
         "record": record,
     }
     given = {k: v for k, v in changes.items() if v is not None}
     _check_arguments(given, threads)
-    plain = {k: v if isinstance(v, str) else float(v) if k.endswith("_s") else int(v) for k, v in given.items()}
+    real = ("duration_s", "sample_every_s", "burn_in_s", "leap_tolerance")
+    plain = {k: v if isinstance(v, str) else float(v) if k in real else int(v) for k, v in given.items()}
     settings = replace(system.settings, **plain)  # type: ignore[arg-type]
     from driblet.engines.exact import METHODS, choose_method
 
@@ -142,17 +163,19 @@ def run(
         raise one_problem("run", "method", f'"{method}" is not a method: "lanes" or "scalar" is')
     if method == "lanes" and settings.record == "events":
         raise one_problem("run", "method", 'events are recorded by "scalar" only')
-    system, choices = with_treatments(system, treatment, float(sample_times(settings)[1]))
+    system, choices = with_treatments(system, treatment, float(sample_times(settings)[1]), settings.engine)
     network = Network.of(system)
+    choice = choose_engine(system, network, settings, key)
     if not statistics and settings.record == "summary":
         raise one_problem("run", "statistics", 'record = "summary" keeps nothing else: leave one of the two')
-    judged = _requirements(system, network, settings, stop_when_decided)
+    judged = _requirements(system, network, settings, stop_when_decided, choice)
     histograms = settings.record != "trajectories"
     duration_s = float(sample_times(settings)[-1])
     sums = SumsPlan.of(system, network, duration_s, settings.burn_in_s, kept=statistics, histograms=histograms)
     times = sample_times(settings) if settings.record != "summary" else np.array([0.0, settings.duration_s])
     chosen = choose_method(len(network.channels), settings.replicates, settings.record == "events")
-    layout = _layout(system, settings, times, key, sums, method or chosen, judged, stop_when_decided, choices)
+    chosen = "leaps" if choice.leaps else method or chosen
+    layout = _layout(system, settings, times, key, sums, chosen, judged, stop_when_decided, choices, choice)
     path = Path(output) if output is not None else None
     if path is not None and resume and path.is_file():
         existing = Run(path)
@@ -163,11 +186,16 @@ def run(
         raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
     writer = RunWriter(path, layout, resume=resume, force=force)
     threads = threads or os.cpu_count() or 1
-    file = _Ensemble(system, settings, layout, writer, sums, threads, on_progress, key, method, stop_when_decided).run()
+    from driblet.packs import PackRunner
+
+    runner = PackRunner(system, settings, layout, sums, key, method, stop_when_decided, choice)
+    file = _Ensemble(runner, layout, writer, threads, on_progress).run()
     return Run(file) if path is None else Run(path)
 
 
-def _requirements(system: System, network: Network, settings: RunSettings, stop_when_decided: bool) -> dict[str, str]:
+def _requirements(
+    system: System, network: Network, settings: RunSettings, stop_when_decided: bool, choice: EngineChoice
+) -> dict[str, str]:
     """Where each requirement will be looked at, and why on samples only, as provenance keeps it. Raises InputError for spans
     that do not fit into the run, and for stops that could never come."""
     from driblet.requirements import CompiledRequirements
@@ -187,7 +215,8 @@ def _requirements(system: System, network: Network, settings: RunSettings, stop_
     if not system.requirements:
         return {}
     names = [r.name for r in system.requirements]
-    kept = {"requirements_looked_at": json.dumps(dict(zip(names, compiled.resolutions(), strict=True)))}
+    looked_at = compiled.resolutions(LEAP if choice.leaps else EVENT)
+    kept = {"requirements_looked_at": json.dumps(dict(zip(names, looked_at, strict=True)))}
     if compiled.by_grid:
         kept["requirements_on_samples"] = json.dumps({names[q]: why for q, why in compiled.by_grid.items()})
     return kept
@@ -208,7 +237,8 @@ def _layout(
     method: str,
     judged: Mapping[str, str],
     stop_when_decided: bool,
-    choices: tuple[Choice, ...] = (),
+    choices: tuple[Choice, ...],
+    choice: EngineChoice,
 ) -> Layout:
     unit = max(1, min(-(-settings.replicates // 64), _UNIT_BYTES // _row_bytes(system, times)))
     unit = 1 << (unit.bit_length() - 1)  # a power of two, so that whole units fill a pack of lanes
@@ -224,6 +254,7 @@ def _layout(
         **({} if sums.kept else {"statistics": False}),
         **({"stop_when_decided": True} if stop_when_decided else {}),
         **treatment_facts(choices),
+        **choice.provenance(),
     }
     identity = hashlib.sha256(json.dumps([FORMAT, system.text, facts], sort_keys=True).encode()).hexdigest()[:32]
     import numba
@@ -253,7 +284,8 @@ def _layout(
         provenance,
         sums.per_replicate
         + (event_arrays() if settings.record == "events" else ())
-        + Outcomes.arrays(len(system.requirements)),
+        + Outcomes.arrays(len(system.requirements))
+        + (leap_arrays() if choice.leaps else ()),
         sums.fixed,
     )
 
@@ -271,21 +303,14 @@ def _cpu_name() -> str:
 class _Ensemble:
     def __init__(
         self,
-        system: System,
-        settings: RunSettings,
+        runner: PackRunner,
         layout: Layout,
         writer: RunWriter,
-        sums: SumsPlan,
         threads: int,
         on_progress: Callable[[Progress], None] | None,
-        key: int = 0,
-        method: str | None = None,
-        stop_when_decided: bool = False,
     ) -> None:
-        from driblet.packs import Pack, PackRunner
-
         self.layout, self.writer, self.threads, self.on_progress = layout, writer, threads, on_progress
-        self.runner = PackRunner(system, settings, layout, sums, key, method, stop_when_decided)
+        self.runner = runner
         self.stop = threading.Event()
         self.blocks: SimpleQueue[Block] = SimpleQueue()
         self.packs: list[Pack] = []

@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from driblet.engine_choice import EngineChoice, leap_engine, leap_rates
 from driblet.engines.contract import (
     COUNT_OVERFLOW,
     REASONS,
@@ -25,8 +26,11 @@ from driblet.engines.contract import (
 )
 from driblet.engines.exact import ExactEngine
 from driblet.engines.lanes import LANES
+from driblet.engines.leap import LeapEngine
+from driblet.engines.leaps import WORK
 from driblet.errors import InterruptedRunError, one_problem
 from driblet.events import EventRecord
+from driblet.leap_record import leap_values
 from driblet.loading import additions_of, prepare
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.readouts import evaluate
@@ -123,13 +127,19 @@ class PackRunner:
         sums: SumsPlan,
         key: int,
         method: str | None,
-        stop_when_decided: bool = False,
+        stop_when_decided: bool,
+        choice: EngineChoice,
     ) -> None:
         self.system, self.settings, self.layout, self.sums, self.key = system, settings, layout, sums, key
         self.network = Network.of(system)
         self.requirements = CompiledRequirements.of(system, self.network, settings.duration_s)
         self.stop_when_decided = stop_when_decided
-        self.engine = ExactEngine(self.network.arrays, len(self.network.species), method)
+        self.engine: ExactEngine | LeapEngine
+        self.turnover = None
+        if choice.leaps:
+            self.engine, self.turnover = leap_engine(system, self.network, choice.tolerance, choice.stiffness)
+        else:
+            self.engine = ExactEngine(self.network.arrays, len(self.network.species), method)
         # a summary keeps two samples, but its covariances are taken from more
         hidden = settings.record == "summary"
         self.time_s = np.unique(np.append(sums.hidden_grid(), 0.0)) if hidden else layout.time_s
@@ -140,12 +150,15 @@ class PackRunner:
         replicates = pack.rows.tolist()
         start = prepare(self.system, self.settings.seed, replicates, self.key)
         rates = self.network.rates(start.omega)
+        if self.turnover is not None:
+            rates = leap_rates(self.network, self.turnover, start.omega)
         species, channels = len(self.network.species), len(self.network.channels)
         state = new_state(start.counts, start.stream, channels)
         samples = new_samples(self.time_s, len(replicates), species, channels)
         added = additions_of(self.system, self.settings.seed, replicates, start.omega, self.key)
         columns = [self.network.species.index(a.species) for a in self.system.additions]
         totals = self.sums.empty(len(replicates))
+        work = np.zeros((len(replicates), WORK)) if isinstance(self.engine, LeapEngine) else None
         log = EventRecord(len(replicates)) if self.settings.record == "events" else None
         judging = self.requirements.recorder(start.omega, self.stop_when_decided)
         if judging is not None:
@@ -168,6 +181,8 @@ class PackRunner:
                     conclude_all(judged, ended.clock)
                 outcomes = self.requirements.outcomes(judged, recorded.counts, self.time_s, start.omega[rows])
                 part.update(outcomes.values())
+                if work is not None:
+                    part.update(leap_values(work[rows]))
                 numbers = (pack.units[k], pack.rows[rows])
                 hand_over(self._block(*numbers, start.omega[rows], start.volume_L[rows], ended, recorded, part))
 
@@ -183,7 +198,10 @@ class PackRunner:
             while (state.reason == RUNNING).any():
                 if stopped():
                     raise InterruptedRunError("interrupted")
-                pack.events += self.engine.advance(rates, state, part, _BUDGET, recorders)
+                if isinstance(self.engine, LeapEngine):
+                    pack.events += self.engine.advance(rates, state, part, _BUDGET, recorders, work)
+                else:
+                    pack.events += self.engine.advance(rates, state, part, _BUDGET, recorders)
                 if log is not None:
                     log.drain(state, recorders)
                 if one_segment:

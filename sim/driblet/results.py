@@ -265,7 +265,7 @@ class Run:
             if files[0]["provenance"].attrs["system_file_sha256"] != digest(text):
                 raise ValueError("the text of the system file has changed")
         system = loads(text, f"system file in {self.name}")
-        return with_treatments(system, self.treatments, float(self.time_s[1]))[0] if system.enzymes else system
+        return with_treatments(system, self.treatments, float(self.time_s[1]), "exact")[0] if system.enzymes else system
 
     @cached_property
     def treatments(self) -> dict[str, str]:

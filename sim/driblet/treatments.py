@@ -113,15 +113,19 @@ def _fine(facts: LumpingFacts) -> str:
 
 
 def with_treatments(
-    system: System, asked: str | Mapping[str, str] | None = None, first_output_s: float | None = None
+    system: System,
+    asked: str | Mapping[str, str] | None = None,
+    first_output_s: float | None = None,
+    engine: str | None = None,
 ) -> tuple[System, tuple[Choice, ...]]:
     """`system` as its file and `asked` say, and the choices behind it; only enzymes with steps have one.
 
     asked : one treatment for all enzymes or some by name, before what the file says; first_output_s : the first time after
-    the start at which something is looked at. A lumping that the criteria advise against is done, with a warning in
+    the start at which something is looked at; engine : the run's, as the file says where None: "auto" decides on enzymes too
+    where neither the file nor the caller says how. A lumping that the criteria advise against is done, with a warning in
     System.warnings. Raises InputError for unknown enzymes or treatments, and for enzymes that cannot be lumped.
     """
-    wanted = _wanted(system, asked)
+    wanted = _wanted(system, asked, AUTO if (engine or system.settings.engine) == AUTO else ELEMENTARY)
     choices = []
     facts = lumping_facts(system, first_output_s) if set(wanted.values()) - {ELEMENTARY} else {}
     for enzyme in system.enzymes:
@@ -139,8 +143,8 @@ def with_treatments(
     return replace(made, warnings=(*made.warnings, *(d for d in doubts if d not in made.warnings))), tuple(choices)
 
 
-def _wanted(system: System, asked: str | Mapping[str, str] | None) -> dict[str, str]:
-    wanted = {e.name: ELEMENTARY for e in system.enzymes}
+def _wanted(system: System, asked: str | Mapping[str, str] | None, unstated: str) -> dict[str, str]:
+    wanted = {e.name: unstated for e in system.enzymes}
     wanted.update(system.treatments)
     by_name = {e.name: asked for e in system.enzymes} if isinstance(asked, str) else dict(asked or {})
     if isinstance(asked, str) and asked not in TREATMENTS:

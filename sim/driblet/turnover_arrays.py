@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -77,7 +78,7 @@ class TurnoverTable:
 
 class _Enzyme:
     def __init__(
-        self, system: System, name: str, pairs: list[int], unit: list[int], free: dict[str, int], held: dict[str, float]
+        self, system: System, name: str, pairs: list[int], unit: list[int], free: Mapping[str, int], held: Mapping[str, float]
     ) -> None:
         enzyme = next(e for e in system.enzymes if e.name == name)
         noise = turnover_noise(enzyme)
@@ -99,7 +100,7 @@ class _Enzyme:
 
 
 def _terms(
-    polynomial: Polynomial, variables: tuple[tuple[str, int], ...], free: dict[str, int], held: dict[str, float]
+    polynomial: Polynomial, variables: tuple[tuple[str, int], ...], free: Mapping[str, int], held: Mapping[str, float]
 ) -> list[tuple[tuple[tuple[int, int], ...], float]]:
     """Each term as its variables (species, molecules held already) and its coefficient, held species multiplied in."""
     found = []

@@ -38,9 +38,9 @@ def draw_independent(f, b, excess, stream, r, k, forward_drawn, backward_drawn):
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def enzyme_noise(
+def enzyme_noise(  # type: ignore[no-untyped-def]
     e, monomial_start, variable_start, species, held, row_start, at, coefficients, counts, activities, J, value, C
-):  # type: ignore[no-untyped-def]
+):
     """C : (A, A), covariance of turnovers per copy and time, 1/s, of enzyme e at `counts` (turnover_noise.py).
 
     at : where its coefficients begin; J : (A,), net turnovers per copy, 1/s; value : scratch, (most rows,).

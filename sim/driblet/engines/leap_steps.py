@@ -29,9 +29,9 @@ def clipped(x):  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def one_pace(
+def one_pace(  # type: ignore[no-untyped-def]
     j, reactant, offset, factored, first, top, end, parent, node, less, constants, below, above, counts, scratch
-):  # type: ignore[no-untyped-def]
+):
     """Propensity of channel j over its constant, also at counts that are not whole; never negative."""
     own = clipped(counts[U(reactant[j, 0])])
     own *= clipped(counts[U(reactant[j, 1])] - offset[j, 1])
@@ -107,9 +107,9 @@ def mark_critical(w, counts, taken_start, taken_species, taken_amount, critical)
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
-def jacobian(
+def jacobian(  # type: ignore[no-untyped-def]
     pair, sense, depend_start, depend_species, slope, critical, touch_start, touch_pair, touch_amount, matrix, pull
-):  # type: ignore[no-untyped-def]
+):
     """matrix : (K, K), of net rates of pairs by net extents of pairs; pull : (N,), rate at which each species alone relaxes.
 
     Returns a bound of the fastest relaxation, 1/s: the smaller of the trace and of the greatest row sum.

@@ -158,7 +158,11 @@ class _Builder:
             enzymes=tuple(e.enzyme for e in expansions),
             stated=stated,
             additions=tuple(additions),
-            treatments=tuple((e.enzyme.name, e.treatment or run.treatment) for e in expansions) if run else (),
+            treatments=tuple(
+                (e.enzyme.name, how) for e in expansions if (how := e.treatment or run.treatment) is not None
+            )
+            if run
+            else (),
         )
 
     def entries(self, name: str) -> Mapping[str, Any]:
@@ -319,7 +323,14 @@ class _Builder:
         if duration and run.burn_in is not None and run.burn_in >= duration:
             self.problem("run.burn_in", "leaves nothing of the run; it is shorter than duration")
         return RunSettings(
-            run.engine, run.replicates, duration, sample_every, run.seed, burn_in_s=run.burn_in, record=run.record
+            run.engine,
+            run.replicates,
+            duration,
+            sample_every,
+            run.seed,
+            burn_in_s=run.burn_in,
+            record=run.record,
+            leap_tolerance=run.leap_tolerance,
         )
 
     def check_rates(self, compartment: Compartment, species: list[Species], reactions: list[Reaction]) -> None:

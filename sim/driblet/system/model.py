@@ -146,7 +146,8 @@ class RunSettings:
     """How a system is run unless the caller says otherwise.
 
     Attributes: burn_in_s : stated time after which a run counts as stationary, None to have it found; record : "summary",
-    "trajectories" or "events", how much the run file keeps.
+    "trajectories" or "events", how much the run file keeps; leap_tolerance : the share by which a reaction's gross rate may
+    be expected to change in one leap.
     """
 
     engine: str = "exact"
@@ -156,6 +157,7 @@ class RunSettings:
     seed: int = 0
     burn_in_s: float | None = None
     record: str = "trajectories"
+    leap_tolerance: float = 0.03
 
 
 @dataclass(frozen=True)

@@ -13,7 +13,8 @@ from driblet.energetics.conditions import PH_SCALES
 from driblet.errors import Problem
 from driblet.quantities import Quantity, QuantityError, example_of, read_quantity
 
-ENGINES = ("exact",)
+ENGINES = ("exact", "leap", "auto")
+TOLERANCES = (0.001, 0.3)  # of leaps
 TREATMENTS = ("elementary", "lumped", "auto")  # of enzymes
 LOADINGS = ("nearest", "poisson")
 RECORDS = ("summary", "trajectories", "events")  # how much a run file keeps
@@ -149,8 +150,21 @@ def _span(value: object) -> tuple[float, float]:
 
 def _engine(value: object) -> object:
     if value not in ENGINES:
-        raise _complain(f'{value!r} is not an engine of this version: "exact" is'.replace("'", '"'))
+        raise _complain(unknown_engine(value))
     return value
+
+
+def unknown_engine(value: object) -> str:
+    """What to say of an engine that is none."""
+    return f'"{value}" is not an engine: "exact", "leap" or "auto" is'
+
+
+def leap_tolerance(value: object) -> float:
+    """A tolerance of leaps. Raises ValueError."""
+    low, high = TOLERANCES
+    if isinstance(value, bool) or not isinstance(value, int | float) or not low <= value <= high:
+        raise _complain(f"{value!r} will not do: a plain number from {low:g} to {high:g} is needed; 0.03 is usual")
+    return float(value)
 
 
 Text = Annotated[str, BeforeValidator(_text)]
@@ -284,7 +298,8 @@ class RunTable(Table):
     record: Annotated[str, BeforeValidator(_one_of(RECORDS))] = "trajectories"
     loading: Loading = "nearest"
     seed: Annotated[int, BeforeValidator(_whole(0, LARGEST_SEED))] = 0
-    treatment: Annotated[str, BeforeValidator(_one_of(TREATMENTS))] = "elementary"
+    treatment: Annotated[str, BeforeValidator(_one_of(TREATMENTS))] | None = None
+    leap_tolerance: Annotated[float, BeforeValidator(leap_tolerance)] = 0.03
 
 
 SECTIONS = (
