@@ -15,7 +15,7 @@ from matplotlib.figure import Figure
 
 import driblet
 from driblet.treatments import LARGEST_SHARE
-from driblet_analysis.compare import compare, quantities
+from driblet_analysis.compare import Way, compare, quantities
 from driblet_analysis.figures import COLOURS, save, style
 
 TEXT = """
@@ -56,7 +56,7 @@ TURNOVERS = 1.2e4  # largest rate of all copies together, /s: the more enzyme, t
 def compared(copies, replicates):
     """Step by step against lumped; the total rate is kept the same."""
     text = TEXT.format(copies=copies, kcat=TURNOVERS / copies)
-    return compare(driblet.loads(text), ("elementary", "lumped"), replicates, 0.5, seed=5)
+    return compare(driblet.loads(text), (Way("elementary"), Way("lumped")), replicates, 0.5, seed=5)
 
 
 few = compared(COPIES[0], 300)

@@ -1,4 +1,4 @@
-"""One system under two treatments: do means, spreads and distributions over compartments agree?
+"""One system simulated in two ways, its enzymes treated or its engine chosen differently: do compartments agree?
 
 Totals of each species (free and bound) and the readouts are compared at several times. Means by Welch's t, variances by
 Welch's t of the distances from the median (Brown & Forsythe, J. Am. Stat. Assoc. 69:364, 1974: right for skewed counts, where
@@ -60,6 +60,13 @@ class Difference(NamedTuple):
         return self.smallest_p, -max(abs(self.t_mean), abs(self.t_variance), 2.0 * self.distance / self.noise)
 
 
+class Way(NamedTuple):
+    """A way to simulate a system: how enzymes are treated, None for as the file says, and the engine."""
+
+    treatment: str | Mapping[str, str] | None = None
+    engine: str = "exact"
+
+
 class Turnovers(NamedTuple):
     """Net turnovers of a reaction by the end: mean and variance over mean, measured and as the enzymes predict at the start."""
 
@@ -71,9 +78,9 @@ class Turnovers(NamedTuple):
 
 @dataclass(frozen=True)
 class Comparison:
-    """What came out. events : of both; runs : both, in memory; replicates : of each."""
+    """What came out. ways : what each is called; events : of both; runs : both, in memory; replicates : of each."""
 
-    treatments: tuple[str, str]
+    ways: tuple[str, str]
     rows: tuple[Difference, ...]
     turnovers: tuple[Turnovers, ...]
     events: tuple[int, int]
@@ -90,7 +97,7 @@ class Comparison:
     @property
     def reason(self) -> str:
         """The verdict in one sentence."""
-        first, second = self.treatments
+        first, second = self.ways
         if not self.rows:
             return "nothing changes in this system, so there is nothing to compare"
         worst = min(self.rows, key=lambda r: r.smallest_p)
@@ -116,20 +123,21 @@ class Comparison:
 
 def compare(
     system: System,
-    treatments: tuple[str | Mapping[str, str], str | Mapping[str, str]],
+    ways: tuple[Way, Way],
     replicates: int,
     duration_s: float,
     seed: int = 0,
     threads: int | None = None,
 ) -> Comparison:
-    """Simulate `replicates` compartments under each treatment, independently, and compare them at TIMES times.
+    """Simulate `replicates` compartments in each way, independently, and compare them at TIMES times.
 
-    Raises InputError for bad treatments or too few replicates.
+    Raises InputError for bad treatments or engines, and for too few replicates.
     """
     if replicates < FEWEST:
         raise one_problem("compare", "replicates", f"{replicates} are too few; at least {FEWEST} of each are needed")
-    if not system.enzymes:
-        raise one_problem(system.source or "compare", "enzymes", "has none, so there are no treatments to compare")
+    if not system.enzymes and ways[0].engine == ways[1].engine:
+        text = "has none, so there are no treatments to compare; engines can be: --engines exact,leap"
+        raise one_problem(system.source or "compare", "enzymes", text)
     made = [
         run(
             system,
@@ -138,17 +146,17 @@ def compare(
             sample_every=duration_s / TIMES,
             seed=seed,
             key=key,
-            treatment=how,
+            treatment=way.treatment if system.enzymes else None,
+            engine=way.engine,
             record="trajectories",
             statistics=False,
             threads=threads,
         )
-        for key, how in enumerate(treatments)
+        for key, way in enumerate(ways)
     ]
     pair = (made[0], made[1])
-    names = tuple(_name(how) for how in treatments)
     return Comparison(
-        (names[0], names[1]),
+        names_of(ways),
         differences(quantities(pair[0]), quantities(pair[1]), pair[0].time_s),
         _turnovers(system, pair),
         (int(pair[0].events.sum()), int(pair[1].events.sum())),
@@ -157,8 +165,19 @@ def compare(
     )
 
 
-def _name(treatment: str | Mapping[str, str]) -> str:
-    return treatment if isinstance(treatment, str) else ", ".join(f"{n} {how}" for n, how in treatment.items())
+def names_of(ways: tuple[Way, Way]) -> tuple[str, str]:
+    """What to call two ways: by what sets them apart."""
+    by_engine = ways[0].engine != ways[1].engine
+    by_treatment = ways[0].treatment != ways[1].treatment
+
+    def name(way: Way) -> str:
+        how = way.treatment or "as in the file"
+        treatment = how if isinstance(how, str) else ", ".join(f"{n} {t}" for n, t in how.items())
+        engine = {"leap": "leaps"}.get(way.engine, way.engine)
+        told = [part for part, differs in ((treatment, by_treatment), (engine, by_engine)) if differs]
+        return ", ".join(told or [treatment if way.treatment else engine])
+
+    return name(ways[0]), name(ways[1])
 
 
 def quantities(one: Run) -> dict[str, Array]:

@@ -27,7 +27,7 @@ def compare_figure(result: Comparison) -> Figure:
         grid = figure.subplots(rows, 2, squeeze=False, width_ratios=(1.5, 1.0))
         for (left, right), name, row in zip(grid, names, ranked, strict=False):
             for which, values in enumerate((first[name], second[name])):
-                _course(left, time_s / divisor, values, COLOURS[which], result.treatments[which], dashed=which == 1)
+                _course(left, time_s / divisor, values, COLOURS[which], result.ways[which], dashed=which == 1)
             left.set_ylabel(name)
             left.yaxis.set_major_locator(MaxNLocator(4))
             _end(right, first[name][:, -1], second[name][:, -1])
@@ -38,7 +38,7 @@ def compare_figure(result: Comparison) -> Figure:
         grid[0, 0].legend(loc="best")
         grid[-1, 0].set_xlabel(f"time ({unit})")
         grid[-1, 1].set_xlabel("value at the end")
-        figure.suptitle(f"{result.treatments[1]} against {result.treatments[0]}: {result.verdict}", fontsize=11)
+        figure.suptitle(f"{result.ways[1]} against {result.ways[0]}: {result.verdict}", fontsize=11)
     return figure
 
 

@@ -25,7 +25,7 @@ from driblet.loading import prepare
 from driblet.lumping import treated
 from driblet.network import Network
 from driblet.quantities import read_quantity
-from driblet_analysis.compare import at_volume, compare
+from driblet_analysis.compare import Way, at_volume, compare
 
 FILE = Path(__file__).parents[2] / "configs" / "lumped_vesicle.toml"
 LANES = 64
@@ -87,7 +87,9 @@ def speed(rounds: int) -> None:
 
 def bias(replicates: int, volume_L: float, duration_s: float, seed: int) -> int:
     """Print the comparison; returns 1 where a test departs."""
-    result = compare(at_volume(driblet.load(FILE), volume_L), ("elementary", "lumped"), replicates, duration_s, seed)
+    result = compare(
+        at_volume(driblet.load(FILE), volume_L), (Way("elementary"), Way("lumped")), replicates, duration_s, seed
+    )
     print(f"{result.verdict}: {result.reason}")
     print("worst of each quantity: t of the mean, t of the spread, Kolmogorov distance (exceeded by chance in 5 %)")
     for row in result.worst():

@@ -99,7 +99,7 @@ def test_run_refuses_to_overwrite_and_force_replaces(
         (["run", str(SYSTEM), "--replicates", "0"], "0 is not in the range"),
         (["run", str(SYSTEM), "--duration", "5"], "has no unit"),
         (["run", str(SYSTEM), "--duration", "5 mM"], "a time is needed"),
-        (["run", str(SYSTEM), "--engine", "leap", "-o", "x.h5"], '"leap" is not an engine of this version'),
+        (["run", str(SYSTEM), "--engine", "quick", "-o", "x.h5"], '"quick" is not an engine'),
         (["run", str(SYSTEM), "--force", "--resume"], "give one of them"),
         (["check", str(SYSTEM)], "is a system file, not a run file: `driblet run"),
         (["show", "missing.h5"], "missing.h5: cannot be read"),

@@ -106,7 +106,7 @@ ONE_FAULT: list[tuple[str, str, str, str]] = [
     ("replicates = 3", "replicates = true", "run.replicates", "a whole number from 1"),
     ("seed = 1", "seed = -1", "run.seed", "a whole number from 0"),
     ("seed = 1", f"seed = {2**64}", "run.seed", "a whole number from 0"),
-    ("seed = 1", 'seed = 1\nengine = "quick"', "run.engine", "is not an engine of this version"),
+    ("seed = 1", 'seed = 1\nengine = "quick"', "run.engine", "is not an engine"),
     ("seed = 1", 'seed = 1\nloading = "some"', "run.loading", '"nearest" or "poisson"'),
     # names
     ('title = "small"', "titel = 1", "titel", 'did you mean "title"?'),

@@ -9,7 +9,7 @@ import pytest
 from scipy.stats import chi2
 
 import driblet
-from driblet_analysis.compare import Comparison, at_volume, compare
+from driblet_analysis.compare import Comparison, Way, at_volume, compare
 
 FILE = Path(__file__).parents[2] / "configs" / "lumped_vesicle.toml"
 VOLUME = 0.02e-15
@@ -17,7 +17,7 @@ VOLUME = 0.02e-15
 
 def compared(replicates: int, duration_s: float, text: str = "") -> Comparison:
     system = driblet.loads(text) if text else driblet.load(FILE)
-    return compare(at_volume(system, VOLUME), ("elementary", "lumped"), replicates, duration_s, seed=11)
+    return compare(at_volume(system, VOLUME), (Way("elementary"), Way("lumped")), replicates, duration_s, seed=11)
 
 
 def test_nothing_shows_in_two_hundred_compartments() -> None:

@@ -10,7 +10,7 @@ from scipy.stats import ks_2samp
 
 import driblet
 from driblet.commands.main import main
-from driblet_analysis.compare import at_volume, compare, differences, kolmogorov_distance
+from driblet_analysis.compare import Way, at_volume, compare, differences, kolmogorov_distance
 
 TEXT = """
 title = "Buffer"
@@ -51,7 +51,7 @@ def system(copies: int) -> driblet.System:
 
 def test_a_rare_enzyme_agrees_and_fires_far_less() -> None:
     """False-alarm rate: 5 % for all tests of a comparison together."""
-    result = compare(system(1), ("elementary", "lumped"), 150, 1.0, seed=2)
+    result = compare(system(1), (Way("elementary"), Way("lumped")), 150, 1.0, seed=2)
     assert result.verdict == "consistent"
     assert result.events[0] > 20 * result.events[1]
     assert {row.quantity for row in result.rows} == {
@@ -68,7 +68,7 @@ def test_a_rare_enzyme_agrees_and_fires_far_less() -> None:
 
 
 def test_twin_an_enzyme_that_holds_a_third_of_its_ligand_is_seen() -> None:
-    result = compare(system(100), ("elementary", "lumped"), 100, 0.5, seed=2)
+    result = compare(system(100), (Way("elementary"), Way("lumped")), 100, 0.5, seed=2)
     assert result.verdict == "inconsistent"
     assert "is not elementary here" in result.reason
 

@@ -75,7 +75,7 @@ def test_the_file_may_say_it_for_all_or_for_one() -> None:
     both = driblet.loads(TEXT.replace(IN_RUN, IN_RUN + 'treatment = "lumped"\n'))
     assert dict(both.treatments) == {"kinase": "lumped", "other": "lumped"}
     one = driblet.loads(TEXT.replace('half_life = "1 h"', 'half_life = "1 h"\ntreatment = "auto"'))
-    assert dict(one.treatments) == {"kinase": "elementary", "other": "auto"}
+    assert dict(one.treatments) == {"other": "auto"}
     made, choices = with_treatments(one, None, 0.5)
     assert [(c.asked, c.taken) for c in choices] == [("elementary", "elementary"), ("auto", "elementary")]
     assert choices[1].why.startswith("other stays elementary: ")

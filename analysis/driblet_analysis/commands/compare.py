@@ -1,4 +1,4 @@
-"""`driblet compare`: one system under two treatments, tested against each other."""
+"""`driblet compare`: one system simulated in two ways, tested against each other."""
 
 from __future__ import annotations
 
@@ -29,15 +29,14 @@ def volume_option(ctx: click.Context, param: click.Parameter, value: str | None)
     return float(volume)
 
 
-@click.command(short_help="Hold one treatment of a system's enzymes against another.")
+@click.command(short_help="Hold one way to simulate a system against another.")
 @click.argument("file", type=click.Path(path_type=Path))
 @click.option(
     "--treatments",
-    default="elementary,lumped",
-    show_default=True,
     metavar="A,B",
-    help='Two of "elementary", "lumped", "auto".',
+    help='Two of "elementary", "lumped", "auto"; default: elementary,lumped, or with --engines as FILE says.',
 )
+@click.option("--engines", metavar="A,B", help='Two of "exact", "leap", "auto"; default: exact,exact.')
 @click.option("--volume", callback=volume_option, metavar="VOLUME", help='Of one compartment, such as "0.02 fL".')
 @click.option("--duration", callback=time_option, metavar="TIME", help="Simulated time; default: as FILE says.")
 @click.option("--replicates", type=click.IntRange(20, 1_000_000), help=f"Of each; default: {REPLICATES}.")
@@ -47,7 +46,8 @@ def volume_option(ctx: click.Context, param: click.Parameter, value: str | None)
 @click.option("--json", "as_json", is_flag=True, help="Print the result as JSON.")
 def compare(
     file: Path,
-    treatments: str,
+    treatments: str | None,
+    engines: str | None,
     volume: float | None,
     duration: float | None,
     replicates: int | None,
@@ -56,19 +56,17 @@ def compare(
     output: Path | None,
     as_json: bool,
 ) -> int:
-    """Simulate the system in FILE with its enzymes treated in two ways, and test whether the counts agree.
+    """Simulate the system in FILE in two ways, its enzymes treated or its engine chosen, and test whether the counts agree.
 
     At ten times the mean, the variance and the distribution of each species' total and each readout are compared over
     compartments, all tests corrected together. A smaller --volume keeps concentrations and makes step-by-step simulation
-    affordable; a short --duration too. Exit status 0: no departure; 1: one departs; 3: nothing to compare. Treatments
+    affordable; a short --duration too. Exit status 0: no departure; 1: one departs; 3: nothing to compare. Ways
     that agree are told apart in at most 5 % of cases.
     """
     from driblet.system import load
     from driblet_analysis import compare as comparing
 
-    pair = tuple(part.strip() for part in treatments.split(","))
-    if len(pair) != 2:
-        raise click.UsageError(f'--treatments: "{treatments}" is not two of them, such as elementary,lumped')
+    ways = _ways(treatments, engines)
     system = load(file)
     if volume is not None:
         system = comparing.at_volume(system, volume)
@@ -77,7 +75,7 @@ def compare(
         raise one_problem(str(file), "run.duration", "is missing: state it there or with --duration")
     result = comparing.compare(
         system,
-        (pair[0], pair[1]),
+        ways,
         replicates or REPLICATES,
         span,
         system.settings.seed if seed is None else seed,
@@ -97,12 +95,33 @@ def compare(
     return EXIT[result.verdict]
 
 
+def _ways(treatments: str | None, engines: str | None) -> Any:
+    """The two ways that the options ask for."""
+    from driblet_analysis.compare import Way
+
+    if treatments is None and engines is None:
+        treatments = "elementary,lumped"
+    hows: list[str | None] = (
+        [None, None] if treatments is None else [*_two("--treatments", treatments, "elementary,lumped")]
+    )
+    chosen = ["exact", "exact"] if engines is None else _two("--engines", engines, "exact,leap")
+    return tuple(Way(how, engine) for how, engine in zip(hows, chosen, strict=True))
+
+
+def _two(option: str, text: str, example: str) -> list[str]:
+    pair = [part.strip() for part in text.split(",")]
+    if len(pair) != 2:
+        raise click.UsageError(f'{option}: "{text}" is not two of them, such as {example}')
+    return pair
+
+
 def _facts(file: Path, result: Any) -> dict[str, Any]:
     from driblet_analysis.compare import FALSE_ALARM_RATE
 
     return {
         "file": str(file),
-        "treatments": list(result.treatments),
+        "ways": list(result.ways),
+        "engines": [str(run.provenance.get("engine_taken", "exact")) for run in result.runs],
         "verdict": result.verdict,
         "reason": result.reason,
         "false_alarm_rate": FALSE_ALARM_RATE,
@@ -117,9 +136,12 @@ def _print(result: Any) -> None:
     out = console()
     out.print(f"{result.verdict}: ", style="bold", end="")
     out.print(result.reason, markup=False, soft_wrap=True)
-    first, second = result.treatments
-    if result.events[1]:
-        ratio = result.events[0] / result.events[1]
+    first, second = result.ways
+    for run in result.runs:
+        if run.provenance.get("engine_why"):
+            out.print(str(run.provenance["engine_why"]), markup=False, soft_wrap=True)
+    ratio = result.events[0] / result.events[1] if result.events[1] else 1.0
+    if not 0.8 < ratio < 1.25:
         out.print(f"{first} fires {number(ratio, 3)} times the events of {second}", markup=False)
     if result.rows:
         rows = [
