@@ -9,9 +9,38 @@ from __future__ import annotations
 
 import signal
 import threading
+import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from types import FrameType
+
+
+class Flag:
+    """Raised once, by a signal handler or a thread, and looked at by others.
+
+    threading.Event will not do: it holds a lock while it is set or waited for, and a second signal in that moment, whose
+    handler runs on top of the first one's, waits for that lock for ever.
+    """
+
+    _SLICE_SECONDS = 0.05
+
+    def __init__(self) -> None:
+        self._up = False
+
+    def is_set(self) -> bool:
+        """Whether it was raised."""
+        return self._up
+
+    def set(self) -> None:
+        """Raise it."""
+        self._up = True
+
+    def wait(self, seconds: float) -> bool:
+        """Wait until it is raised, `seconds` at most; returns whether it was."""
+        limit = time.monotonic() + seconds
+        while not self._up and (left := limit - time.monotonic()) > 0:
+            time.sleep(min(left, self._SLICE_SECONDS))
+        return self._up
 
 
 @contextmanager
@@ -20,7 +49,7 @@ def noted_interrupts() -> Iterator[Callable[[], bool]]:
 
     Nothing is changed outside the main thread, or where a caller handles the signal itself.
     """
-    pressed = threading.Event()
+    pressed = Flag()
     ours = (
         threading.current_thread() is threading.main_thread()
         and signal.getsignal(signal.SIGINT) is signal.default_int_handler

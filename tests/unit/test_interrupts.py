@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import signal
+import subprocess
+import sys
 import threading
 from collections.abc import Iterator
 
@@ -76,3 +78,48 @@ def test_ctrl_c_while_the_last_file_is_written_is_not_lost(tmp_path, monkeypatch
     assert driblet.Run(path).complete
     with pytest.raises(driblet.InterruptedRunError, match="in memory"):
         driblet.run(system)
+
+
+SECOND_SIGNAL_IN_THE_HANDLER_OF_THE_FIRST = """
+import faulthandler, signal, sys, threading
+from driblet_analysis.sweep.work import stopping_on_signals
+
+sent = 0
+
+def trace(frame, event, argument):
+    global sent
+    if frame.f_code.co_name in ("__call__", "set", "is_set", "wait") and event == "line" and sent < {sent}:
+        sent += 1
+        if sent == {sent}:
+            signal.raise_signal(signal.SIGUSR1)
+    return trace
+
+with stopping_on_signals() as stop:
+    {twin}
+    faulthandler.dump_traceback_later(5, exit=True)  # a dead lock ends here
+    sys.settrace(trace)
+    try:
+        signal.raise_signal(signal.SIGTERM)
+    except KeyboardInterrupt:
+        pass  # the second one strikes
+    sys.settrace(None)
+    assert sent == {sent}, sent
+    print("stopped", stop.asked.is_set())
+"""
+
+
+def _stopped_twice(line: int, twin: str = "pass") -> str:
+    """What comes of a second signal at the given line of the handler of the first: as Slurm sends them, or an impatient user."""
+    code = SECOND_SIGNAL_IN_THE_HANDLER_OF_THE_FIRST.format(sent=line, twin=twin)
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, timeout=60, check=False)
+    return "hung" if "Timeout (" in done.stderr else done.stdout
+
+
+def test_a_second_signal_in_the_middle_of_the_first_does_not_hang() -> None:
+    for line in (1, 2, 3, 4, 5):
+        assert _stopped_twice(line) == "stopped True\n"
+
+
+def test_with_an_event_of_the_threading_module_it_would() -> None:
+    """Broken twin: at some line of Event.set the second handler waits for a lock that the first one holds."""
+    assert _stopped_twice(6, "stop.asked = threading.Event()") == "hung"

@@ -188,10 +188,18 @@ def test_a_worker_shows_signs_of_life(tmp_path: Path, monkeypatch: pytest.Monkey
     claim.release()
 
 
-def test_a_claim_that_cannot_be_read_is_no_free_shard(tmp_path: Path) -> None:
+@pytest.mark.parametrize("text", ["", "{", "[1]", "\x00\x00\x00"])
+def test_a_claim_that_cannot_be_read_is_judged_by_its_age(tmp_path: Path, text: str) -> None:
+    """As a power cut leaves it: its owner may be alive for a while, and is not for ever."""
     path = _claim_of(tmp_path)
-    path.write_text("{")
-    assert standings(tmp_path)[7].state == "silent"
+    path.write_text(text)
+    assert standings(tmp_path)[7].state == "beating"
+    old = time.time() - STALE_SECONDS - 60
+    os.utime(path, (old, old))
+    assert standings(tmp_path)[7].state == "free"
+    taken = take(tmp_path, 7, standing_of(tmp_path, 7))
+    assert taken is not None
+    taken.release()
 
 
 def test_work_waits_for_a_worker_elsewhere_that_may_be_dead(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
@@ -205,4 +213,8 @@ def test_work_waits_for_a_worker_elsewhere_that_may_be_dead(tmp_path: Path, monk
     directory = tmp_path / "sweep"
     make_plan(write_sweep(tmp_path), directory)
     _claim_of(directory, host="elsewhere", pid=1)
-    assert work_locally(directory, workers=1).written == POINTS
+    waits: list[str] = []
+    outcome = work_locally(directory, workers=1, on_progress=lambda progress: waits.append(progress.waiting))
+    assert outcome.written == POINTS
+    assert any("workers elsewhere that may be dead" in text for text in waits)
+    assert waits[-1] == ""

@@ -213,9 +213,17 @@ def _show_outcome(outcome: Outcome, directory: Path) -> int:
 
 @contextmanager
 def _bar() -> Iterator[Any]:
-    """A progress bar on a terminal; yields what takes the reports."""
+    """A progress bar on a terminal, elsewhere a line for what is waited for; yields what takes the reports."""
     if not sys.stderr.isatty():
-        yield None
+        told: set[str] = set()
+
+        def tell(progress: Any) -> None:
+            kind = re.sub(r"\d+", "", progress.waiting)  # one line, however the number of shards falls
+            if kind and kind not in told:
+                told.add(kind)
+                print(f"waiting: {progress.waiting}", file=sys.stderr, flush=True)
+
+        yield tell
         return
     from rich.console import Console
     from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
@@ -233,6 +241,8 @@ def _bar() -> Iterator[Any]:
 
         def update(progress: Any) -> None:
             detail = f"{progress.workers} workers" + (f", {progress.failed} failed" if progress.failed else "")
+            if progress.waiting:
+                detail = f"waiting: {progress.waiting}"
             bar.update(task, total=progress.total, completed=progress.done, detail=detail)
 
         yield update

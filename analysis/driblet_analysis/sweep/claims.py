@@ -69,6 +69,14 @@ class Pulse:
         return self._first.setdefault(shard, standing.beat) == standing.beat
 
 
+def in_doubt(shards: int) -> str:
+    """What is waited for while workers elsewhere may be dead, in words."""
+    return (
+        f"{shards} shards are with workers elsewhere that may be dead; they are taken over "
+        f"{STALE_SECONDS:g} s after the last sign of life"
+    )
+
+
 class Claim:
     """A shard that this worker holds; a thread shows signs of life until it is released. Use as a context manager."""
 
@@ -202,10 +210,10 @@ def _standing(folder: Path, shard: int, generation: int, now: float) -> Standing
     path = folder / f"{shard:06d}.{generation}"
     try:
         beat = path.stat().st_mtime
-        facts = json.loads(path.read_text("utf-8"))
-    except (OSError, ValueError):
+        facts = _facts(path.read_text("utf-8", "replace"))
+    except OSError:
         return Standing(generation, "silent", (), now)  # being replaced at this moment
-    suspects = tuple(int(s) for s in facts.get("suspects", ()))
+    suspects = tuple(s for s in facts.get("suspects", ()) if isinstance(s, int))
     if facts.get("state") in ("released", "done"):
         return Standing(generation, "done" if facts["state"] == "done" else "free", suspects, beat)
     if isinstance(facts.get("at"), int):
@@ -217,6 +225,15 @@ def _standing(folder: Path, shard: int, generation: int, now: float) -> Standing
     else:
         state = "held" if alive else "free"
     return Standing(generation, state, suspects, beat)
+
+
+def _facts(text: str) -> dict[str, Any]:
+    """What a claim says; nothing where a power cut has left it empty or torn, so that its age alone decides."""
+    try:
+        facts = json.loads(text)
+    except ValueError:
+        return {}
+    return facts if isinstance(facts, dict) else {}
 
 
 def _server_time(folder: Path) -> float:

@@ -23,17 +23,23 @@ from driblet_analysis.sweep.work import Stop, Worker, Written
 
 _MOST_DEATHS = 3  # in a row, without a point written in between
 _STOP_SECONDS = 60.0
+_SAY_SECONDS = 3.0
 _STOPPED = 130
 
 
 class Progress(NamedTuple):
-    """Where the work stands. Attributes: done, failed : points on disk, of those asked for; total; seconds; workers."""
+    """Where the work stands.
+
+    Attributes: done, failed : points on disk, of those asked for; total; seconds; workers; waiting : what is waited for, in
+    words, while nothing can be done.
+    """
 
     done: int
     failed: int
     total: int
     seconds: float
     workers: int
+    waiting: str = ""
 
 
 class Outcome(NamedTuple):
@@ -89,7 +95,7 @@ def work_locally(
     number = min(workers or cores(), max(1, len(session.shards_to_do(retry))))
     if number == 1:
         session.workers = 1
-        Worker(plan, shards, stop, session.written_report, retry).run()
+        Worker(plan, shards, stop, session.written_report, retry, session.waiting_for).run()
     elif shards:
         notes += _Pool(session, number, part, retry, stop).run()
     return session.outcome(stop, notes)
@@ -126,6 +132,7 @@ class Session:
         self.total = sum(len(plan.shard(s)) for s in shards)
         self.before = sum(self.on_disk().values())
         self.done = self.failed = self.workers = 0
+        self.waiting = ""
         self.started = time.monotonic()
         self.tell()
 
@@ -151,13 +158,20 @@ class Session:
         """Take in what a worker has made safe."""
         self.done += report.done
         self.failed += report.failed
+        self.waiting = ""
+        self.tell()
+
+    def waiting_for(self, text: str) -> None:
+        """Say what is waited for."""
+        self.waiting = text
         self.tell()
 
     def tell(self) -> None:
         """Report progress."""
         if self.on_progress is not None:
             done = min(self.before + self.done, self.total)
-            self.on_progress(Progress(done, self.failed, self.total, time.monotonic() - self.started, self.workers))
+            seconds = time.monotonic() - self.started
+            self.on_progress(Progress(done, self.failed, self.total, seconds, self.workers, self.waiting))
 
     def outcome(self, stop: Stop, notes: Sequence[str]) -> Outcome:
         """How it ended, by what is on disk."""
@@ -237,6 +251,8 @@ class _Pool:
             message = json.loads(line)
             if "fault" in message:
                 child.fault = message["fault"]
+            elif "waiting" in message:
+                self.session.waiting_for(message["waiting"])
             else:
                 self.deaths = 0
                 self.session.written_report(Written(**message))
@@ -272,7 +288,11 @@ class _Pool:
             self.told_to_stop = time.monotonic()
             for child in self.children.values():
                 child.process.terminate()
-        elif time.monotonic() - self.told_to_stop > _STOP_SECONDS:
+        elif time.monotonic() - self.told_to_stop < _STOP_SECONDS:
+            if time.monotonic() - self.told_to_stop > _SAY_SECONDS:
+                text = f"{len(self.children)} workers are told to stop; what has not after {_STOP_SECONDS:g} s is ended"
+                self.session.waiting_for(text)
+        else:
             for child in self.children.values():
                 child.process.kill()
 
@@ -302,7 +322,14 @@ def run_child() -> None:
         try:
             plan = read_plan(facts["directory"])
             shards = shards_of_part(plan, tuple(facts["part"]) if facts["part"] else None)
-            Worker(plan, shards, stop, lambda written: send(written._asdict()), facts["retry"]).run()
+            Worker(
+                plan,
+                shards,
+                stop,
+                lambda written: send(written._asdict()),
+                facts["retry"],
+                lambda text: send({"waiting": text}),
+            ).run()
         except KeyboardInterrupt:
             stop.asked.set()
         except InputError as error:

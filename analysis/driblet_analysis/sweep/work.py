@@ -7,7 +7,6 @@ from __future__ import annotations
 
 import signal
 import tempfile
-import threading
 import time
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager, suppress
@@ -16,8 +15,9 @@ from typing import NamedTuple
 
 from driblet.ensemble import Progress, run
 from driblet.errors import DribletError, InterruptedRunError
+from driblet.interrupts import Flag
 from driblet.system import System
-from driblet_analysis.sweep.claims import Claim, Pulse, Standing, standing_of, standings, take
+from driblet_analysis.sweep.claims import Claim, Pulse, Standing, in_doubt, standing_of, standings, take
 from driblet_analysis.sweep.directory import Plan, Point
 from driblet_analysis.sweep.shards import Result, ShardFile, is_complete, shard_files, union, write_results
 from driblet_analysis.sweep.summary import summarise
@@ -41,7 +41,7 @@ class Stop:
     """Asks a worker to stop at a clean place: what is finished is written, the point under way is given up."""
 
     def __init__(self) -> None:
-        self.asked = threading.Event()
+        self.asked = Flag()
         self._simulating = False
 
     def __call__(self, *_: object) -> None:
@@ -111,7 +111,10 @@ def record_of(system: System) -> str:
 
 
 class Worker:
-    """Works on some shards of a plan until nothing is free there. `report` is told what is safely written."""
+    """Works on some shards of a plan until nothing is free there.
+
+    report : is told what is safely written; waiting : is told in words what is waited for.
+    """
 
     def __init__(
         self,
@@ -120,8 +123,10 @@ class Worker:
         stop: Stop,
         report: Callable[[Written], None],
         retry: bool = False,
+        waiting: Callable[[str], None] | None = None,
     ) -> None:
         self.plan, self.shards, self.stop, self.report, self.retry = plan, shards, stop, report, retry
+        self.waiting = waiting or (lambda _: None)
         self._retried: set[int] = set()
         self._pulse = Pulse()
 
@@ -139,14 +144,16 @@ class Worker:
             if not free:
                 if not doubtful:
                     return
-                self.stop.asked.wait(_WAIT_SECONDS)  # a worker elsewhere may be dead: soon its claims tell
+                self.waiting(in_doubt(doubtful))
+                self.stop.asked.wait(_WAIT_SECONDS)
 
-    def _look(self) -> tuple[list[tuple[int, Standing | None]], bool]:
+    def _look(self) -> tuple[list[tuple[int, Standing | None]], int]:
+        """Shards that can be taken, and how many more there may be once dead workers elsewhere are known to be dead."""
         files, claimed = shard_files(self.plan), standings(self.plan.directory)
         fresh: list[tuple[int, Standing | None]] = []
         resumed: list[tuple[int, Standing | None]] = []
         suspect: list[tuple[int, Standing | None]] = []
-        doubtful = False
+        doubtful = 0
         for shard in self.shards:
             standing = claimed.get(shard)
             if is_complete(self.plan, shard, files.get(shard, ())) and not self._to_retry(shard):
@@ -156,7 +163,7 @@ class Worker:
             elif standing.state == "free" or (standing.state == "done" and self.retry):
                 (suspect if standing.suspects else resumed).append((shard, standing))
             else:
-                doubtful |= self._pulse.doubtful(shard, standing)
+                doubtful += self._pulse.doubtful(shard, standing)
         return [*fresh, *resumed, *suspect], doubtful
 
     def _to_retry(self, shard: int) -> bool:
