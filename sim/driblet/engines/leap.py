@@ -29,7 +29,7 @@ class LeapEngine:
         pairs: Pairs,
         species: int,
         turnover: Turnover | None = None,
-        tolerance: float = 0.03,
+        tolerance: float = 0.01,
         stiffness: float = 5.0,
     ) -> None:
         self.network, self.pairs, self.turnover = network, pairs, turnover or no_turnover()

@@ -73,6 +73,8 @@ class Room(NamedTuple):
     pace: Floats
     end_pace: Floats
     scratch: Floats
+    adjoint: Floats
+    gradient: Floats
     critical: Ints
     bound: Floats
     drift: Floats
@@ -110,8 +112,8 @@ def new_room(pairs: Pairs, turnover: Turnover, species: int, nodes: int) -> Room
         return np.zeros(size, dtype=np.int64)
 
     return Room(
-        floats(M), floats(M), floats(len(pairs.depend_species)), floats(M, 1), floats(M), np.ones(nodes + 1), ints(M),
-        floats(N), floats(N), floats(N), floats(N), np.ones(N), floats(K, K), floats(K, K), ints(K), floats(K), floats(K),
+        floats(M), floats(M), floats(len(pairs.depend_species)), floats(M, 1), floats(M), np.ones(nodes + 1), floats(nodes + 1), floats(N),
+        ints(M), floats(N), floats(N), floats(N), floats(N), np.ones(N), floats(K, K), floats(K, K), ints(K), floats(K), floats(K),
         floats(K), floats(K), floats(K), floats(K), floats(K), ints(K), floats(A), floats(A, A),
         floats(2 + A + A * (A + 1) // 2), floats(A, A), floats(A), ints(A), ints(1),
     )  # fmt: skip

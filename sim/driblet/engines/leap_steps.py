@@ -14,6 +14,7 @@ from driblet.engines.compile_cache import CACHE
 from driblet.engines.factors import factor_value
 
 U = np.uint64
+ONE = U(1)
 CRITICAL = 10.0  # firings that would exhaust a reactant: fewer, and a channel fires one at a time
 EXPLICIT_BELOW = 0.2  # of tau * lambda: there the implicit equation is solved by iterating it
 MOST_SOLVED = 96  # pairs up to which it is solved by Newton's method
@@ -43,51 +44,79 @@ def one_pace(  # type: ignore[no-untyped-def]
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
 def all_propensities(reactant, offset, rows, start, parent, node, less, constants, counts, scratch, w, pace):  # type: ignore[no-untyped-def]
-    """w : (M,), propensities; pace : (channels with a factor,), as in factors.py."""
-    below = U(w.size)
-    above = below + U(parent.size)
+    """w : (M,), propensities; pace : (channels with a factor,), as in factors.py.
+
+    The factor is factors.factor_value, written out: calls with so many arrays would cost more than the work.
+    """
+    below_at = U(w.size)
+    above_at = below_at + U(parent.size)
     for j in range(w.size):
-        factored = rows[j] >= 0
-        own = one_pace(
-            j, reactant, offset, factored, U(start[j, 0]), U(start[j, 1]), U(start[j, 2]), parent, node, less, constants,
-            below, above, counts, scratch,
-        )  # fmt: skip
-        if factored:
+        own = clipped(counts[U(reactant[j, 0])])
+        own *= clipped(counts[U(reactant[j, 1])] - offset[j, 1])
+        own *= clipped(counts[U(reactant[j, 2])] - offset[j, 2])
+        if rows[j] >= 0:
+            if own > 0.0:
+                first, top = U(start[j, 0]), U(start[j, 1])
+                above, below = 0.0, 0.0
+                for t in range(first, U(start[j, 2])):
+                    q = scratch[U(parent[t])] * clipped(counts[U(node[t])] - less[t])
+                    scratch[t - first + ONE] = q
+                    below += constants[below_at + t] * q
+                    if t < top:
+                        above += constants[above_at + t] * q
+                own *= (above if top > first else 1.0) / below if below > 0.0 else 0.0
             pace[rows[j]] = own
         w[j] = constants[j] * own
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
 def all_slopes(  # type: ignore[no-untyped-def]
-    reactant,
-    offset,
-    rows,
-    start,
-    parent,
-    node,
-    less,
-    constants,
-    counts,
-    scratch,
-    w,
-    depend_start,
-    depend_species,
-    slope,
-):
-    """slope : of each propensity by each species in `depend_species`, the change by one molecule more."""
-    below = U(w.size)
-    above = below + U(parent.size)
-    for j in range(w.size):
-        factored = rows[j] >= 0
+    reactant, offset, rows, start, parent, node, less, constants, counts, scratch, adjoint, gradient, depend_start,
+    depend_species, slope
+):  # fmt: skip
+    """slope : derivatives of each propensity by the species in `depend_species`, taken backwards through its nodes.
+
+    adjoint : as scratch; gradient : (N + 1,), zero before and after.
+    """
+    below_at = U(rows.size)
+    above_at = below_at + U(parent.size)
+    for j in range(rows.size):
+        a, b, c = U(reactant[j, 0]), U(reactant[j, 1]), U(reactant[j, 2])
+        x, y, z = clipped(counts[a]), clipped(counts[b] - offset[j, 1]), clipped(counts[c] - offset[j, 2])
+        first, top, last = U(start[j, 0]), U(start[j, 1]), U(start[j, 2])
+        factor = 1.0
+        if rows[j] >= 0:
+            above, below = 0.0, 0.0
+            for t in range(first, last):
+                q = scratch[U(parent[t])] * clipped(counts[U(node[t])] - less[t])
+                scratch[t - first + ONE] = q
+                below += constants[below_at + t] * q
+                if t < top:
+                    above += constants[above_at + t] * q
+            if not top > first:
+                above = 1.0
+            factor = above / below if below > 0.0 else 0.0
+            scale = x * y * z / below if below > 0.0 else 0.0
+            adjoint[0] = 0.0
+            for t in range(first, last):
+                own = -factor * constants[below_at + t]
+                if t < top:
+                    own += constants[above_at + t]
+                adjoint[t - first + ONE] = own * scale
+            for back in range(last - first):
+                t = last - ONE - U(back)
+                own = adjoint[t - first + ONE]
+                i, before = U(node[t]), U(parent[t])
+                adjoint[before] += own * clipped(counts[i] - less[t])
+                gradient[i] += own * scratch[before]
+        gradient[a] += factor * y * z
+        gradient[b] += factor * x * z
+        gradient[c] += factor * x * y
         for d in range(depend_start[j], depend_start[j + 1]):
-            i = U(depend_species[d])
-            counts[i] += 1.0
-            own = one_pace(
-                j, reactant, offset, factored, U(start[j, 0]), U(start[j, 1]), U(start[j, 2]), parent, node, less,
-                constants, below, above, counts, scratch,
-            )  # fmt: skip
-            counts[i] -= 1.0
-            slope[d] = constants[j] * own - w[j]
+            slope[d] = constants[j] * gradient[U(depend_species[d])]
+        for t in range(first, last):
+            gradient[U(node[t])] = 0.0
+        gradient[a], gradient[b], gradient[c] = 0.0, 0.0, 0.0
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
@@ -179,7 +208,7 @@ def leap_length(  # type: ignore[no-untyped-def]
                 i = U(depend_species[d])
                 bound[i] = min(bound[i], tolerance * gross / steep)
     tau = np.inf
-    wider = 1.0 / math.sqrt(tolerance)
+    wider = math.sqrt(3.0 / tolerance)
     for i in range(bound.size):
         if bound[i] < np.inf:
             away, most = abs(drift[i]), max(1.0, bound[i])

@@ -136,6 +136,7 @@ def advance_leaps(  # type: ignore[no-untyped-def]
     )
     w, end_w, slope, pace, end_pace = room.w, room.end_w, room.slope, room.pace, room.end_pace
     pace_row, scratch, critical = pace[:, 0], room.scratch, room.critical
+    adjoint, gradient = room.adjoint, room.gradient
     bound, drift, spread, pull, end = room.bound, room.drift, room.spread, room.pull, room.end
     matrix, lu, pivot = room.matrix, room.lu, room.pivot
     there, back, more, fewer = room.there, room.back, room.more, room.fewer
@@ -170,8 +171,8 @@ def advance_leaps(  # type: ignore[no-untyped-def]
             if total > 0.0 and burst == 0:
                 a0 = mark_critical(w, counts, pairs.taken_start, pairs.taken_species, pairs.taken_amount, critical)
                 all_slopes(
-                    reactant, offset, factor_row, start, parent, node, less, constants, counts, scratch, w, depend_start,
-                    depend_species, slope,
+                    reactant, offset, factor_row, start, parent, node, less, constants, counts, scratch, adjoint, gradient,
+                    depend_start, depend_species, slope,
                 )  # fmt: skip
                 fastest = jacobian(
                     pair, sense, depend_start, depend_species, slope, critical, touch_start, touch_pair, touch_amount, matrix,

@@ -157,7 +157,7 @@ class RunSettings:
     seed: int = 0
     burn_in_s: float | None = None
     record: str = "trajectories"
-    leap_tolerance: float = 0.03
+    leap_tolerance: float = 0.01
 
 
 @dataclass(frozen=True)

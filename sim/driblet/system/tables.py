@@ -163,7 +163,7 @@ def leap_tolerance(value: object) -> float:
     """A tolerance of leaps. Raises ValueError."""
     low, high = TOLERANCES
     if isinstance(value, bool) or not isinstance(value, int | float) or not low <= value <= high:
-        raise _complain(f"{value!r} will not do: a plain number from {low:g} to {high:g} is needed; 0.03 is usual")
+        raise _complain(f"{value!r} will not do: a plain number from {low:g} to {high:g} is needed; 0.01 is usual")
     return float(value)
 
 
@@ -299,7 +299,7 @@ class RunTable(Table):
     loading: Loading = "nearest"
     seed: Annotated[int, BeforeValidator(_whole(0, LARGEST_SEED))] = 0
     treatment: Annotated[str, BeforeValidator(_one_of(TREATMENTS))] | None = None
-    leap_tolerance: Annotated[float, BeforeValidator(leap_tolerance)] = 0.03
+    leap_tolerance: Annotated[float, BeforeValidator(leap_tolerance)] = 0.01
 
 
 SECTIONS = (
