@@ -8,10 +8,11 @@ import numpy as np
 from numba import njit
 
 from driblet.engines.compile_cache import CACHE
-from driblet.engines.draws import normal, poisson, regular, rounded
+from driblet.engines.draws import binomial, normal, poisson, regular, rounded
 from driblet.engines.leap_steps import clipped
 
 U = np.uint64
+SOME = 10.0  # firings in a leap below which a falling rate thins them
 MANY = 25.0  # variance of turnovers in a leap from which they are drawn jointly, as normal numbers
 
 
@@ -35,6 +36,15 @@ def draw_independent(f, b, excess, stream, r, k, forward_drawn, backward_drawn):
             less -= extra
     forward_drawn[k] = more
     backward_drawn[k] = less
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
+def one_way(number, mean, fix, stream, r):  # type: ignore[no-untyped-def]
+    """Firings of a channel without a reverse: the `number` drawn about `mean`, moved by `fix` on average and never below zero.
+    A few are thinned where they are to be fewer, which leaves a Poisson number one of the smaller mean."""
+    if fix < 0.0 and mean < SOME:
+        return binomial(number, clipped(1.0 + fix / mean), stream, r)
+    return clipped(number + rounded(fix, stream, r))
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")

@@ -28,7 +28,7 @@ from driblet.engines.contract import (
 )
 from driblet.engines.draws import rounded
 from driblet.engines.judging import all_decided, judge_all
-from driblet.engines.leap_draws import draw_independent, draw_turnovers
+from driblet.engines.leap_draws import draw_independent, draw_turnovers, one_way
 from driblet.engines.leap_steps import (
     EXPLICIT_BELOW,
     FEW,
@@ -279,7 +279,12 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                 for i in range(N):
                     end[i] = counts[i]
                 for k in range(K):
-                    extent[k] = more[k] - fewer[k] + rounded(fix[k], stream, r)
+                    if backward[k] < 0:
+                        extent[k] = one_way(more[k], there[k], fix[k], stream, r)
+                    elif forward[k] < 0:
+                        extent[k] = -one_way(fewer[k], back[k], -fix[k], stream, r)
+                    else:
+                        extent[k] = more[k] - fewer[k] + rounded(fix[k], stream, r)
                     for c in range(change_start[k], change_start[k + 1]):
                         end[U(change_species[c])] += change_amount[c] * extent[k]
                 if alone >= 0:
