@@ -27,6 +27,7 @@ from driblet.errors import InputError, InterruptedRunError, Problem, one_problem
 from driblet.events import event_arrays
 from driblet.interrupts import noted_interrupts
 from driblet.leap_record import leap_arrays
+from driblet.lumping import LUMPED
 from driblet.network import Network
 from driblet.outcomes import EVENT, LEAP, Outcomes
 from driblet.results import Run
@@ -163,6 +164,7 @@ def run(
         raise one_problem("run", "method", f'"{method}" is not a method: "lanes" or "scalar" is')
     if method == "lanes" and settings.record == "events":
         raise one_problem("run", "method", 'events are recorded by "scalar" only')
+    stated = system
     system, choices = with_treatments(system, treatment, float(sample_times(settings)[1]), settings.engine)
     network = Network.of(system)
     choice = choose_engine(system, network, settings, key)
@@ -184,6 +186,11 @@ def run(
             return existing
         existing.close()
         raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
+    if choice.leaps or any(c.taken == LUMPED for c in choices):
+        from driblet.error_estimate import error_estimate
+
+        estimate = error_estimate(stated, system, network, settings, choice, key)
+        layout = replace(layout, provenance={**layout.provenance, **(estimate.provenance() if estimate else {})})
     writer = RunWriter(path, layout, resume=resume, force=force)
     threads = threads or os.cpu_count() or 1
     from driblet.packs import PackRunner

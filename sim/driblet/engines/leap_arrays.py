@@ -104,19 +104,23 @@ class Room(NamedTuple):
 def new_room(pairs: Pairs, turnover: Turnover, species: int, nodes: int) -> Room:
     """Scratch for a network whose largest factor has `nodes` nodes."""
     M, K, N, A = len(pairs.pair), len(pairs.forward), species + 1, turnover.unit.shape[1]
-
-    def floats(*shape: int) -> Floats:
-        return np.zeros(shape)
-
-    def ints(size: int) -> Ints:
-        return np.zeros(size, dtype=np.int64)
-
-    return Room(
-        floats(M), floats(M), floats(len(pairs.depend_species)), floats(M, 1), floats(M), np.ones(nodes + 1), floats(nodes + 1), floats(N),
-        ints(M), floats(N), floats(N), floats(N), floats(N), np.ones(N), floats(K, K), floats(K, K), ints(K), floats(K), floats(K),
-        floats(K), floats(K), floats(K), floats(K), floats(K), ints(K), floats(A), floats(A, A),
-        floats(2 + A + A * (A + 1) // 2), floats(A, A), floats(A), ints(A), ints(1),
-    )  # fmt: skip
+    sizes: dict[str, tuple[int, ...]] = {
+        **dict.fromkeys(("w", "end_w", "critical", "end_pace"), (M,)),
+        **dict.fromkeys(("bound", "drift", "spread", "pull", "end", "gradient"), (N,)),
+        **dict.fromkeys(("there", "back", "more", "fewer", "fix", "rest", "extent", "drawn", "pivot"), (K,)),
+        **dict.fromkeys(("scratch", "adjoint"), (nodes + 1,)),
+        **dict.fromkeys(("matrix", "lu"), (K, K)),
+        **dict.fromkeys(("J", "turned", "big"), (A,)),
+        **dict.fromkeys(("C", "lower"), (A, A)),
+        "slope": (len(pairs.depend_species),),
+        "pace": (M, 1),
+        "value": (2 + A + A * (A + 1) // 2,),
+        "one": (1,),
+    }
+    whole = {"critical", "pivot", "drawn", "big", "one"}
+    room = Room(**{k: np.zeros(size, dtype=np.int64 if k in whole else np.float64) for k, size in sizes.items()})
+    room.scratch[0] = room.end[-1] = 1.0
+    return room
 
 
 def no_turnover() -> Turnover:
