@@ -5,9 +5,11 @@ from __future__ import annotations
 import json
 import os
 import signal
+import subprocess
+import sys
 import threading
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
 
@@ -102,3 +104,118 @@ def test_what_workers_find_wrong_is_one_line(
     error = capsys.readouterr().err
     assert "does not exist" in error
     assert "on Dask worker" in error
+
+
+ENDLESS = changed(
+    SMALL,
+    ('forward = "1 /s"', 'forward = "1e6 /s"'),
+    ('duration = "2 s"', 'duration = "1 h"'),
+    ('sample_every = "0.5 s"', 'sample_every = "1 min"'),
+)
+
+
+class Running:
+    """A scheduler and two workers as a cluster starts them, and `sweep work` on them, each a process of its own."""
+
+    def __init__(self, folder: Path, base: str) -> None:
+        self.file, self.directory, self.folder = folder / "scheduler.json", folder / "sweep", folder
+        text = 'system = "base.toml"\nreplicates = 4\n[axes]\n"run.seed" = { from = 1, to = 40, points = 40 }\n'
+        make_plan(write_sweep(folder, text, base), self.directory)
+        self.processes: list[subprocess.Popen[str]] = []
+        options = ("--no-dashboard", "--scheduler-file", str(self.file))
+        self.scheduler = self.start("scheduler", "distributed.cli.dask_scheduler", "--port", "0", *options)
+        self.until(self.file.exists)
+        self.workers = [
+            self.start(f"worker-{k}", "distributed.cli.dask_worker", "--nthreads", "1", "--no-nanny", *options)
+            for k in range(2)
+        ]
+        self.sweep = self.start("sweep", "driblet", "sweep", "work", str(self.directory), "--dask", str(self.file))
+
+    def start(self, name: str, *command: str) -> subprocess.Popen[str]:
+        with (self.folder / f"{name}.log").open("w") as log:
+            process = subprocess.Popen(
+                [sys.executable, "-m", *command], stdout=log, stderr=subprocess.STDOUT, text=True, cwd=self.folder
+            )
+        self.processes.append(process)
+        return process
+
+    def until(self, reached: Callable[[], bool]) -> None:
+        limit = time.monotonic() + 120
+        while not reached():
+            assert time.monotonic() < limit, self.log()
+            time.sleep(0.1)
+
+    def log(self) -> str:
+        return " ".join((self.folder / "sweep.log").read_text().split())
+
+    def ended(self, seconds: float) -> int:
+        """Exit status of the sweep, which must end within some seconds."""
+        return self.sweep.wait(timeout=seconds)
+
+    def close(self) -> None:
+        for process in self.processes:
+            process.kill()
+            process.wait()
+
+
+@pytest.fixture
+def running(tmp_path: Path) -> Iterator[Callable[[str], Running]]:
+    started: list[Running] = []
+
+    def start(base: str) -> Running:
+        started.append(Running(tmp_path, base))
+        return started[-1]
+
+    yield start
+    for one in started:
+        one.close()
+
+
+def test_ctrl_c_stops_tasks_in_the_middle_of_endless_points(running: Callable[[str], Running]) -> None:
+    run = running(ENDLESS)
+    run.until(lambda: read_status(run.directory).workers == 2)
+    run.sweep.send_signal(signal.SIGINT)
+    assert run.ended(50) == 130, run.log()
+    assert "stopped when asked; what is finished is kept" in run.log()
+    assert "fault" not in run.log()
+    run.until(lambda: read_status(run.directory).workers == 0)  # the tasks have ended too, and given their claims back
+
+
+def test_a_scheduler_that_dies_is_told_and_costs_nothing_that_was_written(running: Callable[[str], Running]) -> None:
+    run = running(changed(SMALL, ('forward = "1 /s"', 'forward = "5e4 /s"')))
+    run.until(lambda: read_status(run.directory).done >= 2)
+    run.scheduler.kill()
+    assert run.ended(60) == 3, run.log()
+    assert "note: the Dask scheduler went away" in run.log()
+    assert "goes on" in run.log()
+    assert "Traceback" not in run.log()
+    for worker in run.workers:
+        worker.kill()
+        worker.wait()
+    done = read_status(run.directory).done
+    assert 2 <= done < 40
+    assert work_locally(run.directory, workers=2).written == 40 - done
+
+
+def test_a_cluster_that_loses_its_workers_is_given_up_after_a_while(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    from driblet_analysis.sweep import dask_cluster
+
+    monkeypatch.setattr(dask_cluster, "_PATIENCE_SECONDS", 3.0)
+    make_plan(write_sweep(tmp_path, base=ENDLESS), tmp_path / "sweep")
+    with distributed.LocalCluster(n_workers=1, threads_per_worker=1, processes=True, dashboard_address=None) as cluster:
+
+        def lose() -> None:
+            limit = time.monotonic() + 60
+            while read_status(tmp_path / "sweep").workers == 0 and time.monotonic() < limit:
+                time.sleep(0.1)
+            cluster.scale(0)
+
+        thread = threading.Thread(target=lose)
+        thread.start()
+        assert main(["sweep", "work", str(tmp_path / "sweep"), "--dask", cluster.scheduler_address]) == 3
+        thread.join()
+    told = capsys.readouterr()
+    assert "note: the Dask cluster had no workers for 3 s; what is written is kept" in " ".join(told.out.split())
+    assert told.err.count("waiting: the Dask cluster has lost its workers") == 1

@@ -222,10 +222,10 @@ def test_a_point_that_kills_its_worker_stops_no_other(tmp_path: Path, monkeypatc
         "import os, signal\n"
         "import driblet_analysis.sweep.work as work\n"
         "plain = work.simulate\n"
-        "def simulate(plan, point):\n"
+        "def simulate(plan, point, stop):\n"
         "    if point.number == 5:\n"
         "        os.kill(os.getpid(), signal.SIGKILL)\n"
-        "    return plain(plan, point)\n"
+        "    return plain(plan, point, stop)\n"
         "work.simulate = simulate\n"
     )
     monkeypatch.setenv("PYTHONPATH", str(tmp_path))

@@ -1,21 +1,25 @@
 """Dask: a sweep on a running cluster, one shard a task.
 
 Tasks write their shard and return numbers, so that one that is lost with its worker, or run twice, costs time and nothing
-else.
+else. Every wait ends: a scheduler that goes away, a cluster that stays without workers and tasks that do not stop when they are
+told to are left, with a note.
 """
 
 from __future__ import annotations
 
+import logging
 import platform
 import secrets
 import threading
+import time
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from concurrent.futures import CancelledError
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import Any
 
 from driblet.errors import DribletError, InputError, one_problem
-from driblet_analysis.sweep.claims import FOLDER, Pulse, standings
+from driblet_analysis.sweep.claims import FOLDER, Pulse, in_doubt, standings
 from driblet_analysis.sweep.directory import Plan, read_plan
 from driblet_analysis.sweep.files import writing
 from driblet_analysis.sweep.local import Outcome, Progress, Session, repair
@@ -24,6 +28,9 @@ from driblet_analysis.sweep.work import Stop, Written, do_shard, warm_up
 _CONNECT_SECONDS = 15
 _TASKS_PER_THREAD = 3  # in the scheduler's hands at a time
 _POLL_SECONDS = 1.0
+_PATIENCE_SECONDS = 600.0  # with a cluster that has lost all its workers
+_STOP_SECONDS = 60.0
+_OLD_SECONDS = 3600.0
 
 
 def work_on_dask(
@@ -58,6 +65,7 @@ def _client(address: str) -> Iterator[Any]:
         from distributed import Client
     except ImportError as error:
         raise one_problem("command line", "--dask", 'needs dask: pip install "driblet[dask]"') from error
+    logging.getLogger("distributed.client").setLevel(logging.CRITICAL)  # what matters is told in a line of ours
     try:
         if Path(address).is_file():
             client = Client(scheduler_file=address, timeout=_CONNECT_SECONDS)
@@ -80,11 +88,12 @@ def _client(address: str) -> Iterator[Any]:
 @contextmanager
 def _stop_file(plan: Plan) -> Iterator[Path]:
     """A file whose appearance tells running tasks to stop after the point under way."""
-    path = (plan.directory / FOLDER).absolute() / f".stop-{secrets.token_hex(4)}"
-    try:
-        yield path
-    finally:
-        path.unlink(missing_ok=True)
+    folder = (plan.directory / FOLDER).absolute()
+    for old in folder.glob(".stop-*"):
+        with suppress(OSError):
+            if time.time() - old.stat().st_mtime > _OLD_SECONDS:
+                old.unlink()
+    yield folder / f".stop-{secrets.token_hex(4)}"  # stays for tasks that are left running
 
 
 class _Driver:
@@ -95,32 +104,37 @@ class _Driver:
         self.directory = str(session.plan.directory.absolute())
         self.notes: list[str] = []
         self.fault = ""
+        self.gone = ""  # why the cluster is of no use any more
+        self.told_to_stop: float | None = None
+        self.without_workers: float | None = None
         self.taken: set[int] = set()  # shards that were in another worker's hands
         self.lost: set[int] = set()  # shards whose tasks died with their workers again and again
 
     def run(self, left: list[int]) -> list[str]:
         """Have every shard done; returns notes. Raises InputError with what the workers found wrong."""
-        warm = self.client.submit(_warm_up, self.directory, pure=False)
-        self._drain({warm: -1}, iter(()))
-        while left and not self.ended:
-            self.taken.clear()
-            self._drain({}, iter(left))
-            left = self._given_up()
+        try:
+            warm = self.client.submit(_warm_up, self.directory, pure=False)
+            self._drain({warm: -1}, iter(()))
+            while left and not self.ended:
+                self.taken.clear()
+                self._drain({}, iter(left))
+                left = self._given_up()
+        except OSError as error:  # what a broken connection raises there; the disk's errors are told as faults
+            self.gone = f"the Dask scheduler went away ({' '.join(str(error).split())[:100] or type(error).__name__})"
+        if self.gone:
+            self.notes.append(f"{self.gone}; what is written is kept")
         if self.fault:
             raise one_problem(str(self.session.plan.directory), "", self.fault)
         return self.notes
 
     @property
     def ended(self) -> bool:
-        return bool(self.fault) or self.stop.asked.is_set()
+        return bool(self.fault or self.gone) or self.stop.asked.is_set()
 
     def _drain(self, running: dict[Any, int], queue: Iterator[int]) -> None:
         """Keep a few tasks per thread with the scheduler until the queue is empty and all have returned."""
-        from distributed import wait
-
-        while True:
-            threads = max(1, sum(self.client.nthreads().values()))
-            self.session.workers = threads
+        while running or not self.ended:
+            threads = self._threads()
             while not self.ended and len(running) < _TASKS_PER_THREAD * threads:
                 shard = next(queue, None)
                 if shard is None:
@@ -131,30 +145,62 @@ class _Driver:
                 running[future] = shard
             if not running:
                 return
-            if self.ended:
-                self._stop_tasks(running)
-            try:
-                done = wait(list(running), timeout=_POLL_SECONDS, return_when="FIRST_COMPLETED").done
-            except TimeoutError:
-                self.session.tell()
-                continue
-            for future in done:
+            if self.gone or (self.ended and not self._stop_tasks(running)):
+                return
+            self._wait(running)
+            self.session.tell()
+            for future in [f for f in running if f.done()]:
                 self._take_in(future, running.pop(future))
 
-    def _stop_tasks(self, running: dict[Any, int]) -> None:
-        """Tasks that have not begun are dropped; those that run end after the point under way."""
-        if self.stop_file.exists():
-            return
+    @staticmethod
+    def _wait(running: dict[Any, int]) -> None:
+        """Until a task returns, is dropped or lost, or for a moment."""
+        from distributed import wait
+
+        with suppress(TimeoutError, CancelledError):
+            wait(list(running), timeout=_POLL_SECONDS, return_when="FIRST_COMPLETED")
+
+    def _threads(self) -> int:
+        """Threads of the cluster, 1 while it has no workers; after a while without any it is given up."""
+        threads = sum(self.client.nthreads().values())
+        self.session.workers = threads
+        if threads:
+            if self.without_workers is not None:
+                self.without_workers = None
+                self.session.waiting_for("")
+            return threads
+        now = time.monotonic()
+        self.without_workers = self.without_workers or now
+        if now - self.without_workers > _PATIENCE_SECONDS:
+            self.gone = f"the Dask cluster had no workers for {_PATIENCE_SECONDS:g} s"
+        text = f"the Dask cluster has lost its workers; without new ones it is given up after {_PATIENCE_SECONDS:g} s"
+        self.session.waiting_for(text)
+        return 1
+
+    def _stop_tasks(self, running: dict[Any, int]) -> bool:
+        """Tasks that have not begun are dropped, those that run are told to stop. Returns whether to wait for them."""
+        now = time.monotonic()
+        if self.told_to_stop is not None:
+            if now - self.told_to_stop > _STOP_SECONDS:
+                text = f"{len(running)} tasks have not stopped within {_STOP_SECONDS:g} s and are left to the cluster"
+                self.notes.append(text)
+                return False
+            self.session.waiting_for(f"{len(running)} tasks are told to stop; they are left after {_STOP_SECONDS:g} s")
+            return True
+        self.told_to_stop = now
         with writing(self.session.plan.directory):
             self.stop_file.parent.mkdir(exist_ok=True)
             self.stop_file.touch()
         self.client.cancel([future for future in running if future.status == "pending" and not self._begun(future)])
+        return True
 
     def _begun(self, future: Any) -> bool:
         return any(future.key in keys for keys in self.client.processing().values())
 
     def _take_in(self, future: Any, shard: int) -> None:
         if future.status == "cancelled":
+            if not self.ended:  # nobody here has dropped it
+                self.gone = "the Dask scheduler went away or dropped its tasks"
             return
         if future.status == "error":
             error = future.exception()
@@ -185,6 +231,7 @@ class _Driver:
             doubtful = [s for s in todo if s in claimed and pulse.doubtful(s, claimed[s])]
             if free or not doubtful:
                 return free
+            self.session.waiting_for(in_doubt(len(doubtful)))
             self.stop.asked.wait(_POLL_SECONDS)
         return []
 

@@ -76,24 +76,31 @@ def stopping_on_signals() -> Iterator[Stop]:
             signal.signal(number, handler)
 
 
-def simulate(plan: Plan, point: Point) -> Result:
+def simulate(plan: Plan, point: Point, stop: Stop) -> Result:
     """Simulate a point on one core and summarise it. An error of the point becomes a result with its text.
 
     Raises KeyboardInterrupt or InterruptedRunError when stopped.
     """
     started = time.monotonic()
+
+    def look(_: Progress) -> None:
+        if stop.asked.is_set():  # outside the main thread no signal strikes
+            raise KeyboardInterrupt
+
     try:
         system = plan.system(point)
         image = None
         if plan.keep == "trajectories":
             with tempfile.TemporaryDirectory(prefix="driblet-") as folder:
                 path = Path(folder) / "run.h5"
-                with run(system, path, threads=1, key=point.key, record=record_of(system)) as ensemble:
+                with run(
+                    system, path, threads=1, key=point.key, record=record_of(system), on_progress=look
+                ) as ensemble:
                     values = summarise(ensemble, system)
                 image = path.read_bytes()
         else:
             # in memory, so that even readouts can be averaged over time at no cost in disk
-            with run(system, threads=1, key=point.key, record="trajectories") as ensemble:
+            with run(system, threads=1, key=point.key, record="trajectories", on_progress=look) as ensemble:
                 values = summarise(ensemble, system)
     except (KeyboardInterrupt, InterruptedRunError):
         raise
@@ -194,7 +201,7 @@ class Worker:
                     flushed = time.monotonic()
                 claim.at(point.number)
                 with self.stop.simulating():
-                    result = simulate(self.plan, point)
+                    result = simulate(self.plan, point, self.stop)
                 pending.append(result)
         except (KeyboardInterrupt, InterruptedRunError):
             self.stop.asked.set()
