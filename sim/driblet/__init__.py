@@ -10,14 +10,13 @@ from __future__ import annotations
 from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
-from driblet.version import __version__
-
 if TYPE_CHECKING:
     from driblet.ensemble import Progress, run
     from driblet.errors import CannotAnswerError, DribletError, InputError, InterruptedRunError
     from driblet.network import Network
     from driblet.results import Run
     from driblet.system import System, load, loads
+    from driblet.version import __version__
 
 _HOMES = {
     "load": "driblet.system",
@@ -31,6 +30,7 @@ _HOMES = {
     "InputError": "driblet.errors",
     "CannotAnswerError": "driblet.errors",
     "InterruptedRunError": "driblet.errors",
+    "__version__": "driblet.version",
 }
 __all__ = [
     "CannotAnswerError",

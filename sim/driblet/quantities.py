@@ -13,11 +13,13 @@ from functools import lru_cache
 from importlib import resources
 from typing import Any
 
-from scipy import constants as _codata
+from driblet.common_units import COMMON_UNITS
 
-AVOGADRO = _codata.N_A  # 1/mol, CODATA through scipy
-GAS_CONSTANT = _codata.R / 1000.0  # kJ/(mol K)
-FARADAY = _codata.physical_constants["Faraday constant"][0] / 1000.0  # kJ/(mol V)
+# exact by definition: BIPM, The International System of Units, 9th edition, 2019, section 2.2
+AVOGADRO = 6.02214076e23  # 1/mol
+_BOLTZMANN, _ELEMENTARY_CHARGE = 1.380649e-23, 1.602176634e-19  # J/K, C
+GAS_CONSTANT = AVOGADRO * _BOLTZMANN / 1000.0  # kJ/(mol K)
+FARADAY = AVOGADRO * _ELEMENTARY_CHARGE / 1000.0  # kJ/(mol V)
 
 _NUMBER = re.compile(r"[+-]?\d+(\.\d*)?([eE][+-]?\d+)?")
 # Our own grammar of unit texts: pint evaluates what it is given, and "M^9^9^9" would never come back.
@@ -102,9 +104,17 @@ def _registry() -> Any:
         return pint.UnitRegistry(str(path), on_redefinition="raise", autoconvert_offset_to_baseunit=True)
 
 
+def check_unit(text: str) -> str:
+    """A unit text such as "mM", "/M/s", "kJ/mol", without blanks around it; raises QuantityError with advice."""
+    stripped = text.strip()
+    if stripped not in COMMON_UNITS or not stripped:
+        read_unit(stripped)
+    return stripped
+
+
 @lru_cache(maxsize=512)
 def read_unit(text: str) -> Any:
-    """The pint unit of a unit text such as "mM", "/M/s", "kJ/mol"; raises QuantityError with advice."""
+    """The pint unit of a unit text; raises QuantityError with advice."""
     stripped = text.strip()
     advice = _ADVICE.get(stripped)
     if re.match(r"[+-]?\d", stripped) and not re.match(r"1\s*/", stripped):
@@ -132,17 +142,24 @@ def read_unit(text: str) -> Any:
 class Quantity:
     """A finite number and its unit, still as written; `to` converts.
 
-    Attributes: value : float; unit : pint unit; text : the string it came from.
+    Attributes: value : float; unit_text : a unit that `check_unit` passed, "" for a plain number; text : the string it came
+    from.
     """
 
     value: float
-    unit: Any
+    unit_text: str
     text: str
+
+    @property
+    def unit(self) -> Any:
+        """The unit as pint has it."""
+        return read_unit(self.unit_text) if self.unit_text else _registry().dimensionless
 
     @property
     def kind(self) -> str | None:
         """Which of the named kinds this is ("time", "concentration", ...), or None."""
-        return _kind_of(self.unit)
+        common = COMMON_UNITS.get(self.unit_text)
+        return common.kind if common else _kind_of(self.unit)
 
     def to(self, kind: str) -> float:
         """The value in driblet's unit of `kind`: K, s, m, L, mol/L, copies, kJ/mol, kT, g/L, g/mol, mol/(s g).
@@ -150,6 +167,9 @@ class Quantity:
         Raises QuantityError when the dimension is another.
         """
         dimension, target, example = _KINDS[kind]
+        common = COMMON_UNITS.get(self.unit_text)
+        if common and common.kind == kind:
+            return self._in_range(self.value * common.factor + common.offset)
         if self.kind != kind and dict(self.unit.dimensionality) != dimension:
             own = self.kind or f"in {self.unit:~}"
             article = "" if own.startswith("in ") else ("an " if own[0] in "aeiou" else "a ")
@@ -164,6 +184,9 @@ class Quantity:
 
         Raises QuantityError when the dimension is another.
         """
+        common = COMMON_UNITS.get(self.unit_text)
+        if common and common.power == (concentration, per_time):
+            return self._in_range(self.value * common.factor)
         want: dict[str, int] = {}
         if concentration:
             want.update({"[substance]": concentration, "[length]": -3 * concentration})
@@ -177,7 +200,9 @@ class Quantity:
         return self._convert(" * ".join(parts) or "")
 
     def _convert(self, target: str) -> float:
-        value = _converted(self.value, self.unit, target)
+        return self._in_range(_converted(self.value, self.unit, target))
+
+    def _in_range(self, value: float) -> float:
         offset = self.kind == "temperature"  # zero kelvin is a true value of another scale
         if not math.isfinite(value) or (value == 0.0 and self.value != 0.0 and not offset):
             raise OutOfRangeError(f'"{self.text}" is out of the range of a double')
@@ -217,7 +242,7 @@ def read_quantity(text: object, allow_plain: bool = False, example: str = '"4 mM
         raise QuantityError(f"a number with a unit in quotes is needed, such as {example}")
     if isinstance(text, int | float):
         if allow_plain:
-            return Quantity(_finite(text), _registry().dimensionless, repr(text))
+            return Quantity(_finite(text), "", repr(text))
         raise QuantityError(f"a bare number {text!r} has no unit: write it in quotes with one, such as {example}")
     parts = text.split(None, 1)
     if not parts:
@@ -225,9 +250,9 @@ def read_quantity(text: object, allow_plain: bool = False, example: str = '"4 mM
     value = read_number(parts[0])
     if len(parts) == 1:
         if allow_plain:
-            return Quantity(value, _registry().dimensionless, text)
+            return Quantity(value, "", text)
         raise QuantityError(f'"{text}" has no unit: write one after a space, such as {example}')
-    return Quantity(value, read_unit(parts[1]), text)
+    return Quantity(value, check_unit(parts[1]), text)
 
 
 def _finite(value: float) -> float:

@@ -4,15 +4,27 @@ from __future__ import annotations
 
 import math
 import string
+import subprocess
+import sys
 from contextlib import suppress
 
+import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 from scipy import constants
 
 from driblet import quantities
-from driblet.quantities import OutOfRangeError, QuantityError, power_unit, read_number, read_quantity, read_unit
+from driblet.common_units import COMMON_UNITS
+from driblet.quantities import (
+    OutOfRangeError,
+    Quantity,
+    QuantityError,
+    power_unit,
+    read_number,
+    read_quantity,
+    read_unit,
+)
 
 
 @pytest.mark.parametrize(
@@ -283,3 +295,33 @@ def test_the_registry_knows_only_our_units() -> None:
     for name in ["C", "F", "V", "A", "Pa", "bar", "eV", "ft", "in", "lb", "y", "T", "W", "rad", "bit", "N"]:
         with pytest.raises(QuantityError):
             read_unit(name)
+
+
+@pytest.mark.parametrize("text", [t for t in COMMON_UNITS if t])
+def test_common_units_are_those_of_pint(text: str) -> None:
+    """Number for number, to the last bit."""
+    common = COMMON_UNITS[text]
+    rng = np.random.default_rng(5)
+    unit = read_unit(text)
+    for value in (rng.uniform(-1, 1, 50) * 10.0 ** rng.integers(-9, 9, 50)).tolist():
+        if common.kind:
+            target = quantities._KINDS[common.kind][1]
+            dimension = dict(unit.dimensionality)
+            assert dimension == quantities._KINDS[common.kind][0]
+            assert Quantity(value, text, "").to(common.kind) == quantities._converted(value, unit, target)
+        if common.power:
+            concentration, per_time = common.power
+            base = Quantity(1.0, "", "").unit * unit / (read_unit("M") ** concentration / read_unit("s") ** per_time)
+            assert base.dimensionless
+            expected = float((value * base).to("").magnitude)
+            assert Quantity(value, text, "").to_power(concentration, per_time) == pytest.approx(expected, rel=1e-14)
+
+
+def test_common_units_are_read_without_pint() -> None:
+    code = (
+        "import sys\nfrom driblet.quantities import read_quantity\n"
+        "print(read_quantity('4 mM').to('concentration'), 'pint' in sys.modules)\n"
+        "print(read_quantity('4 dM').to('concentration'), 'pint' in sys.modules)\n"
+    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert done.stdout.splitlines() == ["0.004 False", "0.4 True"]

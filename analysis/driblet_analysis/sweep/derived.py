@@ -11,7 +11,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
-from driblet.quantities import Quantity, QuantityError, read_number, read_quantity, read_unit
+from driblet.quantities import Quantity, QuantityError, check_unit, read_number, read_quantity, read_unit
 from driblet_analysis.sweep.keypaths import Scalar
 
 _TOKEN = re.compile(
@@ -156,7 +156,7 @@ class _Parser:
         if kind == "number":
             try:
                 quantity = _quantity(
-                    Quantity(read_number(text), read_unit(unit), f"{text} {unit}") if unit else _plain(text)
+                    Quantity(read_number(text), check_unit(unit), f"{text} {unit}") if unit else _plain(text)
                 )
             except QuantityError as error:
                 raise DerivedError(str(error)) from error

@@ -18,7 +18,6 @@ from driblet.errors import (
     DribletError,
     InputError,
 )
-from driblet.version import __version__
 
 # name -> ("module:function", one line of help); modules of driblet_analysis appear here by name only
 COMMANDS: dict[str, tuple[str, str]] = {
@@ -74,13 +73,28 @@ class LazyGroup(click.Group):
             formatter.write_dl([(name, text) for name, (_, text) in COMMANDS.items()])
 
 
+def _tell_version(ctx: click.Context, _: click.Parameter, wanted: bool) -> None:
+    if wanted and not ctx.resilient_parsing:
+        from driblet.version import __version__  # takes longer to find out than the help does to print
+
+        click.echo(f"driblet, version {__version__}")
+        ctx.exit()
+
+
 @click.group(
     cls=LazyGroup,
     context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100},
     epilog="Exit status: 0 done or consistent, 1 a check says no, 2 bad input or bad use, 3 the data cannot answer, "
     "4 a fault of driblet's own, 130 interrupted.",
 )
-@click.version_option(__version__, prog_name="driblet")
+@click.option(
+    "--version",
+    is_flag=True,
+    expose_value=False,
+    is_eager=True,
+    callback=_tell_version,
+    help="Show the version and exit.",
+)
 def cli() -> None:
     """Count molecules in small ATP-driven compartments, with every reverse rate tied to the energies.
 

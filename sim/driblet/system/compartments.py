@@ -8,7 +8,6 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
-from scipy.special import ndtr
 
 from driblet.errors import Problem
 from driblet.quantities import QuantityError, copies_per_molar
@@ -68,7 +67,7 @@ class CompartmentReader:
             self.problem(f"{path}.wall", "two walls leave no room inside this diameter")
             return None
         sigma = math.sqrt(math.log1p(table.diameter.cv**2))
-        if sigma and wall and ndtr(math.log(2 * wall / diameter) / sigma) > SMALLEST_INNER_SHARE:
+        if sigma and wall and _normal_share(math.log(2 * wall / diameter) / sigma) > SMALLEST_INNER_SHARE:
             self.problem(f"{path}.diameter.cv", "is so wide that some compartments would be all wall")
             return None
         volume = _inner_volume(diameter, wall)
@@ -131,3 +130,8 @@ class CompartmentReader:
 
 def _inner_volume(diameter_m: float, wall_m: float) -> float:
     return math.pi / 6 * (diameter_m - 2 * wall_m) ** 3 * 1000.0
+
+
+def _normal_share(z: float) -> float:
+    """Share of a standard normal law below z; scipy.special, which has it too, takes long to import."""
+    return 0.5 * math.erfc(-z / math.sqrt(2.0))

@@ -11,7 +11,7 @@ import re
 from collections.abc import Collection, Mapping
 from dataclasses import dataclass, field
 
-from driblet.quantities import OutOfRangeError, Quantity, QuantityError, read_number, read_unit
+from driblet.quantities import OutOfRangeError, Quantity, QuantityError, check_unit, read_number
 from driblet.system.standard_readouts import STANDARD_NAMES, standard_readout
 
 Dimension = tuple[int, int]
@@ -355,7 +355,7 @@ class _Parser:
             unit_text = self.unit_text()
             if unit_text is None:
                 return Number(value)
-            unit = read_unit(unit_text)
+            unit = check_unit(unit_text)
         except QuantityError as error:
             raise ExpressionError(str(error)) from error
         try:

@@ -12,7 +12,7 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
-from driblet.quantities import Quantity, QuantityError, read_number, read_unit
+from driblet.quantities import Quantity, QuantityError, check_unit, read_number
 
 SECTION = "attachments"
 MOST_BYTES = 20_000_000
@@ -57,8 +57,7 @@ def read_sizes(text: str, column: str | None, unit: str | None, kind: str) -> li
     if unit is None:
         raise SizesError('needs unit, such as unit = "nm"')
     try:
-        pint_unit = read_unit(unit)
-        factor = Quantity(1.0, pint_unit, f"1 {unit}").to(kind)
+        factor = Quantity(1.0, check_unit(unit), f"1 {unit}").to(kind)
     except QuantityError as error:
         raise SizesError(str(error)) from error
     reader = csv.reader(io.StringIO(text))
