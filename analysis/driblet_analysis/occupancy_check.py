@@ -25,7 +25,6 @@ from driblet.statistics import holm, hotelling, randomised_pit, student_t, unifo
 from driblet.system import System
 from driblet_analysis.check_rows import CheckRow
 from driblet_analysis.references.count_equilibrium import CountLaw, count_law, equilibrium_weights
-from driblet_analysis.references.metropolis import BURN_SHARE, MOVES_A_STATE, metropolis
 from driblet_analysis.references.rate_equations import relaxation_time
 
 FEWEST_REPLICATES = 20
@@ -94,6 +93,9 @@ def _sampled(system: System, initial: NDArray[np.int64], omega: Array, seed: int
     classes: dict[tuple[float, ...], list[int]] = {}
     for row, (counts, w) in enumerate(zip(initial, omega, strict=True)):
         classes.setdefault((*counts.tolist(), float(w)), []).append(row)
+    # compiled code, slow to load
+    from driblet_analysis.references.metropolis import BURN_SHARE, MOVES_A_STATE, metropolis
+
     wanted = MOVES_A_STATE * max(1, int(active.sum())) / (1.0 - BURN_SHARE)
     moves = _MOVE_BUDGET // len(classes)
     samples = int(np.clip(moves / wanted, *_SAMPLES))

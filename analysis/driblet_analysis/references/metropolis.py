@@ -16,7 +16,8 @@ from numpy.typing import ArrayLike, NDArray
 
 from driblet.engines.compile_cache import CACHE
 from driblet.network import FORWARD, Network
-from driblet_analysis.references.state_space import channel_matrices, climb
+from driblet_analysis.references.state_search import climb
+from driblet_analysis.references.state_space import channel_matrices
 
 Array = NDArray[np.float64]
 MOVES_A_STATE = 400  # between states kept, per reaction, where there is time
