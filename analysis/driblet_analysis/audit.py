@@ -15,9 +15,9 @@ from driblet.ensemble import sample_times
 from driblet.errors import CannotAnswerError, InputError
 from driblet.lumping import LUMPED
 from driblet.network import BACKWARD, FORWARD, Network
-from driblet.outcomes import when_text
 from driblet.quantities import power_unit
 from driblet.requirements import CompiledRequirements
+from driblet.shares import when_text
 from driblet.system import Reaction, System
 from driblet.system.build import stoichiometric_matrix
 from driblet.treatments import with_treatments

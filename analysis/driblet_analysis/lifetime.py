@@ -14,8 +14,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.errors import CannotAnswerError
-from driblet.outcomes import Outcomes, ShareRow, shares
+from driblet.outcomes import Outcomes
 from driblet.results import Run
+from driblet.shares import ShareRow, shares
 from driblet.statistics import holm
 from driblet.survival import Interval, Survival, contrast, kaplan_meier, wilson
 from driblet.system.model import Requirement

@@ -9,7 +9,8 @@ from typing import Any
 from driblet.commands.requirement_rows import percent
 from driblet.commands.screen import CAUTION, duration, number
 from driblet.errors import CannotAnswerError
-from driblet.outcomes import EVENT, bound, when_text
+from driblet.outcomes import EVENT
+from driblet.shares import bound, when_text
 from driblet.survival import Interval, wilson
 from driblet_analysis.lifetime import Trait, lifetimes
 from driblet_analysis.sizing import Sizing

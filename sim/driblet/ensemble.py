@@ -23,6 +23,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.engine_choice import EngineChoice, choose_engine
+from driblet.engines.choice import METHODS, choose_method
 from driblet.errors import InputError, InterruptedRunError, Problem, one_problem
 from driblet.events import event_arrays
 from driblet.interrupts import noted_interrupts
@@ -31,8 +32,8 @@ from driblet.lumping import LUMPED
 from driblet.network import Network
 from driblet.outcomes import EVENT, LEAP, Outcomes
 from driblet.results import Run
-from driblet.store import FORMAT, Block, Layout, RunWriter, discard_parts
-from driblet.sums import SumsPlan
+from driblet.run_file import FORMAT, Block, Layout
+from driblet.store import RunWriter, discard_parts
 from driblet.system import RunSettings, System
 from driblet.system.tables import (
     ENGINES,
@@ -44,10 +45,10 @@ from driblet.system.tables import (
     unknown_engine,
 )
 from driblet.treatments import Choice, treatment_facts, with_treatments
-from driblet.version import __version__
 
 if TYPE_CHECKING:
     from driblet.packs import Pack, PackRunner
+    from driblet.sums import SumsPlan
 
 _UNIT_BYTES = 8 << 20
 _POLL_SECONDS = 0.1
@@ -158,8 +159,6 @@ def run(
     real = ("duration_s", "sample_every_s", "burn_in_s", "leap_tolerance")
     plain = {k: v if isinstance(v, str) else float(v) if k in real else int(v) for k, v in given.items()}
     settings = replace(system.settings, **plain)  # type: ignore[arg-type]
-    from driblet.engines.exact import METHODS, choose_method
-
     if method not in (None, *METHODS):
         raise one_problem("run", "method", f'"{method}" is not a method: "lanes" or "scalar" is')
     if method == "lanes" and settings.record == "events":
@@ -170,6 +169,19 @@ def run(
     choice = choose_engine(system, network, settings, key)
     if not statistics and settings.record == "summary":
         raise one_problem("run", "statistics", 'record = "summary" keeps nothing else: leave one of the two')
+    facts = _facts(settings, key, statistics, stop_when_decided, choices, choice)
+    path = Path(output) if output is not None else None
+    if path is not None and resume and path.is_file():
+        existing = Run(path)
+        if existing.identity == _identity(system, facts):
+            discard_parts(path)  # of a run that was killed after it was complete
+            return existing
+        existing.close()
+        raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
+    # what loads a compiler, which a complete run does without
+    from driblet.packs import PackRunner
+    from driblet.sums import SumsPlan
+
     judged = _requirements(system, network, settings, stop_when_decided, choice)
     histograms = settings.record != "trajectories"
     duration_s = float(sample_times(settings)[-1])
@@ -177,15 +189,7 @@ def run(
     times = sample_times(settings) if settings.record != "summary" else np.array([0.0, settings.duration_s])
     chosen = choose_method(len(network.channels), settings.replicates, settings.record == "events")
     chosen = "leaps" if choice.leaps else method or chosen
-    layout = _layout(system, settings, times, key, sums, chosen, judged, stop_when_decided, choices, choice)
-    path = Path(output) if output is not None else None
-    if path is not None and resume and path.is_file():
-        existing = Run(path)
-        if existing.identity == layout.identity:
-            discard_parts(path)  # of a run that was killed after it was complete
-            return existing
-        existing.close()
-        raise one_problem(str(path), "", "holds another run than this one; --force replaces it, another -o keeps it")
+    layout = _layout(system, settings, times, sums, chosen, judged, facts, choice.leaps)
     if choice.leaps or any(c.taken == LUMPED for c in choices):
         from driblet.error_estimate import error_estimate
 
@@ -193,8 +197,6 @@ def run(
         layout = replace(layout, provenance={**layout.provenance, **(estimate.provenance() if estimate else {})})
     writer = RunWriter(path, layout, resume=resume, force=force)
     threads = threads or os.cpu_count() or 1
-    from driblet.packs import PackRunner
-
     runner = PackRunner(system, settings, layout, sums, key, method, stop_when_decided, choice)
     file = _Ensemble(runner, layout, writer, threads, on_progress).run()
     return Run(file) if path is None else Run(path)
@@ -235,21 +237,16 @@ def _row_bytes(system: System, times: NDArray[np.float64]) -> int:
     return 8 * len(times) * max(1, species + 4 * reactions + len(system.readouts))
 
 
-def _layout(
-    system: System,
+def _facts(
     settings: RunSettings,
-    times: NDArray[np.float64],
     key: int,
-    sums: SumsPlan,
-    method: str,
-    judged: Mapping[str, str],
+    statistics: bool,
     stop_when_decided: bool,
     choices: tuple[Choice, ...],
     choice: EngineChoice,
-) -> Layout:
-    unit = max(1, min(-(-settings.replicates // 64), _UNIT_BYTES // _row_bytes(system, times)))
-    unit = 1 << (unit.bit_length() - 1)  # a power of two, so that whole units fill a pack of lanes
-    facts = {
+) -> dict[str, Any]:
+    """The settings that a run's results depend on."""
+    return {
         "engine": settings.engine,
         "seed": settings.seed,
         "replicates": settings.replicates,
@@ -258,13 +255,34 @@ def _layout(
         "record": settings.record,
         **({} if settings.burn_in_s is None else {"burn_in_s": settings.burn_in_s}),
         **({"stream_key": key} if key else {}),
-        **({} if sums.kept else {"statistics": False}),
+        **({} if statistics else {"statistics": False}),
         **({"stop_when_decided": True} if stop_when_decided else {}),
         **treatment_facts(choices),
         **choice.provenance(),
     }
-    identity = hashlib.sha256(json.dumps([FORMAT, system.text, facts], sort_keys=True).encode()).hexdigest()[:32]
+
+
+def _identity(system: System, facts: Mapping[str, Any]) -> str:
+    """A hash that runs share which must give the same bits."""
+    text = json.dumps([FORMAT, system.text, facts], sort_keys=True)
+    return hashlib.sha256(text.encode()).hexdigest()[:32]
+
+
+def _layout(
+    system: System,
+    settings: RunSettings,
+    times: NDArray[np.float64],
+    sums: SumsPlan,
+    method: str,
+    judged: Mapping[str, str],
+    facts: Mapping[str, Any],
+    leaps: bool,
+) -> Layout:
+    unit = max(1, min(-(-settings.replicates // 64), _UNIT_BYTES // _row_bytes(system, times)))
+    unit = 1 << (unit.bit_length() - 1)  # a power of two, so that whole units fill a pack of lanes
     import numba
+
+    from driblet.version import __version__
 
     provenance = {
         **facts,
@@ -286,13 +304,13 @@ def _layout(
         times,
         settings.replicates,
         unit,
-        identity,
+        _identity(system, facts),
         system.text,
         provenance,
         sums.per_replicate
         + (event_arrays() if settings.record == "events" else ())
         + Outcomes.arrays(len(system.requirements))
-        + (leap_arrays() if choice.leaps else ()),
+        + (leap_arrays() if leaps else ()),
         sums.fixed,
     )
 

@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from driblet.store import PerReplicate
+from driblet.run_file import PerReplicate
 
 # name in the group `leaping`, its column in the kernel's `work`, dtype, unit
 _KEPT: tuple[tuple[str, int, Any, str], ...] = (

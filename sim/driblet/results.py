@@ -19,7 +19,8 @@ from driblet.errors import one_problem
 from driblet.outcomes import GRID, Outcomes
 from driblet.quantities import copies_per_molar
 from driblet.readouts import evaluate
-from driblet.store import SERIES, digest, open_run, reading
+from driblet.run_file import SERIES, digest
+from driblet.store import open_run, reading
 from driblet.system import System, loads
 from driblet.system.expressions import Names, read_value
 from driblet.system.standard_readouts import standard_readout

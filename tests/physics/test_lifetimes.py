@@ -16,8 +16,8 @@ from scipy import stats
 from scipy.linalg import expm
 
 import driblet
-from driblet.outcomes import shares
 from driblet.requirements import judge_on_grid
+from driblet.shares import shares
 from driblet_analysis.lifetime import lifetimes
 from tests.physics.support import FALSE_ALARM, ONE_COPY_PER_MOLAR
 

@@ -6,9 +6,9 @@ import numpy as np
 import pytest
 
 import driblet
-from driblet.engines.lanes import LANES
+from driblet.engines.choice import LANES
 from driblet.packs import Pack, next_pack
-from driblet.store import Layout
+from driblet.run_file import Layout
 from tests.texts import MIXED
 
 

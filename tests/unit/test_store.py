@@ -16,7 +16,8 @@ import driblet
 from driblet import ensemble, store
 from driblet.errors import InputError
 from driblet.results import Run
-from driblet.store import Block, Layout, RunWriter, open_file, open_run, parts_folder
+from driblet.run_file import Block, Layout
+from driblet.store import RunWriter, open_file, open_run, parts_folder
 from tests.texts import MIXED, SMALL, changed
 
 SERIES = ("counts", "firings_forward", "firings_backward", "readout_part")

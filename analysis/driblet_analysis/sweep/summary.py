@@ -16,8 +16,9 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from driblet.outcomes import EVENT, shares
+from driblet.outcomes import EVENT
 from driblet.results import Run
+from driblet.shares import shares
 from driblet.survival import kaplan_meier
 from driblet.system import System
 from driblet.system.model import Requirement

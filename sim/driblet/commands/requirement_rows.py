@@ -11,8 +11,8 @@ from driblet.commands.screen import table
 MOST_VALUES_READ = 20_000_000
 
 if TYPE_CHECKING:
-    from driblet.outcomes import ShareRow
     from driblet.results import Run
+    from driblet.shares import ShareRow
     from driblet.survival import Interval
 
 

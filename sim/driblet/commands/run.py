@@ -137,7 +137,7 @@ def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-
     ]
     out.print(table("copies at the end, over compartments", ["species", "mean", "sd", "least", "most"], rows))
     if system.requirements:
-        from driblet.outcomes import shares
+        from driblet.shares import shares
 
         judged = shares(result)
         out.print(requirement_table(judged))
