@@ -13,7 +13,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from fractions import Fraction
 
-from driblet.engines.judging import LOG_DOWN, LOG_MIXED, LOG_UP, RATIO, SIGN
+from driblet.engines.requirement_arrays import LOG_DOWN, LOG_MIXED, LOG_UP, RATIO, SIGN
 from driblet.free_counts import estimated_names
 from driblet.readouts import copies_in
 from driblet.system.expressions import Comparison, Junction, Named, Negation, Node, Number, Reference, Truth

@@ -8,8 +8,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.engines.contract import BUFFER_FULL, RUNNING, EnsembleState, Recorders
-from driblet.engines.recording import new_log
-from driblet.store import PerReplicate
+from driblet.engines.recorders import new_log
+from driblet.run_file import PerReplicate
 
 MOST_EVENTS = 200_000  # kept of each replicate; those after are counted, not kept
 _BUFFER = 1 << 13

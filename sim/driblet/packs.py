@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.engine_choice import EngineChoice, leap_engine, leap_rates
+from driblet.engines.choice import LANES
 from driblet.engines.contract import (
     COUNT_OVERFLOW,
     REASONS,
@@ -25,7 +26,6 @@ from driblet.engines.contract import (
     new_state,
 )
 from driblet.engines.exact import ExactEngine
-from driblet.engines.lanes import LANES
 from driblet.engines.leap import LeapEngine
 from driblet.engines.leaps import WORK
 from driblet.errors import InterruptedRunError, one_problem
@@ -35,8 +35,8 @@ from driblet.loading import additions_of, prepare
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.readouts import evaluate
 from driblet.requirements import CompiledRequirements, conclude_all, look_at_all
+from driblet.run_file import Block, Layout
 from driblet.segments import begin, keep, segments
-from driblet.store import Block, Layout
 from driblet.sums import SumsPlan
 from driblet.system import RunSettings, System
 
@@ -45,9 +45,8 @@ _PACK_BYTES = 256 << 20
 _MOST_ROWS = 8 * LANES
 # what a recorder holds for each replicate; everything else is for all alike
 _OWN_ROWS = {
-    "averages": {"integral", "firings", "running", "next_edge"},
+    "averages": {"integral", "firings", "running", "settled", "next_edge"},
     "occupancy": {"seconds", "since"},
-    "conditions": {"weight", "first_met"},
     "log": {"time", "channel", "used"},
     "requirements": {
         *("coefficient", "leaf_value", "leaf_sum", "leaf_truth", "record"),

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.condition_forms import Form, Leaf, NotInFormError, Polynomial, form_of
-from driblet.engines.judging import (
+from driblet.engines.requirement_arrays import (
     AND,
     AT_END,
     END_LEAF,
@@ -27,8 +27,6 @@ from driblet.engines.judging import (
     TRUTH,
     UNDECIDED,
     Requirements,
-    close_judgement,
-    judge_all,
 )
 from driblet.network import Network
 from driblet.outcomes import EVENT, GRID, Outcomes
@@ -112,12 +110,16 @@ def look_at_all(
 
     rows : which; counts : (species, R).
     """
+    from driblet.engines.judging import judge_rows
+
     with np.errstate(all="ignore"):  # for kernels that run as plain Python
-        judge_all(requirements, rows, counts, time_s, opening)
+        judge_rows(requirements, rows, np.ascontiguousarray(counts.T), time_s, opening)
 
 
 def conclude_all(requirements: Requirements, end_s: Array) -> None:
     """The outcomes of replicates whose records end at end_s, (R,)."""
+    from driblet.engines.judging import close_judgement
+
     with np.errstate(all="ignore"):
         close_judgement(requirements, end_s)
 

@@ -17,9 +17,9 @@ from numpy.typing import NDArray
 from driblet.energetics.cycles import conservation_laws
 from driblet.engines.contract import EnsembleState, Recorders
 from driblet.engines.factors import factored_channels
-from driblet.engines.recording import new_averages, new_occupancy, recorders_for
+from driblet.engines.recorders import Ints, new_averages, new_occupancy, recorders_for, settle_plan
 from driblet.network import Network
-from driblet.store import PerReplicate
+from driblet.run_file import PerReplicate
 from driblet.system import System
 
 WINDOWS = 10
@@ -35,7 +35,8 @@ class SumsPlan:
     which of them each channel and then each species has; kept : whether there is any of this; histograms : whether time
     is counted at every event, which can cost more than the simulation itself, or taken from the samples; bin_width : int64,
     (N,), counts per bin of the histograms; span_s : when histograms are gathered; paced : of contract.Averages, monomials
-    that are integrated together with the factor of their channel.
+    that are integrated together with the factor of their channel; settle : which of them a firing changes, where only
+    those are added to.
     """
 
     edge_s: NDArray[np.float64]
@@ -49,6 +50,7 @@ class SumsPlan:
     channels: int
     species: int
     paced: NDArray[np.int64] | None = None
+    settle: tuple[Ints, Ints] | None = None
 
     @classmethod
     def of(
@@ -83,9 +85,11 @@ class SumsPlan:
         distinct, row = np.unique(np.hstack([factor, offset]), axis=0, return_inverse=True)
         order = np.argsort((distinct[:, :3] < n).sum(axis=1), kind="stable")  # those of one factor go together in lanes
         distinct, row = distinct[order], np.argsort(order)[row.reshape(-1)]
+        chosen = distinct[:, :3].astype(np.int64)
+        paced = np.column_stack([row.reshape(-1)[factored], np.arange(len(factored))])
         return cls(
             edges,
-            distinct[:, :3].astype(np.int64),
+            chosen,
             distinct[:, 3:],
             row,
             kept,
@@ -94,7 +98,8 @@ class SumsPlan:
             (begin, duration_s),
             len(network.channels),
             n,
-            np.column_stack([row.reshape(-1)[factored], np.arange(len(factored))]),
+            paced,
+            settle_plan(arrays, chosen, paced) if kept else None,
         )
 
     def recorders(self, state: EnsembleState, start_s: float, end_s: float) -> Recorders:
@@ -104,7 +109,7 @@ class SumsPlan:
         replicates = len(state.reason)
         inside = self.edge_s[(self.edge_s > start_s) & (self.edge_s < end_s)]
         edges = np.concatenate([[start_s], inside, [end_s]])
-        averages = new_averages(edges, self.factor, self.offset, replicates, self.channels, self.paced)
+        averages = new_averages(edges, self.factor, self.offset, replicates, self.channels, self.paced, self.settle)
         span = (max(start_s, self.span_s[0]), min(end_s, self.span_s[1]))
         if not self.histograms:
             return recorders_for(state, averages)

@@ -27,7 +27,7 @@ import numpy as np
 import driblet
 from driblet.engines.contract import RUNNING, new_samples, new_state
 from driblet.engines.exact import ExactEngine, choose_method
-from driblet.engines.recording import new_averages, new_occupancy, recorders_for
+from driblet.engines.recorders import new_averages, new_occupancy, recorders_for
 from driblet.network import Network
 from tests.benchmarks import hard_coded_c
 from tests.benchmarks.networks import ring, system_text

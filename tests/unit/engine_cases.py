@@ -1,5 +1,5 @@
 """Random networks for the kernels, and a slow simulator in plain Python that gives the same bits: groups of sums, windows,
-histograms, conditions and events included, each computed in the most obvious way from the list of states."""
+histograms, stops and events included, each computed in the most obvious way from the list of states."""
 
 from __future__ import annotations
 
@@ -8,11 +8,24 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from driblet.engines.choice import LANES
 from driblet.engines.contract import RUNNING, EnsembleState, Recorders, Samples, new_samples, new_state
 from driblet.engines.exact import ExactEngine
-from driblet.engines.lanes import LANES
-from driblet.engines.recording import new_averages, new_conditions, new_log, new_occupancy, recorders_for
+from driblet.engines.recorders import MOST_SUMMED_ALL, new_averages, new_log, new_occupancy, recorders_for, settle_plan
+from driblet.engines.requirement_arrays import (
+    NEXT_WINDOW,
+    ONCE,
+    OUTCOME,
+    SIGN,
+    SINCE,
+    TIME_MET,
+    TRUTH,
+    UNDECIDED,
+    Requirements,
+    no_requirements,
+)
 from driblet.network import Channel, Network
+from driblet.requirements import look_at_all
 from tests.reference import minus_log, words
 
 FAN, TOP = 8, 64
@@ -61,6 +74,8 @@ class Pack:
     stream: np.ndarray
     times: np.ndarray
     recording: bool = True
+    stopping: bool = True
+    most_summed_all: int = MOST_SUMMED_ALL
 
     @classmethod
     def of(
@@ -72,6 +87,7 @@ class Pack:
         *,
         own_rates: bool = True,
         load: int = 12,
+        stopping: bool = True,
     ) -> Pack:
         network, rates = random_network(seed, channels)
         rng = np.random.default_rng([seed, 1])
@@ -80,7 +96,7 @@ class Pack:
             np.exp(rng.uniform(-0.3, 0.3, (replicates, channels))) if own_rates else np.ones((replicates, channels))
         )
         stream = np.random.SeedSequence(seed).generate_state(4 * replicates, np.uint64).reshape(replicates, 4)
-        return cls(network, counts, rates * factor, stream, np.array(times, dtype=float))
+        return cls(network, counts, rates * factor, stream, np.array(times, dtype=float), stopping=stopping)
 
     def recorders(self, state: EnsembleState, rows: Sequence[int], log: int = 0) -> Recorders:
         if not self.recording:
@@ -90,20 +106,43 @@ class Pack:
         own = [[i, n, n] for i in range(n)] + [[0, 1, n], [1, 1, 1]]
         factor = np.concatenate([np.array(own), arrays.reactant])
         offset = np.concatenate([np.zeros((n, 3)), [[0, 0, 0], [-1, 0, 1]], arrays.offset])
-        averages = new_averages(np.array([0.2, 0.45, 1.0]) * end, factor, offset, len(rows), m)
+        settle = settle_plan(arrays, factor, np.zeros((0, 2), dtype=np.int64), self.most_summed_all)
+        averages = new_averages(np.array([0.2, 0.45, 1.0]) * end, factor, offset, len(rows), m, settle=settle)
         occupancy = new_occupancy(
             np.arange(0, n, 2), 1 + np.arange(0, n, 2) % 3, 20, (0.3 * end, 0.9 * end), len(rows), n
         )
-        weight = np.array([[1.0, -self.threshold(r), 1.0, 1.0, -400.0] for r in rows])
-        conditions = new_conditions(
-            np.array([0, 2, 5]),
-            weight,
-            np.array([[0, n, n], [n, n, n], [0, 1, n], [2, 2, n], [n, n, n]]),
-            np.array([[0, 0, 0], [0, 0, 0], [0, -1, 0], [0, 1, 0], [0, 0, 0]]),
-            np.array([[0.1 * end, end], [0.0, 0.5 * end]]),
-            np.array([True, False]),
+        requirements = self.stops(rows, end) if self.stopping else None
+        if requirements is not None:
+            look_at_all(requirements, np.arange(len(rows)), state.counts.T, 0.0, True)
+        return recorders_for(state, averages, occupancy, new_log(len(rows), log), requirements)
+
+    def stops(self, rows: Sequence[int], end: float) -> Requirements:
+        """One requirement: that species 0 pass the threshold of its replicate once, which then stops."""
+        change = [{i for i, _ in channel.change} for channel in self.network.channels]
+        record = np.full((len(rows), 1, 8), np.nan)
+        record[:, :, [TRUTH, SINCE, NEXT_WINDOW, TIME_MET]] = 0.0
+        record[:, :, OUTCOME] = UNDECIDED
+        each = np.zeros((len(rows), 1))
+        return no_requirements(len(rows), len(change))._replace(
+            moments=1,
+            moment_leaves=1,
+            stops=True,
+            affected_start=np.cumsum([0, *(0 in c for c in change)]),
+            affected=np.zeros(sum(0 in c for c in change), dtype=np.int64),
+            table=np.array([[0, 1, 0, 1, ONCE, 1]]),
+            span=np.array([[0.0, end, end]]),
+            leaf=np.array([[SIGN, 1, 0, 0]]),
+            term_start=np.array([0, 2]),
+            factor_start=np.array([0, 0, 1]),
+            factor_species=np.zeros(1, dtype=np.int64),
+            factor_offset=np.zeros(1),
+            program=np.zeros(1, dtype=np.int64),
+            coefficient=np.array([[self.threshold(r), -1.0] for r in rows]),
+            leaf_value=each.copy(),
+            leaf_sum=each.copy(),
+            leaf_truth=each.copy(),
+            record=record,
         )
-        return recorders_for(state, averages, occupancy, conditions, new_log(len(rows), log))
 
     def threshold(self, r: int) -> float:
         """What count species 0 must pass to stop replicate r; two of three never do."""
@@ -128,7 +167,8 @@ class Pack:
 def flat(result: tuple[EnsembleState, Samples, Recorders]) -> list[np.ndarray]:
     """All arrays of a result."""
     state, samples, recorders = result
-    return [*state, *samples, *(a for recorder in recorders if recorder is not None for a in recorder)]
+    recorded = [np.asarray(a) for recorder in recorders if recorder is not None for a in recorder]
+    return [*state, *samples, *recorded]
 
 
 def same_bits(one: tuple[EnsembleState, Samples, Recorders], other: tuple[EnsembleState, Samples, Recorders]) -> bool:
@@ -225,15 +265,20 @@ def value(factor: np.ndarray, offset: np.ndarray, state: Sequence[int]) -> float
     return float(a) * float(b) * float(c)
 
 
-def windows(history: History, recorders: Recorders) -> np.ndarray:
-    """What Averages.integral holds of a replicate, shape=(windows, monomials); a stopped one has part of its last."""
+def windows(pack: Pack, history: History, recorders: Recorders) -> np.ndarray:
+    """What Averages.integral holds of a replicate, shape=(windows, monomials); a stopped one has part of its last.
+
+    Every event adds to every monomial or, where they are settled, only to those of a species that it changes.
+    """
     averages = recorders.averages
     out = np.zeros((len(averages.edge) - 1, len(averages.factor)))
+    changed = [{i for i, _ in channel.change} for channel in pack.network.channels]
     for q in range(len(averages.factor)):
-        running, edge = 0.0, 0
+        running, edge, since = 0.0, 0, 0.0
+        species = set(averages.factor[q].tolist())
         for k, state in enumerate(history.states):
-            since = history.moments[k]
-            later = history.moments[k + 1] if k + 1 < len(history.moments) else history.stop
+            last = k == len(history.channels)
+            later = history.stop if last else history.moments[k + 1]
             v = value(averages.factor[q], averages.offset[q], state)
             while edge < len(averages.edge) and later > averages.edge[edge]:
                 running += v * (float(averages.edge[edge]) - since)
@@ -241,7 +286,9 @@ def windows(history: History, recorders: Recorders) -> np.ndarray:
                 if edge:
                     out[edge - 1, q] = running
                 running, edge = 0.0, edge + 1
-            running += v * (later - since)
+            if last or not len(averages.settle_start) or species & changed[history.channels[k]]:
+                running += v * (later - since)
+                since = later
         if history.stop < np.inf and 0 < edge < len(averages.edge):
             out[edge - 1, q] = running
     return out
@@ -266,16 +313,7 @@ def histogram(pack: Pack, history: History, recorders: Recorders) -> np.ndarray:
     return out
 
 
-def first_met(history: History, recorders: Recorders, r: int, c: int) -> float:
-    """When condition c is first met if nothing stops the replicate."""
-    conditions = recorders.conditions
-    begin, end = conditions.span[c].tolist()
-    for k, state in enumerate(history.states):
-        since = history.moments[k]
-        later = history.moments[k + 1] if k + 1 < len(history.moments) else np.inf
-        level = 0.0
-        for t in range(conditions.term_start[c], conditions.term_start[c + 1]):
-            level += float(conditions.weight[r, t]) * value(conditions.factor[t], conditions.offset[t], state)
-        if level > 0.0 and later > begin and since <= end:
-            return max(since, begin)
-    return np.inf
+def first_above_threshold(pack: Pack, r: int, history: History) -> float:
+    """When the count of species 0 first passes what stops replicate r."""
+    passed = (t for t, state in zip(history.moments, history.states, strict=True) if state[0] > pack.threshold(r))
+    return next(passed, np.inf)

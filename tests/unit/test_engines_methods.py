@@ -22,10 +22,10 @@ from driblet.engines.contract import (
     new_state,
 )
 from driblet.engines.exact import METHODS, ExactEngine, choose_method, fewest_lanes
-from driblet.engines.recording import new_log, recorders_for
+from driblet.engines.recorders import new_log, recorders_for
 from tests.unit.engine_cases import (
     Pack,
-    first_met,
+    first_above_threshold,
     flat,
     histogram,
     random_network,
@@ -59,7 +59,7 @@ def test_every_method_gives_the_bits_of_the_slow_simulator(channels: int) -> Non
     assert not 9 <= channels <= 150 or 0 < stopped.sum() < len(stopped), "some stop and some do not"
     for r in range(len(one.counts)):
         whole = simulate(one, r)
-        stop = first_met(whole, recorders, r, 0)
+        stop = first_above_threshold(one, r, whole)
         slow = whole.until(stop)
         np.testing.assert_array_equal(state.counts[r, :-1], slow.states[-1])
         for g, t in enumerate(samples.time):
@@ -67,15 +67,62 @@ def test_every_method_gives_the_bits_of_the_slow_simulator(channels: int) -> Non
             np.testing.assert_array_equal(samples.counts[r, g], slow.states[at])
             fired = np.bincount(slow.channels[:at], minlength=channels)
             np.testing.assert_array_equal(samples.firings[r, g], fired)
-        other = first_met(whole, recorders, r, 1)
-        np.testing.assert_array_equal(recorders.conditions.first_met[r], [stop, other if other <= stop else np.inf])
         assert stopped[r] == (stop < np.inf)
         assert state.clock[r] == slow.end
-        np.testing.assert_array_equal(recorders.averages.integral[r], windows(slow, recorders))
+        np.testing.assert_array_equal(recorders.averages.integral[r], windows(one, slow, recorders))
         np.testing.assert_array_equal(recorders.occupancy.seconds[r], histogram(one, slow, recorders))
 
 
-@pytest.mark.parametrize("channels", [5, 40, 150])
+@pytest.mark.parametrize("stopping", [True, False])
+@pytest.mark.parametrize("settling", [True, False])
+def test_settled_or_not_and_stopped_or_not_the_bits_are_those_of_the_slow_simulator(
+    settling: bool, stopping: bool
+) -> None:
+    one = pack(40, seed=6)
+    one.most_summed_all, one.stopping = 0 if settling else 1000, stopping
+    scalar, lanes = one.run("scalar"), one.run("lanes")
+    assert same_bits(scalar, lanes)
+    state, _, recorders = scalar
+    assert len(recorders.averages.settle_start) == (41 if settling else 0)
+    for r in range(len(one.counts)):
+        whole = simulate(one, r)
+        slow = whole.until(first_above_threshold(one, r, whole)) if stopping else whole
+        np.testing.assert_array_equal(state.counts[r, :-1], slow.states[-1])
+        np.testing.assert_array_equal(recorders.averages.integral[r], windows(one, slow, recorders))
+
+
+@settings(max_examples=25, deadline=None)
+@given(st.integers(0, 10**6), st.integers(1, 90), st.sampled_from(METHODS))
+def test_settled_integrals_are_those_of_adding_to_all(seed: int, channels: int, method: str) -> None:
+    found = []
+    for most in (0, 1000):
+        one = Pack.of(seed, channels, 9, np.linspace(0, 0.05, 3), stopping=seed % 2 == 0)
+        one.most_summed_all = most
+        found.append(one.run(method, 4000)[2].averages)
+    np.testing.assert_allclose(found[0].integral, found[1].integral, rtol=1e-9, atol=1e-12)
+    np.testing.assert_array_equal(found[0].firings, found[1].firings)
+
+
+def test_a_firing_that_settles_too_little_is_caught() -> None:
+    """The broken twin: a plan that forgets what one species is used in."""
+    one = pack(40, seed=6)
+    one.stopping, one.most_summed_all = False, 0
+    right = one.run("scalar")[2].averages
+    i = one.network.channels[0].change[0][0]
+    forgetful = [q for q, used in enumerate(right.factor.tolist()) if i in used]
+    state = new_state(one.counts, one.stream, 40)
+    samples = new_samples(one.times, len(one.counts), len(one.network.species), 40)
+    recorders = one.recorders(state, range(len(one.counts)))
+    settle = right.settle.copy()
+    settle[np.isin(settle, forgetful)] = next(q for q in range(len(right.factor)) if q not in forgetful)
+    recorders = recorders._replace(averages=recorders.averages._replace(settle=settle))
+    engine = ExactEngine(one.network.arrays, len(one.network.species), "scalar")
+    while (state.reason == RUNNING).any():
+        engine.advance(one.rates, state, samples, 1 << 20, recorders)
+    assert not np.allclose(recorders.averages.integral, right.integral, rtol=1e-3)
+
+
+@pytest.mark.parametrize("channels", [5, 40, 150, 320])
 @pytest.mark.parametrize(("method", "lanes"), [("scalar", 64), ("lanes", 8), ("lanes", 16), ("lanes", 128), (None, 64)])
 @pytest.mark.parametrize("budget", [1, 61, 1 << 20])
 def test_width_chunks_and_method_never_change_a_bit(channels: int, method: str | None, lanes: int, budget: int) -> None:
@@ -106,10 +153,10 @@ def test_company_never_changes_a_bit(method: str) -> None:
 @pytest.mark.parametrize("method", METHODS)
 def test_recording_never_changes_a_bit(method: str) -> None:
     one = pack(40, seed=9)
-    recorded, _, recorders = one.run(method)
+    recorded, _, _ = one.run(method)
     one.recording = False
     plain, _, _ = one.run(method)
-    free = recorders.conditions.first_met[:, 0] == np.inf
+    free = recorded.reason != STOP_CONDITION
     assert free.sum() > 3
     for a, b in zip(recorded, plain, strict=True):
         np.testing.assert_array_equal(a[free], b[free])
@@ -139,7 +186,7 @@ def test_a_wrong_reading_of_the_windows_is_caught() -> None:
     state, _, recorders = one.run("scalar")
     r = int((state.reason != STOP_CONDITION).nonzero()[0][0])
     late = recorders._replace(averages=recorders.averages._replace(edge=np.array([0.0, *recorders.averages.edge[1:]])))
-    right, wrong = windows(simulate(one, r), recorders), windows(simulate(one, r), late)
+    right, wrong = windows(one, simulate(one, r), recorders), windows(one, simulate(one, r), late)
     np.testing.assert_array_equal(recorders.averages.integral[r], right)
     assert not np.array_equal(right, wrong)
 

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
 import driblet
 from driblet.engines.contract import RUNNING, new_samples, new_state
 from driblet.engines.exact import ExactEngine
-from driblet.engines.recording import new_log, recorders_for
+from driblet.engines.recorders import new_log, recorders_for, settle_plan
 from driblet.loading import prepare
 from driblet.lumping import treated
 from driblet.network import Network
@@ -61,14 +63,17 @@ def lumped(cv: float) -> driblet.System:
 
 
 def advance(
-    system: driblet.System, method: str, budget: int, lanes: int = 64, replicates: int = 23
+    system: driblet.System, method: str, budget: int, lanes: int = 64, replicates: int = 23, most_summed_all: int = 300
 ) -> list[np.ndarray]:
     network = Network.of(system)
     start = prepare(system, 4, range(replicates))
     engine = ExactEngine(network.arrays, len(network.species), method, lanes)
     state = new_state(start.counts, start.stream, len(network.channels))
     samples = new_samples(TIMES, replicates, len(network.species), len(network.channels))
-    recorders = SumsPlan.of(system, network, TIMES[-1], None).recorders(state, 0.0, TIMES[-1])
+    plan = SumsPlan.of(system, network, TIMES[-1], None)
+    assert plan.paced is not None
+    plan = replace(plan, settle=settle_plan(network.arrays, plan.factor, plan.paced, most_summed_all))
+    recorders = plan.recorders(state, 0.0, TIMES[-1])
     rates = network.rates(start.omega)
     while (state.reason == RUNNING).any():
         engine.advance(rates, state, samples, budget, recorders)
@@ -84,6 +89,18 @@ def test_width_chunks_and_method_never_change_a_bit(cv: float, method: str, budg
     wanted = advance(system, "scalar", 1 << 20)
     assert (wanted[4].sum(axis=0) > 0).all()  # every channel fires
     assert all(a.tobytes() == b.tobytes() for a, b in zip(wanted, advance(system, method, budget, lanes), strict=True))
+
+
+@pytest.mark.parametrize("method", ["scalar", "lanes"])
+def test_settled_integrals_of_factors_are_those_of_adding_to_all(method: str) -> None:
+    system = lumped(0.2)
+    every, settled = (advance(system, method, 900, most_summed_all=most) for most in (300, 0))
+    other = advance(system, "scalar", 1 << 20, most_summed_all=0)
+    assert all(a.tobytes() == b.tobytes() for a, b in zip(settled, other, strict=True))
+    integral = [next(a for a in arrays if a.ndim == 3 and a.dtype == float) for arrays in (every, settled)]
+    assert integral[0].size
+    assert (integral[0] > 0).any()
+    np.testing.assert_allclose(integral[1], integral[0], rtol=1e-9, atol=1e-12)
 
 
 def test_waits_and_integrals_are_those_of_the_stated_propensities() -> None:

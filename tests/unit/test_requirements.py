@@ -18,8 +18,8 @@ import driblet
 from driblet.condition_forms import NotInFormError, form_of
 from driblet.engines.contract import RUNNING, new_samples, new_state
 from driblet.engines.exact import ExactEngine
-from driblet.engines.judging import Requirements
-from driblet.engines.recording import recorders_for
+from driblet.engines.recorders import recorders_for
+from driblet.engines.requirement_arrays import Requirements
 from driblet.network import Network
 from driblet.outcomes import Outcomes
 from driblet.readouts import extended

@@ -12,6 +12,9 @@ import os
 import stat
 import tempfile
 from pathlib import Path
+from typing import Any
+
+from numba import njit
 
 _KERNEL_FOLDER = Path(__file__).parent
 
@@ -65,3 +68,6 @@ def use_cache() -> bool:
 
 
 CACHE = use_cache()
+
+# For functions that kernels alone call: no way in from Python is compiled, which takes as long as much of the rest.
+inner: Any = njit(nogil=True, cache=CACHE, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)  # type: ignore[call-overload]

@@ -21,7 +21,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from driblet.engines.judging import Requirements
+from driblet.engines.requirement_arrays import Requirements
 
 RUNNING = 0
 TIME_REACHED = 1
@@ -106,24 +106,35 @@ class Samples(NamedTuple):
 class Averages(NamedTuple):
     """Exact time integrals of Q monomials (n_a - o)(n_b - p)(n_c - q) over E - 1 windows of time.
 
+    Every event adds to all integrals or, where `settle_start` is not empty, only to those that it changes, each of which
+    knows up to when it is settled; at the edges of windows all of them are. The rounding of the two differs, so that which it
+    is depends on the network alone (recorders.settle_plan).
+
     edge : float64, (E,), s, increasing, the last not after the last grid point: window k is [edge_k, edge_k+1)
-    factor : int64, (Q, 3), species as in NetworkArrays.reactant; offset : float64, (Q, 3)
+    factor : int32, (Q, 3), species as in NetworkArrays.reactant; offset : float32, (Q, 3), whole numbers
     paced : int64, (K, 2), monomials that are those of channels with a factor, integrated together with it: q and the
     channel's row in `pace` (factors.py); `factor` and `offset` make such a q zero
+    settle_start, settle : int32, CSR over channels, which monomials a firing changes; empty where every event adds to all
+    pace_row : int32, (Q,), row in `pace` of those that `paced` lists, -1 for others
     integral : float64, (R, E - 1, Q), s times molecules to the power of the monomial's order; the result
     firings : int64, (R, E, M), cumulative firings at each edge; the result
-    running : float64, (R, Q), of the window the replicate is in; next_edge : int64, (R,). Carried between calls.
+    running : float64, (R, Q), of the window the replicate is in; settled : (R, Q), s, or (R, 0); next_edge : int64, (R,).
+    Carried between calls.
 
     A replicate that stops early leaves its last window integrated up to its end (`state.clock`) and later ones zero.
     """
 
     edge: NDArray[np.float64]
-    factor: NDArray[np.int64]
-    offset: NDArray[np.float64]
+    factor: NDArray[np.int32]
+    offset: NDArray[np.float32]
     paced: NDArray[np.int64]
+    settle_start: NDArray[np.int32]
+    settle: NDArray[np.int32]
+    pace_row: NDArray[np.int32]
     integral: NDArray[np.float64]
     firings: NDArray[np.int64]
     running: NDArray[np.float64]
+    settled: NDArray[np.float64]
     next_edge: NDArray[np.int64]
 
 
@@ -144,25 +155,6 @@ class Occupancy(NamedTuple):
     since: NDArray[np.float64]
 
 
-class Conditions(NamedTuple):
-    """When each of C polynomial conditions is first met, at event resolution; one that stops ends the replicate then.
-
-    Condition c is sum_t weight[r, t] (n_a - o)(n_b - p)(n_c - q) > 0 over its terms, summed in order; a constant is a term
-    of dummies, a ratio or a Gibbs energy against a threshold is brought to this form by multiplying out.
-    term_start : int64, (C + 1,); weight : float64, (R, T); factor : int64, (T, 3); offset : float64, (T, 3)
-    span : float64, (C, 2), s, when it is looked at, within the grid; stops : int64, (C,), 1 or 0
-    first_met : float64, (R, C), s, inf where it was not; the result.
-    """
-
-    term_start: NDArray[np.int64]
-    weight: NDArray[np.float64]
-    factor: NDArray[np.int64]
-    offset: NDArray[np.float64]
-    span: NDArray[np.float64]
-    stops: NDArray[np.int64]
-    first_met: NDArray[np.float64]
-
-
 class EventLog(NamedTuple):
     """Every event until the caller empties it. time : float64, (R, L), s; channel : int32, (R, L); used : int64, (R,)."""
 
@@ -176,7 +168,6 @@ class Recorders(NamedTuple):
 
     averages: Averages
     occupancy: Occupancy
-    conditions: Conditions
     log: EventLog
     requirements: Requirements | None
 

@@ -8,38 +8,23 @@ scalar  one replicate after the other (scalar.py): an event costs nearly the sam
 
 from __future__ import annotations
 
-import math
 from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
+from driblet.engines.choice import LANES, METHODS, choose_method, fewest_lanes
 from driblet.engines.contract import RUNNING, EnsembleState, NetworkArrays, Recorders, Samples
 from driblet.engines.factors import factor_rows, most_nodes
-from driblet.engines.lanes import LANES, advance_lanes, lane_table, new_lanes
-from driblet.engines.recording import recorders_for
+from driblet.engines.lane_memory import lane_table, new_lanes
+from driblet.engines.lanes import advance_lanes
+from driblet.engines.recorders import recorders_for
 from driblet.engines.scalar import advance_scalar
 from driblet.engines.sums import Refresh, SumRows, refresh_plan, select, sum_rows
 
 Table = TypeVar("Table", NetworkArrays, SumRows, Refresh)
 
 __all__ = ["METHODS", "ExactEngine", "advance", "choose_method", "fewest_lanes", "select"]
-
-METHODS = ("lanes", "scalar")
-
-
-def fewest_lanes(channels: int) -> int:
-    """The least number of replicates in lockstep that are faster than one after the other.
-
-    Measured with tests/benchmarks/exact_engine.py: 3 at 2 channels, 4 at 14, 6 at 60, 9 at 120, 24 to 29 at 300; about
-    500 channels are past what 64 lanes make up for.
-    """
-    return math.ceil(3.0 + channels / 25.0 + (channels / 80.0) ** 2)
-
-
-def choose_method(channels: int, replicates: int, logging: bool = False) -> str:
-    """The faster method for a network and an ensemble; an event log is kept by the scalar kernel only."""
-    return "scalar" if logging or fewest_lanes(channels) > min(replicates, LANES) else "lanes"
 
 
 def _compact(table: Table) -> Table:

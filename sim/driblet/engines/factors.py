@@ -14,7 +14,7 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-from driblet.engines.compile_cache import CACHE
+from driblet.engines.compile_cache import CACHE, inner
 from driblet.engines.contract import NetworkArrays
 from driblet.engines.vector_hints import separate_arrays_wide_vectors
 
@@ -60,7 +60,7 @@ def factor_value(first, top, end, parent, species, offset, constants, below_at, 
     return above / below if top > first else 1.0 / below
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def renew_factors(  # type: ignore[no-untyped-def]
     rows, leaf, start, parent, species, offset, reactant, shift, constants, counts, scratch, value, pace
 ):
@@ -85,7 +85,7 @@ def renew_factors(  # type: ignore[no-untyped-def]
         value[leaf[j]] = constants[j] * own
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def sum_with_factors(  # type: ignore[no-untyped-def]
     leaf, upper, source, rows, start, parent, species, offset, reactant, shift, rate, counts, sums, pace, scratch, width
 ):
@@ -137,7 +137,7 @@ def sum_with_factors(  # type: ignore[no-untyped-def]
             sums[row, lane] = sums[before, lane] + sums[total, lane]
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def integrate_pace(paced, pace, running, span, width):  # type: ignore[no-untyped-def]
     """Add a time span in every lane to the integrals of propensities with a factor; paced : of contract.Averages."""
     separate_arrays_wide_vectors()

@@ -8,96 +8,50 @@ take arrays and no tuples, whose many reference counts would cost more than the 
 
 from __future__ import annotations
 
-from typing import NamedTuple
-
 import numpy as np
 from numba import njit
-from numpy.typing import NDArray
 
-from driblet.engines.compile_cache import CACHE
+from driblet.engines.compile_cache import CACHE, inner
 from driblet.engines.random_stream import minus_log
+from driblet.engines.requirement_arrays import (
+    AND,
+    AT_END,
+    END,
+    END_CODE,
+    END_LEAF,
+    FAILED,
+    FIRST_CODE,
+    FIRST_FAILURE,
+    FIRST_LEAF,
+    FIRST_MET,
+    JUDGED_UNTIL,
+    KIND,
+    LOG_DOWN,
+    LOG_UP,
+    MET,
+    NEXT_WINDOW,
+    ONCE,
+    OTHER,
+    OUTCOME,
+    POLYNOMIAL,
+    RATIO,
+    SIGN,
+    SINCE,
+    START,
+    STRICT,
+    THROUGHOUT,
+    TIME_MET,
+    TRUTH,
+    UNDECIDED,
+    WHEN,
+    WINDOW,
+    WINDOWS,
+)
+from driblet.engines.vector_hints import seldom_called
 
-THROUGHOUT, AT_END, ONCE = range(3)
-SIGN, RATIO, LOG_UP, LOG_DOWN, LOG_MIXED = range(5)
-AND, OR = -1, -2
-UNDECIDED, FAILED, MET = -1, 0, 1
 U = np.uint64
 _ONE = U(1)
 _TINY = 2.2250738585072014e-308  # the smallest normal double
-
-# columns of Requirements.table, .span, .leaf and .record
-FIRST_LEAF, END_LEAF, FIRST_CODE, END_CODE, WHEN, WINDOWS = range(6)
-START, END, WINDOW = range(3)
-KIND, STRICT, POLYNOMIAL, OTHER = range(4)
-TRUTH, SINCE, NEXT_WINDOW, TIME_MET, FIRST_MET, FIRST_FAILURE, JUDGED_UNTIL, OUTCOME = range(8)
-
-
-class Requirements(NamedTuple):
-    """Q requirements of R replicates, the `moments` ones that judge every state first, then those that judge averages.
-
-    moments, moment_leaves : how many judge every state, and their leaves; stops : whether a replicate may end when all are
-    decided
-    affected_start, affected : CSR over channels, which requirements a firing can change
-    table : int64, (Q, 6), leaves and program codes of each, WHEN, and how many WINDOWS fill its span (the last takes the rest)
-    span : (Q, 3), s, START, END, and WINDOW averaged over
-    leaf : int64, (L, 4), KIND, STRICT, POLYNOMIAL, and the OTHER one of a ratio or logarithm
-    term_start : (P + 1,) over polynomials; factor_start : (T + 1,) over terms; factor_species, factor_offset : (F,)
-    program : leaves from 0 up within the requirement, AND, OR
-    coefficient : (R, T)
-    leaf_value, leaf_sum : (R, L), of averages: of the moment, and integrated over the window so far
-    leaf_truth : (R, L), 1 or 0; record : (R, Q, 8), what is known; times in s, NaN for what did not happen
-    integrated_to, next_edge : (R,), s, of averages; halt : (R,), s, when all were decided, inf before.
-    """
-
-    moments: int
-    moment_leaves: int
-    stops: bool
-    affected_start: NDArray[np.int64]
-    affected: NDArray[np.int64]
-    table: NDArray[np.int64]
-    span: NDArray[np.float64]
-    leaf: NDArray[np.int64]
-    term_start: NDArray[np.int64]
-    factor_start: NDArray[np.int64]
-    factor_species: NDArray[np.int64]
-    factor_offset: NDArray[np.float64]
-    program: NDArray[np.int64]
-    coefficient: NDArray[np.float64]
-    leaf_value: NDArray[np.float64]
-    leaf_sum: NDArray[np.float64]
-    leaf_truth: NDArray[np.float64]
-    record: NDArray[np.float64]
-    integrated_to: NDArray[np.float64]
-    next_edge: NDArray[np.float64]
-    halt: NDArray[np.float64]
-
-
-def no_requirements(replicates: int, channels: int) -> Requirements:
-    """Requirements that are off."""
-    none, start, nothing = np.zeros(0, dtype=np.int64), np.zeros(1, dtype=np.int64), np.zeros((replicates, 0))
-    return Requirements(
-        moments=0,
-        moment_leaves=0,
-        stops=False,
-        affected_start=np.zeros(channels + 1, dtype=np.int64),
-        affected=none,
-        table=np.zeros((0, 6), dtype=np.int64),
-        span=np.zeros((0, 3)),
-        leaf=np.zeros((0, 4), dtype=np.int64),
-        term_start=start,
-        factor_start=start,
-        factor_species=none,
-        factor_offset=np.zeros(0),
-        program=none,
-        coefficient=nothing,
-        leaf_value=nothing,
-        leaf_sum=nothing,
-        leaf_truth=nothing,
-        record=np.zeros((replicates, 0, 8)),
-        integrated_to=np.zeros(replicates),
-        next_edge=np.full(replicates, np.inf),
-        halt=np.full(replicates, np.inf),
-    )
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy", inline="always")
@@ -130,7 +84,7 @@ def log_ratio(kind, above, below):  # type: ignore[no-untyped-def]
     return -np.inf if no_above else np.inf if no_below else value
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def conclude(table, program, leaf_truth, r, q):  # type: ignore[no-untyped-def]
     """Truth of requirement q, 1 or 0, from the truth of its leaves."""
     first = table[q, FIRST_LEAF]
@@ -146,7 +100,7 @@ def conclude(table, program, leaf_truth, r, q):  # type: ignore[no-untyped-def]
     return np.float64(stack & 1)
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def credit(table, span, record, r, q, until):  # type: ignore[no-untyped-def]
     """Write down that the truth of q held from SINCE up to `until`, that instant left out."""
     start, end = span[q, START], span[q, END]
@@ -164,9 +118,10 @@ def credit(table, span, record, r, q, until):  # type: ignore[no-untyped-def]
         record[r, q, OUTCOME] = truth
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def turn(table, span, program, leaf_truth, record, r, q, clock):  # type: ignore[no-untyped-def]
     """A leaf of q has changed at `clock`; returns whether q has."""
+    seldom_called()
     truth = conclude(table, program, leaf_truth, r, q)
     if truth == record[r, q, TRUTH]:
         return False
@@ -188,9 +143,10 @@ def leaf_change(leaf, term_start, factor_start, species, offset, coefficient, le
     return 1
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def take_value(leaf, term_start, factor_start, species, offset, coefficient, r, k, counts, column):  # type: ignore[no-untyped-def]
     """The value of the moment of leaf k of an average."""
+    seldom_called()
     kind = leaf[k, KIND]
     p = U(leaf[k, POLYNOMIAL])
     value = polynomial_value(term_start, factor_start, species, offset, coefficient, r, p, counts, column)
@@ -207,7 +163,7 @@ def part(value, time):  # type: ignore[no-untyped-def]
     return value * time if time > 0.0 else 0.0
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def window_edge(table, span, record, r, q):  # type: ignore[no-untyped-def]
     """Where the present window of an average ends: the start of the span at first, inf after the last."""
     k = record[r, q, NEXT_WINDOW]
@@ -218,9 +174,10 @@ def window_edge(table, span, record, r, q):  # type: ignore[no-untyped-def]
     return span[q, START] + (k + 1.0) * span[q, WINDOW]
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def judge_window(table, span, leaf, program, leaf_truth, record, sums, r, column, q):  # type: ignore[no-untyped-def]
     """The present window of q is complete: judge it, and begin the next."""
+    seldom_called()
     k = record[r, q, NEXT_WINDOW]
     edge = window_edge(table, span, record, r, q)
     record[r, q, NEXT_WINDOW] = k + 1.0
@@ -241,7 +198,7 @@ def judge_window(table, span, leaf, program, leaf_truth, record, sums, r, column
         record[r, q, OUTCOME] = truth
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def cross_edges(  # type: ignore[no-untyped-def]
     moments, moment_leaves, table, span, leaf, program, leaf_value, leaf_truth, record, integrated_to, next_edge, sums, r,
     column, until,
@@ -250,6 +207,7 @@ def cross_edges(  # type: ignore[no-untyped-def]
 
     Afterwards averages are integrated up to integrated_to[r].
     """
+    seldom_called()
     edge = next_edge[r]
     while edge < until:
         for n in range(moment_leaves, leaf.shape[0]):
@@ -264,9 +222,10 @@ def cross_edges(  # type: ignore[no-untyped-def]
         next_edge[r] = edge
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def all_decided(moments, table, span, record, r, clock):  # type: ignore[no-untyped-def]
     """Whether nothing after `clock` can change an outcome of replicate r."""
+    seldom_called()
     for q in range(table.shape[0]):
         if clock > span[q, END] or record[r, q, OUTCOME] != UNDECIDED:
             continue
@@ -283,6 +242,13 @@ def all_decided(moments, table, span, record, r, clock):  # type: ignore[no-unty
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
+def judge_rows(rq, rows, counts, clock, opening):  # type: ignore[no-untyped-def]
+    """judge_all for counts (R, species): the way in from Python, in one compiled form for any number of replicates."""
+    every = 1 if clock >= 0.0 else 2  # no literal: views of no particular layout, see recording.py
+    judge_all(rq, rows, counts.T[::every], clock, opening)
+
+
+@inner
 def judge_all(rq, rows, counts, clock, opening):  # type: ignore[no-untyped-def]
     """Look at every requirement of the replicates `rows` anew at `clock`; counts : (species, R).
 

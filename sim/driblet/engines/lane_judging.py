@@ -7,34 +7,24 @@ Results are those of the scalar kernel, bit by bit: values and sums are taken in
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
-from driblet.engines.compile_cache import CACHE
-from driblet.engines.judging import (
-    END_LEAF,
-    FIRST_LEAF,
-    RATIO,
-    SIGN,
-    all_decided,
-    cross_edges,
-    leaf_change,
-    log_ratio,
-    part,
-    turn,
-)
-from driblet.engines.vector_hints import separate_arrays_wide_vectors
+from driblet.engines.compile_cache import inner
+from driblet.engines.judging import all_decided, cross_edges, leaf_change, log_ratio, part, turn
+from driblet.engines.requirement_arrays import END_LEAF, FIRST_LEAF, RATIO, SIGN
+from driblet.engines.vector_hints import seldom_called, separate_arrays_wide_vectors
 
 VALUE, BELOW, PRODUCT, CHANGED, SCRATCH = range(5)
 U = np.uint64
 _ONE = U(1)
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def enter_judgement(  # type: ignore[no-untyped-def]
     coefficient, leaf_truth, leaf_value, leaf_sum, moment_leaves, integrated_to, next_edge, halt, lanes, lane, r
 ):
     """Put what is known of replicate r into a lane."""
+    seldom_called()
     terms = coefficient.shape[1]
     for t in range(terms):
         lanes.judged[SCRATCH + t, lane] = coefficient[r, t]
@@ -45,9 +35,10 @@ def enter_judgement(  # type: ignore[no-untyped-def]
     lanes.mark[lane] = -1.0 if halt[r] < np.inf else min(lanes.mark[lane], next_edge[r])
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def leave_judgement(leaf_value, leaf_sum, integrated_to, moment_leaves, lanes, lane, r):  # type: ignore[no-untyped-def]
     """Put the averages of a lane back into the rows of its replicate, integrated up to its clock."""
+    seldom_called()
     standing = lanes.judged.shape[0] - leaf_sum.shape[1]
     for k in range(moment_leaves, leaf_sum.shape[1]):
         leaf_value[r, k] = lanes.judged[standing + k, lane]
@@ -70,7 +61,7 @@ def lane_code(leaf, term_start, factor_start, species) -> NDArray[np.int64]:  # 
     return np.array(code, dtype=np.int64)
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def judge_lanes(code, offset, counts, judged, moment_leaves, leaves, active, width):  # type: ignore[no-untyped-def]
     """Look at every leaf in every lane after a firing: the values of averages are kept, and it is told how many lanes had the
     truth of a moment changed; row CHANGED says which.
@@ -138,7 +129,7 @@ def judge_lanes(code, offset, counts, judged, moment_leaves, leaves, active, wid
     return total
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def integrate_judged(judged, sums, clock, integrated_to, first, width):  # type: ignore[no-untyped-def]
     """Add the time up to the clocks to the sum of every average, the leaves from `first` on."""
     separate_arrays_wide_vectors()
@@ -150,12 +141,13 @@ def integrate_judged(judged, sums, clock, integrated_to, first, width):  # type:
         integrated_to[lane] = clock[lane]
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def look_closer(  # type: ignore[no-untyped-def]
     moments, stops, table, span, leaf, program, term_start, factor_start, species, offset, coefficient, leaf_truth, record,
     halt, counts, lanes, lane, r,
 ):  # fmt: skip
     """Judge the moments of a lane of which a truth has changed."""
+    seldom_called()
     news = False
     standing = lanes.judged.shape[0] - leaf.shape[0]
     for q in range(moments):
@@ -172,12 +164,13 @@ def look_closer(  # type: ignore[no-untyped-def]
         lanes.mark[lane] = -1.0
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def cross_lane_edges(  # type: ignore[no-untyped-def]
     moments, moment_leaves, table, span, leaf, program, leaf_value, leaf_truth, record, integrated_to, next_edge, sums, lanes,
     lane, r, until,
 ):  # fmt: skip
     """Judge the windows of a lane that end before `until`."""
+    seldom_called()
     standing = lanes.judged.shape[0] - leaf.shape[0]
     for k in range(moment_leaves, leaf.shape[0]):
         leaf_value[r, k] = lanes.judged[standing + k, lane]

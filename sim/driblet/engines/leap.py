@@ -13,7 +13,7 @@ from driblet.engines.contract import EnsembleState, NetworkArrays, Recorders, Sa
 from driblet.engines.factors import factor_rows, most_nodes
 from driblet.engines.leap_arrays import Pairs, Turnover, new_room, no_turnover
 from driblet.engines.leaps import WORK, advance_leaps
-from driblet.engines.recording import recorders_for
+from driblet.engines.recorders import recorders_for
 
 
 class LeapEngine:

@@ -8,7 +8,7 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from driblet.engines.compile_cache import CACHE
+from driblet.engines.compile_cache import CACHE, inner
 from driblet.engines.contract import (
     BUFFER_FULL,
     COUNT_OVERFLOW,
@@ -19,28 +19,20 @@ from driblet.engines.contract import (
     TIME_REACHED,
 )
 from driblet.engines.factors import factor_value, renew_factors
-from driblet.engines.judging import (
-    END_LEAF,
-    FIRST_LEAF,
-    all_decided,
-    cross_edges,
-    leaf_change,
-    part,
-    take_value,
-    turn,
-)
+from driblet.engines.judging import all_decided, cross_edges, leaf_change, part, take_value, turn
 from driblet.engines.random_stream import minus_log, next_word, selection_uniform, waiting_uniform
 from driblet.engines.recording import (
     close_windows,
     cut_windows,
     hold_samples,
-    look_at_conditions,
     next_mark,
     occupy,
     sample_until,
     settle_histograms,
 )
+from driblet.engines.requirement_arrays import END_LEAF, FIRST_LEAF
 from driblet.engines.sums import FAN, STRIDE, select, within
+from driblet.engines.vector_hints import seldom_called
 
 _ONE = np.uint64(1)
 _FAN = np.uint64(FAN)
@@ -59,6 +51,7 @@ def propensity(network, constant, counts, channel):  # type: ignore[no-untyped-d
 @njit(nogil=True, cache=CACHE, error_model="numpy")
 def sum_all(network, rows, constants, counts, value, cumulative):  # type: ignore[no-untyped-def]
     """Every propensity of mass action and every sum; value, cumulative : (P,)."""
+    seldom_called()
     for row in range(rows.end):
         value[row] = 0.0
         cumulative[row] = 0.0
@@ -67,9 +60,10 @@ def sum_all(network, rows, constants, counts, value, cumulative):  # type: ignor
     sum_up(rows, value, cumulative)
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def sum_up(rows, value, cumulative):  # type: ignore[no-untyped-def]
     """Every sum of the propensities that stand in the leaves."""
+    seldom_called()
     for j in range(rows.leaf.size):
         row = rows.leaf[j]
         cumulative[row] = cumulative[row - 1] + value[row]
@@ -112,7 +106,7 @@ def find_channel(rows, cumulative, target):  # type: ignore[no-untyped-def]
     return index
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@inner
 def integrate_row(factor, offset, dummy, counts, running, span):  # type: ignore[no-untyped-def]
     """recording.integrate for a row of counts, without the factors that are 1."""
     for q in range(np.uint64(factor.shape[0])):
@@ -124,6 +118,20 @@ def integrate_row(factor, offset, dummy, counts, running, span):  # type: ignore
         running[q] += value * span
 
 
+@inner
+def settle_row(settle, first, last, factor, offset, pace_row, counts, running, settled, pace, until):  # type: ignore[no-untyped-def]
+    """Integrate the monomials that a firing is about to change, settle[first:last], up to the time of the firing."""
+    for k in range(first, last):
+        q = np.uint64(settle[k])
+        value = counts[np.uint64(factor[q, 0])] - offset[q, 0]
+        value *= counts[np.uint64(factor[q, 1])] - offset[q, 1]
+        value *= counts[np.uint64(factor[q, 2])] - offset[q, 2]
+        if pace_row[q] >= 0:
+            value = pace[np.uint64(pace_row[q])]
+        running[q] += value * (until - settled[q])
+        settled[q] = until
+
+
 @njit(nogil=True, cache=CACHE, error_model="numpy")
 def advance_scalar(  # type: ignore[no-untyped-def]
     network, rows, refresh, factor_row, nodes, rates, state, samples, budget, recorders, judging
@@ -131,11 +139,12 @@ def advance_scalar(  # type: ignore[no-untyped-def]
     """See contract.py. rates : float64, (R, M + 2 T), 1/s per product of falling factorials; judging : requirements, or
     None, for which their part of the kernel is not compiled.
     """
-    averages, occupancy, conditions, log = recorders.averages, recorders.occupancy, recorders.conditions, recorders.log
+    averages, occupancy, log = recorders.averages, recorders.occupancy, recorders.log
     replicates = rates.shape[0]
     species = state.counts.shape[1] - 1
     grid_size = samples.time.size
-    averaging, watching = averages.edge.size > 0, conditions.stops.size > 0
+    averaging, settling = averages.edge.size > 0, averages.settle_start.size > 0
+    settle_start, settle, pace_row = averages.settle_start, averages.settle, averages.pace_row
     following, logging = occupancy.species.size > 0, log.time.shape[1] > 0
     seconds, standing_since, span = occupancy.seconds, occupancy.since, occupancy.span
     slot, bin_width = occupancy.slot, occupancy.width
@@ -144,7 +153,7 @@ def advance_scalar(  # type: ignore[no-untyped-def]
     left = budget
     every = 1 if budget > 0 else 2  # no literal: views of no particular layout, see recording.py
     columns, firing_columns = state.counts.T[::every], state.firings.T[::every]
-    running = averages.running.T[::every]
+    running, settled = averages.running.T[::every], averages.settled.T[::every]
     if judging is not None:
         moments, moment_leaves, halting = judging.moments, judging.moment_leaves, judging.stops
         judging_averages = judging.table.shape[0] > moments
@@ -174,8 +183,8 @@ def advance_scalar(  # type: ignore[no-untyped-def]
             continue
         if left <= 0:
             break
-        counts, constants, firings, running_row = state.counts[r], rates[r], state.firings[r], averages.running[r]
-        pace = paces[r]
+        counts, constants, firings = state.counts[r], rates[r], state.firings[r]
+        running_row, settled_row, pace = averages.running[r], averages.settled[r], paces[r]
         sum_all(network, rows, constants, counts, value, cumulative)
         if factor_row is not None:
             renew_factors(
@@ -197,9 +206,6 @@ def advance_scalar(  # type: ignore[no-untyped-def]
             later = clock + wait  # inf when nothing can fire, so that the grid below ends the replicate
             since = clock
             stop = np.inf
-            if watching:
-                stop = look_at_conditions(conditions, r, clock, later, columns, r)
-                later = min(later, stop)
             if judging is not None:
                 if judging_averages and not later <= judged_edge[r]:
                     until = min(later, time[grid_size - 1])
@@ -212,11 +218,13 @@ def advance_scalar(  # type: ignore[no-untyped-def]
                         here = max(mark, integrated_to[r])
                         if here < time[grid_size - 1] and all_decided(moments, plan, spans, record, r, here):
                             halt[r] = here
-                    stop = min(stop, halt[r])
+                    stop = halt[r]
                     later = min(later, stop)
             if not later <= mark:
                 if averaging:
-                    since = close_windows(averages, r, since, later, columns, firing_columns, running, pace_columns, r)
+                    since = close_windows(
+                        averages, r, since, later, columns, firing_columns, running, settled, pace_columns, r
+                    )
                 sample = sample_until(
                     time, samples.counts, samples.firings, r, sample, later, columns, firing_columns, r
                 )
@@ -234,10 +242,12 @@ def advance_scalar(  # type: ignore[no-untyped-def]
                 if sample < grid_size:
                     state.reason[r] = STOP_CONDITION
                     if averaging:
-                        cut_windows(averages, r, since, clock, columns, firing_columns, running, pace_columns, r)
+                        cut_windows(
+                            averages, r, since, clock, columns, firing_columns, running, settled, pace_columns, r
+                        )
                     sample = hold_samples(time, samples.counts, samples.firings, r, sample, columns, firing_columns, r)
                 break
-            if averaging:
+            if averaging and not settling:
                 integrate_row(factor, offset, dummy, counts, running_row, later - since)
                 if factor_row is not None:
                     for k in range(averages.paced.shape[0]):
@@ -248,6 +258,11 @@ def advance_scalar(  # type: ignore[no-untyped-def]
                 integrated_to[r] = later
             clock = later
             j = find_channel(rows, cumulative, target)
+            if settling:
+                settle_row(
+                    settle, np.uint64(settle_start[j]), np.uint64(settle_start[j + _ONE]), factor, offset, pace_row, counts,
+                    running_row, settled_row, pace, clock,
+                )  # fmt: skip
             for k in range(np.uint64(network.change_start[j]), np.uint64(network.change_start[j + _ONE])):
                 i = np.uint64(network.change_species[k])
                 if following and slot[i] >= 0:

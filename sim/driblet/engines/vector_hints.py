@@ -31,5 +31,16 @@ def _nothing() -> None:
     pass
 
 
+def _aside(typingctx):  # type: ignore[no-untyped-def]
+    def codegen(context, builder, signature, args):  # type: ignore[no-untyped-def]
+        for attribute in ("noinline", "optsize"):
+            builder.function.attributes.add(attribute)
+        return context.get_dummy_value()
+
+    return types.none(), codegen
+
+
 # called in a kernel, says both of it; an intrinsic exists in compiled code only
 separate_arrays_wide_vectors: Any = _nothing if config.DISABLE_JIT else intrinsic(_hints)  # type: ignore[attr-defined]
+# called in a function that a kernel needs now and then, keeps it out of the kernel and small, which halves compilation
+seldom_called: Any = _nothing if config.DISABLE_JIT else intrinsic(_aside)  # type: ignore[attr-defined]
