@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -11,6 +12,7 @@ from numpy.typing import NDArray
 from driblet.drive import emergent_affinities, is_driven, ln_constants, runnable
 from driblet.energetics.cycles import conservation_laws, cycles, dependencies
 from driblet.energetics.equilibrium import NoEquilibriumError, equilibrium_composition
+from driblet.engine_choice import AUTO, EXACT, choose_engine, core_seconds
 from driblet.ensemble import sample_times
 from driblet.errors import CannotAnswerError, InputError
 from driblet.lumping import LUMPED
@@ -27,6 +29,7 @@ from driblet_analysis.enzyme_facts import catalysed_rates, disagreements, enzyme
 from driblet_analysis.references.count_equilibrium import count_law
 
 EVENTS_PER_SECOND_AND_CORE = 3e7  # of the exact engine on a current core; for the estimate alone
+WORTH_A_PILOT = 60.0  # core seconds of exact simulation from which leaps are thought of unasked
 FEW_MOLECULES = 10
 WIDE_RANGE = 1e9
 ROUNDING = 0.01
@@ -48,6 +51,7 @@ def audit_facts(system: System) -> dict[str, Any]:
     there = macroscopic and _totals(system, macroscopic)
     magnesium, buffer = magnesium_facts(system, there), buffer_facts(system, there)
     enzymes, catalysed = enzyme_facts(system), catalysed_rates(system)
+    run_facts = _run_facts(system, _as_treated(system) or course)
     warnings = list(system.warnings)
     warnings += disagreements(enzymes)
     warnings += condition_warnings(magnesium, buffer)
@@ -98,7 +102,8 @@ def audit_facts(system: System) -> dict[str, Any]:
         "magnesium": magnesium,
         "buffer": buffer,
         "requirements": _requirements(system),
-        "run": _run_facts(system, _as_treated(system) or course),
+        "run": run_facts,
+        "engine": _engine_facts(system, run_facts["estimated_core_seconds"]),
         "warnings": warnings,
     }
 
@@ -326,6 +331,30 @@ def _as_treated(system: System) -> dict[str, Any] | None:
         return None
     copies = np.array([s.mean_copies(made.compartment.omega) for s in made.free_species])
     return _course(made, Network.of(made), copies)
+
+
+def _engine_facts(system: System, exact_seconds: float | None) -> dict[str, Any] | None:
+    """Which engine a run takes and why, by a pilot compartment; None for an exact run that is quick anyway."""
+    settings = system.settings
+    if not settings.duration_s or (settings.engine == EXACT and (exact_seconds or 0.0) < WORTH_A_PILOT):
+        return None
+    made, _ = with_treatments(system)
+    asked = settings if settings.engine != EXACT else replace(settings, engine=AUTO)
+    choice = choose_engine(made, Network.of(made), asked)
+    seconds = None
+    if choice.leaps:
+        whole = settings.replicates * settings.duration_s / choice.facts["simulated_s"]
+        seconds = core_seconds(choice.facts)[1] * whole
+    return {
+        "asked": settings.engine,
+        "taken": choice.taken if settings.engine != EXACT else EXACT,
+        "auto_takes": choice.taken,
+        "why": choice.why,
+        "tolerance": choice.tolerance,
+        "longest_leap_relaxation_times": choice.stiffness,
+        "pilot": choice.facts,
+        "estimated_core_seconds": seconds,
+    }
 
 
 def _run_facts(system: System, course: dict[str, Any] | None) -> dict[str, Any]:

@@ -150,6 +150,7 @@ def compare(
             engine=way.engine,
             record="trajectories",
             statistics=False,
+            estimate_error=False,
             threads=threads,
         )
         for key, way in enumerate(ways)

@@ -77,7 +77,9 @@ def simulate_here(threads: int | None = None) -> Simulate:
         for batch in batches:
             raw = replaced(question.raw, {question.path: batch.value})
             system = build(raw, toml_text(raw), question.system.source)
-            with run(system, replicates=batch.replicates, seed=batch.seed, threads=threads) as ensemble:
+            with run(
+                system, replicates=batch.replicates, seed=batch.seed, threads=threads, estimate_error=False
+            ) as ensemble:
                 done(batch, ensemble.outcomes.met[:, 0])
 
     return act

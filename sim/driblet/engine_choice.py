@@ -139,14 +139,19 @@ def pilot(
     }
 
 
-def _judged(facts: dict[str, float], asked: str) -> tuple[str, bool]:
-    """One sentence, and whether to leap. Costs in ns of a current core, measured once (tests/benchmarks/leaps.py); only
-    their ratio matters."""
+def core_seconds(facts: dict[str, float]) -> tuple[float, float]:
+    """About what the pilot's stretch takes a core by exact events in lanes, and by leaps, s. Measured once
+    (tests/benchmarks/leaps.py); only the ratio decides anything."""
     channels = facts["channels"]
-    event_in_lanes, event_alone = 4.0 + 0.5 * channels, 60.0 + 4.0 * channels
-    one_leap = 1500.0 + 500.0 * channels
-    exact = facts["firings"] * min(event_in_lanes, 100.0)
+    event_in_lanes, event_alone = min(4.0 + 0.5 * channels, 100.0), 60.0 + 4.0 * channels
+    one_leap = 1500.0 + 300.0 * channels
     leaping = (facts["leaps"] + facts["rejected"]) * one_leap + facts["exact_events"] * event_alone
+    return 1e-9 * facts["firings"] * event_in_lanes, 1e-9 * leaping
+
+
+def _judged(facts: dict[str, float], asked: str) -> tuple[str, bool]:
+    """One sentence, and whether to leap."""
+    exact, leaping = core_seconds(facts)
     span = f"{facts['simulated_s']:,.4g} s of one compartment"
     if not facts["firings"]:
         return f"exact: nothing fired in {span}", False

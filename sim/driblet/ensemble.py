@@ -127,6 +127,7 @@ def run(
     method: str | None = None,
     treatment: str | Mapping[str, str] | None = None,
     statistics: bool = True,
+    estimate_error: bool = True,
     stop_when_decided: bool = False,
     resume: bool = False,
     force: bool = False,
@@ -139,8 +140,9 @@ def run(
     reaction's gross rate may be expected to change in one leap. method : "lanes" or "scalar", which kernel of the exact
     engine runs; left out, the faster one; the bits are the same. treatment : "elementary", "lumped" or "auto", of all enzymes
     or of some by name, before what the file says. statistics : whether the time integrals that `check` needs are gathered,
-    which adds a third to the time and more. stop_when_decided : a replicate may end when the outcome of every requirement is
-    known; its samples then hold the state of that moment to the end. With `resume`, finished replicates of an interrupted
+    which adds a third to the time and more. estimate_error : whether an approximate run states how far its means may be off
+    (error_estimate.py), which takes as long as some 20 replicates. stop_when_decided : a replicate may end when the outcome
+    of every requirement is known; its samples then hold the state of that moment to the end. With `resume`, finished replicates of an interrupted
     run are kept; a complete run is returned as it is. Raises InputError for bad settings or an output that is taken,
     InterruptedRunError after Ctrl-C.
     """
@@ -190,7 +192,7 @@ def run(
     chosen = choose_method(len(network.channels), settings.replicates, settings.record == "events")
     chosen = "leaps" if choice.leaps else method or chosen
     layout = _layout(system, settings, times, sums, chosen, judged, facts, choice.leaps)
-    if choice.leaps or any(c.taken == LUMPED for c in choices):
+    if estimate_error and (choice.leaps or any(c.taken == LUMPED for c in choices)):
         from driblet.error_estimate import error_estimate
 
         estimate = error_estimate(stated, system, network, settings, choice, key)

@@ -16,6 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.errors import one_problem
+from driblet.leap_record import leap_arrays
 from driblet.outcomes import GRID, Outcomes
 from driblet.quantities import copies_per_molar
 from driblet.readouts import evaluate
@@ -277,6 +278,19 @@ class Run:
     def lumping(self) -> dict[str, dict[str, Any]]:
         """For each enzyme what was asked for and taken, and why; empty where all are elementary and nothing was asked."""
         return dict(json.loads(str(self.provenance.get("treatments", "{}"))))
+
+    @property
+    def engine(self) -> str:
+        """What simulated the run: "exact" or "leap"."""
+        kept = self.provenance
+        return str(kept.get("engine_taken", kept["engine"]))
+
+    @cached_property
+    def leaping(self) -> dict[str, NDArray[Any]]:
+        """What leaping took in each replicate, shape=(replicates,), by the names in leap_record.py; empty for an exact run."""
+        if self.engine != "leap":
+            return {}
+        return {array.path.partition("/")[2]: self._read(array.path) for array in leap_arrays()}
 
     @property
     def provenance(self) -> dict[str, Any]:

@@ -68,12 +68,24 @@ def _print(facts: dict[str, Any]) -> None:
         out.print(
             f"{number(run['events_per_simulated_second'])} events per simulated second and compartment; "
             f"{run['replicates']} compartments for {duration(run['duration_s'])}: about "
-            f"{duration(run['estimated_core_seconds'])} on one core",
+            f"{duration(run['estimated_core_seconds'])} on one core by exact events",
             markup=False,
         )
+    for line in _engine(facts["engine"]):
+        out.print(line, markup=False)
     for warning in facts["warnings"]:
         out.print(f"note: {warning}", markup=False)
     out.print(CAUTION, style="dim")
+
+
+def _engine(engine: dict[str, Any] | None) -> list[str]:
+    if engine is None:
+        return []
+    seconds = engine["estimated_core_seconds"]
+    takes = "" if seconds is None else f"; about {duration(seconds)} on one core"
+    if engine["asked"] != "exact":
+        return [f"engine {engine['asked']}: {engine['why']}{takes}"]
+    return [f'engine "auto" would take {engine["why"]}{takes}'] if engine["auto_takes"] == "leap" else []
 
 
 def _conditions(facts: dict[str, Any]) -> str:

@@ -8,6 +8,7 @@ from typing import Any
 
 import click
 
+from driblet.commands.engine_lines import engine_lines
 from driblet.commands.requirement_rows import readout_notes, requirement_notes, requirement_table
 from driblet.commands.screen import console, duration, number, species_rows, table, time_option
 from driblet.commands.treatment_lines import treatment_lines
@@ -23,7 +24,10 @@ from driblet.commands.treatment_lines import treatment_lines
 @click.option("--sample-every", callback=time_option, metavar="TIME", help='Recording interval, such as "5 s".')
 @click.option("--seed", type=click.IntRange(0, 2**63 - 1), help="Seed of the random streams.")
 @click.option("--threads", type=click.IntRange(1, 4096), help="Threads; default: one per core.")
-@click.option("--engine", help='The algorithm; this version has "exact".')
+@click.option("--engine", metavar="NAME", help='"exact", "leap", or "auto", which takes what pays and says why.')
+@click.option(
+    "--leap-tolerance", type=float, help="Expected change of a reaction's gross rate in one leap; 0.01 is usual."
+)
 @click.option("--stop-when-decided", is_flag=True, help="End a compartment when every requirement is decided.")
 @click.option("--treatment", metavar="HOW", help='Enzymes: "elementary", "lumped", "auto", or "kinase=lumped,...".')
 @click.option("--force", is_flag=True, help="Replace an existing run file or its parts.")
@@ -37,6 +41,7 @@ def run(
     seed: int | None,
     threads: int | None,
     engine: str | None,
+    leap_tolerance: float | None,
     stop_when_decided: bool,
     treatment: str | None,
     force: bool,
@@ -63,6 +68,7 @@ def run(
             sample_every=sample_every,
             seed=seed,
             engine=engine,
+            leap_tolerance=leap_tolerance,
             treatment=None if treatment is None else read_treatments(treatment),
             threads=threads,
             stop_when_decided=stop_when_decided,
@@ -113,7 +119,7 @@ def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-
     out = console()
     system = result.system
     events = int(result.events.sum())
-    how = ", ".join(str(result.provenance[key]) for key in ("engine", "method") if key in result.provenance)
+    how = ", ".join(dict.fromkeys((result.engine, str(result.provenance.get("method", result.engine)))))
     out.print(system.title, style="bold")
     if seconds is None:
         spread = "complete already; nothing was simulated anew"
@@ -143,7 +149,7 @@ def _summary(result, seconds: float | None) -> None:  # type: ignore[no-untyped-
         out.print(requirement_table(judged))
         for note in requirement_notes(judged):
             out.print(f"note: {note}", markup=False)
-    for line in treatment_lines(result.lumping):
+    for line in (*treatment_lines(result.lumping, leaps=bool(result.leaping)), *engine_lines(result)):
         out.print(line, markup=False)
     for note in (*readout_notes(result), *getattr(system, "warnings", ())):
         out.print(f"note: {note}", markup=False)

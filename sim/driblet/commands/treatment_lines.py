@@ -10,14 +10,14 @@ from driblet.commands.screen import number
 VISIBLE = 0.01  # share of a variance below which nothing is said
 
 
-def treatment_lines(lumping: Mapping[str, Mapping[str, Any]]) -> list[str]:
-    """Lines about the enzymes of a run; lumping : Run.lumping."""
+def treatment_lines(lumping: Mapping[str, Mapping[str, Any]], leaps: bool = False) -> list[str]:
+    """Lines about the enzymes of a run; lumping : Run.lumping; leaps : which carry the noise of turnover."""
     lines = []
     for fact in lumping.values():
         if fact["asked"] == "auto":
             lines.append(f"{fact['why']} (auto)")
     for name, fact in lumping.items():
-        if fact["taken"] != "lumped":
+        if fact["taken"] != "lumped" or leaps:
             continue
         parts = []
         for reaction, true in fact["fano"].items():

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -118,7 +118,8 @@ def new_room(pairs: Pairs, turnover: Turnover, species: int, nodes: int) -> Room
         "one": (1,),
     }
     whole = {"critical", "pivot", "drawn", "big", "one"}
-    room = Room(**{k: np.zeros(size, dtype=np.int64 if k in whole else np.float64) for k, size in sizes.items()})
+    arrays: dict[str, Any] = {k: np.zeros(n, dtype=np.int64 if k in whole else np.float64) for k, n in sizes.items()}
+    room = Room(**arrays)
     room.scratch[0] = room.end[-1] = 1.0
     return room
 
