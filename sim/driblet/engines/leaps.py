@@ -150,6 +150,7 @@ def advance_leaps(  # type: ignore[no-untyped-def]
             break
         counts, constants, firings, running = state.counts[r], rates[r], state.firings[r], averages.running[r]
         one[0] = r
+        own_counts, own_running = columns[:, r : r + 1], running_columns[:, r : r + 1]  # one column, as `pace` has
         clock, sample = state.clock[r], state.next_sample[r]
         sample = pass_marks(samples, averages, r, sample, clock, counts, firings, running)
         all_propensities(
@@ -204,7 +205,7 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                         while w[j] == 0.0:  # rounding must not let a channel fire that cannot
                             j -= 1
                 if averaging:
-                    integrate(monomial, shift, paced, columns, running_columns, pace, r, until - clock)
+                    integrate(monomial, shift, paced, own_counts, own_running, pace, 0, until - clock)
                 clock = until
                 if j < M:
                     burst -= 1
@@ -329,7 +330,7 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                     work[r, CRITICAL_EVENTS] += 1.0
                 half = 0.5 * step
                 if averaging:
-                    integrate(monomial, shift, paced, columns, running_columns, pace, r, half)
+                    integrate(monomial, shift, paced, own_counts, own_running, pace, 0, half)
                 for i in range(N):
                     if following and slot[i] >= 0 and end[i] != counts[i]:
                         occupy(seconds, standing, span, bin_width, r, slot[i], counts[i], clock + half)
@@ -338,7 +339,7 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                     reactant, offset, factor_row, start, parent, node, less, constants, counts, scratch, w, pace_row
                 )
                 if averaging:
-                    integrate(monomial, shift, paced, columns, running_columns, pace, r, half)
+                    integrate(monomial, shift, paced, own_counts, own_running, pace, 0, half)
                 if judging is not None:
                     judge_all(judging, one, columns, clock + half, False)
                 clock = mark if arrives else clock + step
