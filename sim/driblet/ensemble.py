@@ -142,9 +142,9 @@ def run(
     or of some by name, before what the file says. statistics : whether the time integrals that `check` needs are gathered,
     which adds a third to the time and more. estimate_error : whether an approximate run states how far its means may be off
     (error_estimate.py), which takes as long as some 20 replicates. stop_when_decided : a replicate may end when the outcome
-    of every requirement is known; its samples then hold the state of that moment to the end. With `resume`, finished replicates of an interrupted
-    run are kept; a complete run is returned as it is. Raises InputError for bad settings or an output that is taken,
-    InterruptedRunError after Ctrl-C.
+    of every requirement is known; its samples then hold the state of that moment to the end. With `resume`, finished
+    replicates of an interrupted run are kept; a complete run is returned as it is. Raises InputError for bad settings or an
+    output that is taken, InterruptedRunError after Ctrl-C.
     """
     changes = {
         "replicates": replicates,

@@ -105,7 +105,7 @@ def new_room(pairs: Pairs, turnover: Turnover, species: int, nodes: int) -> Room
     """Scratch for a network whose largest factor has `nodes` nodes."""
     M, K, N, A = len(pairs.pair), len(pairs.forward), species + 1, turnover.unit.shape[1]
     sizes: dict[str, tuple[int, ...]] = {
-        **dict.fromkeys(("w", "end_w", "critical", "end_pace"), (M,)),
+        **dict.fromkeys(("w", "end_w", "critical", "pace", "end_pace"), (M,)),
         **dict.fromkeys(("bound", "drift", "spread", "pull", "end", "gradient"), (N,)),
         **dict.fromkeys(("there", "back", "more", "fewer", "fix", "rest", "extent", "drawn", "pivot"), (K,)),
         **dict.fromkeys(("scratch", "adjoint"), (nodes + 1,)),
@@ -113,7 +113,6 @@ def new_room(pairs: Pairs, turnover: Turnover, species: int, nodes: int) -> Room
         **dict.fromkeys(("J", "turned", "big"), (A,)),
         **dict.fromkeys(("C", "lower"), (A, A)),
         "slope": (len(pairs.depend_species),),
-        "pace": (M, 1),
         "value": (2 + A + A * (A + 1) // 2,),
         "one": (1,),
     }

@@ -120,6 +120,17 @@ def all_slopes(  # type: ignore[no-untyped-def]
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
+def integrate_row(factor, offset, paced, counts, running, pace, span):  # type: ignore[no-untyped-def]
+    """recording.integrate for rows of one replicate."""
+    for q in range(factor.shape[0]):
+        value = counts[U(factor[q, 0])] - offset[q, 0]
+        value *= counts[U(factor[q, 1])] - offset[q, 1]
+        running[q] += value * (counts[U(factor[q, 2])] - offset[q, 2]) * span
+    for k in range(paced.shape[0]):
+        running[U(paced[k, 0])] += pace[U(paced[k, 1])] * span
+
+
+@njit(nogil=True, cache=CACHE, error_model="numpy")
 def mark_critical(w, counts, taken_start, taken_species, taken_amount, critical):  # type: ignore[no-untyped-def]
     """critical : (M,), 1 where fewer than CRITICAL firings are left; returns their total propensity."""
     total = 0.0

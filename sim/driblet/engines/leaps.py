@@ -36,13 +36,14 @@ from driblet.engines.leap_steps import (
     all_propensities,
     all_slopes,
     correct,
+    integrate_row,
     jacobian,
     leap_length,
     mark_critical,
     one_pace,
 )
 from driblet.engines.random_stream import minus_log, next_word, selection_uniform, waiting_uniform
-from driblet.engines.recording import integrate, occupy, settle_histograms
+from driblet.engines.recording import occupy, settle_histograms
 
 U = np.uint64
 BURST = 100  # exact events before leaping is thought of again
@@ -115,7 +116,7 @@ def advance_leaps(  # type: ignore[no-untyped-def]
     slot, bin_width = occupancy.slot, occupancy.width
     monomial, shift, paced = averages.factor, averages.offset, averages.paced
     every = 1 if budget > 0 else 2  # no literal: views of no particular layout, see recording.py
-    columns, running_columns = state.counts.T[::every], averages.running.T[::every]
+    columns = state.counts.T[::every]
     time, stream = samples.time, state.stream
     reactant, offset, start = network.reactant, network.offset, network.factor_start
     parent, node, less = network.node_parent, network.node_species, network.node_offset
@@ -135,7 +136,7 @@ def advance_leaps(  # type: ignore[no-untyped-def]
         turnover.coefficient_start,
     )
     w, end_w, slope, pace, end_pace = room.w, room.end_w, room.slope, room.pace, room.end_pace
-    pace_row, scratch, critical = pace[:, 0], room.scratch, room.critical
+    scratch, critical = room.scratch, room.critical
     adjoint, gradient = room.adjoint, room.gradient
     bound, drift, spread, pull, end = room.bound, room.drift, room.spread, room.pull, room.end
     matrix, lu, pivot = room.matrix, room.lu, room.pivot
@@ -150,12 +151,9 @@ def advance_leaps(  # type: ignore[no-untyped-def]
             break
         counts, constants, firings, running = state.counts[r], rates[r], state.firings[r], averages.running[r]
         one[0] = r
-        own_counts, own_running = columns[:, r : r + 1], running_columns[:, r : r + 1]  # one column, as `pace` has
         clock, sample = state.clock[r], state.next_sample[r]
         sample = pass_marks(samples, averages, r, sample, clock, counts, firings, running)
-        all_propensities(
-            reactant, offset, factor_row, start, parent, node, less, constants, counts, scratch, w, pace_row
-        )
+        all_propensities(reactant, offset, factor_row, start, parent, node, less, constants, counts, scratch, w, pace)
         burst = 0
         stopped = False
         while (left > 0 or burst > 0) and sample < time.size and not stopped:  # a burst is never cut
@@ -205,7 +203,7 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                         while w[j] == 0.0:  # rounding must not let a channel fire that cannot
                             j -= 1
                 if averaging:
-                    integrate(monomial, shift, paced, own_counts, own_running, pace, 0, until - clock)
+                    integrate_row(monomial, shift, paced, counts, running, pace, until - clock)
                 clock = until
                 if j < M:
                     burst -= 1
@@ -226,7 +224,7 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                             constants, below, above, counts, scratch,
                         )  # fmt: skip
                         if f >= 0:
-                            pace_row[f] = own
+                            pace[f] = own
                         w[m] = constants[m] * own
                     if judging is not None:
                         judge_all(judging, one, columns, clock, False)
@@ -309,37 +307,45 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                 work[r, LONGEST] = max(work[r, LONGEST], step)
                 work[r, STIFFEST] = max(work[r, STIFFEST], stiff)
                 for k in range(K):
-                    # gross firings: what was drawn, moved by half the change of the rate; their difference is exact
+                    # gross firings: what was drawn, moved by half the change of the rate; the rarer direction is estimated, so
+                    # that one which hardly fires does not take up what rounding adds to the other; the difference is exact
                     f, b = forward[k], backward[k]
-                    gross = more[k]
-                    if f >= 0 and not critical[f]:
-                        gross += rounded(0.5 * (end_w[f] * step - there[k]), stream, r)
-                    gross = max(gross, extent[k], 0.0)
+                    forth, back_k = more[k], fewer[k]
                     if b < 0:
-                        gross = extent[k]
+                        forth, back_k = extent[k], 0.0
                     elif f < 0:
-                        gross = 0.0
+                        forth, back_k = 0.0, -extent[k]
+                    elif there[k] + end_w[f] * step > back[k] + end_w[b] * step:
+                        if not critical[b]:
+                            back_k += rounded(0.5 * (end_w[b] * step - back[k]), stream, r)
+                        back_k = max(back_k, -extent[k], 0.0)
+                        forth = back_k + extent[k]
+                    else:
+                        if not critical[f]:
+                            forth += rounded(0.5 * (end_w[f] * step - there[k]), stream, r)
+                        forth = max(forth, extent[k], 0.0)
+                        back_k = forth - extent[k]
                     if f >= 0:
-                        firings[f] += np.int64(gross)
+                        firings[f] += np.int64(forth)
                     if b >= 0:
-                        firings[b] += np.int64(gross - extent[k])
-                    fired += np.int64(2.0 * gross - extent[k])
+                        firings[b] += np.int64(back_k)
+                    fired += np.int64(forth + back_k)
                 if alone >= 0:
                     firings[alone] += 1
                     fired += 1
                     work[r, CRITICAL_EVENTS] += 1.0
                 half = 0.5 * step
                 if averaging:
-                    integrate(monomial, shift, paced, own_counts, own_running, pace, 0, half)
+                    integrate_row(monomial, shift, paced, counts, running, pace, half)
                 for i in range(N):
                     if following and slot[i] >= 0 and end[i] != counts[i]:
                         occupy(seconds, standing, span, bin_width, r, slot[i], counts[i], clock + half)
                     counts[i] = end[i]
                 all_propensities(
-                    reactant, offset, factor_row, start, parent, node, less, constants, counts, scratch, w, pace_row
+                    reactant, offset, factor_row, start, parent, node, less, constants, counts, scratch, w, pace
                 )
                 if averaging:
-                    integrate(monomial, shift, paced, own_counts, own_running, pace, 0, half)
+                    integrate_row(monomial, shift, paced, counts, running, pace, half)
                 if judging is not None:
                     judge_all(judging, one, columns, clock + half, False)
                 clock = mark if arrives else clock + step
