@@ -105,17 +105,14 @@ class Ratio:
 
 @dataclass(frozen=True)
 class Logs:
-    """constant + sum coefficient * RT ln(above / below), in kJ/mol; overlap : a species stands above and below.
+    """constant + sum coefficient * RT ln(above / below), in kJ/mol."""
 
-    With an overlap a product left by the firing can seem to be -1 where nothing can fire, so exhaustion is asked for apart.
-    """
-
-    parts: tuple[tuple[Fraction, Polynomial, Polynomial, bool], ...]
+    parts: tuple[tuple[Fraction, Polynomial, Polynomial], ...]
     constant: Fraction = Fraction(0)
 
     def scaled(self, factor: Fraction) -> Logs:
         """Every coefficient and the constant times `factor`."""
-        return Logs(tuple((c * factor, a, b, o) for c, a, b, o in self.parts), self.constant * factor)
+        return Logs(tuple((c * factor, a, b) for c, a, b in self.parts), self.constant * factor)
 
 
 @dataclass(frozen=True)
@@ -214,7 +211,7 @@ def _sides(system: System, logs: Logs) -> tuple[Polynomial, Polynomial]:
     if abs(exponent) > _LARGEST_LOG or sum(abs(c) for c, *_ in whole.parts) > MOST_FACTORS:
         raise NotInFormError("energies too large to multiply out")
     above, below = Polynomial.constant(Fraction(math.exp(exponent))), Polynomial.constant(1)
-    for coefficient, upper, lower, _ in whole.parts:
+    for coefficient, upper, lower in whole.parts:
         if coefficient < 0:
             upper, lower = lower, upper
         for _ in range(abs(int(coefficient))):
@@ -224,30 +221,12 @@ def _sides(system: System, logs: Logs) -> tuple[Polynomial, Polynomial]:
 
 def _log_sign(system: System, logs: Logs, strict: bool) -> Form:
     above, below = _sides(system, logs)
-    sign: Form = _guarded(above - below, below, strict)
-    overlapping = [(c, lower) for c, _, lower, overlap in logs.parts if overlap]
-    if not overlapping:
-        return sign
-    kind = _log_kind(logs)
-    if kind == LOG_MIXED:
-        raise NotInFormError("several energies of reactions with a species on both sides")
-    for _, reactants in overlapping:
-        if kind == LOG_UP:  # exhausted: +inf, which is not below zero
-            sign = Join("and", sign, Leaf(SIGN, (-reactants,)))
-        else:
-            sign = Join("or", sign, Leaf(SIGN, (reactants,), False))
-    return sign
-
-
-def _log_kind(logs: Logs) -> int:
-    signs = {c > 0 for c, *_ in logs.parts}
-    return LOG_MIXED if len(signs) == 2 else LOG_UP if True in signs else LOG_DOWN
+    return _guarded(above - below, below, strict)
 
 
 def _log_average(system: System, logs: Logs, strict: bool) -> Form:
-    kind = _log_kind(logs)
-    if kind == LOG_MIXED and any(overlap for *_, overlap in logs.parts):
-        raise NotInFormError("several energies of reactions with a species on both sides")
+    signs = {c > 0 for c, *_ in logs.parts}
+    kind = LOG_MIXED if len(signs) == 2 else LOG_UP if True in signs else LOG_DOWN
     return Leaf(kind, _sides(system, logs), strict)
 
 
@@ -289,25 +268,26 @@ class _Algebra:
         return Ratio(total)
 
     def energy(self, reaction: Reaction) -> Logs:
-        """gibbs(r): dG0' + RT ln of the products left by the next firing over the reactants it takes."""
-        equation = reaction.equation
+        """gibbs(r): dG0' + RT ln of the products left by the next firing over the reactants it takes, net."""
         sides = []
-        for terms, left in ((equation.products, equation.change), (equation.reactants, {})):
+        for sign in (1, -1):
             factors: list[tuple[str, int]] = []
             constant, power = Fraction(1), 0
-            for name, number in terms:
+            for name, change in reaction.equation.change.items():
+                number = sign * change
+                if number <= 0:
+                    continue
                 if name in self.held:
                     constant *= _written(self.held[name]) ** number
                     continue
-                factors += [(name, k - left.get(name, 0)) for k in range(number)]
+                factors += [(name, k - max(change, 0)) for k in range(number)]
                 power -= number
             sides.append(Polynomial.monomial(factors, power, constant))
         products, reactants = sides
         assert reaction.K is not None
         if not reactants.terms or not products.terms:
             raise NotInFormError(f"gibbs({reaction.name}) meets a concentration of zero")
-        overlap = bool(products.species & reactants.species)
-        return Logs(((Fraction(1), products, reactants * Polynomial.constant(Fraction(reaction.K)), overlap),))
+        return Logs(((Fraction(1), products, reactants * Polynomial.constant(Fraction(reaction.K))),))
 
     def sum(self, left: Ratio | Logs, right: Ratio | Logs) -> Ratio | Logs:
         if isinstance(left, Ratio) and isinstance(right, Ratio):

@@ -1,8 +1,10 @@
 """Readouts of counts: expressions evaluated over whole arrays of states, the Gibbs energy of the next firing among them.
 
 gibbs(r) is the Gibbs energy of ONE forward transition n -> n + nu: w+(n)/w-(n + nu) = exp(-dG(n)/RT) exactly, so it is
-finite when a product is absent and +inf when a reactant is exhausted. Where an enzyme is lumped, counts are totals: a plain
-name is then the free count as estimated from the enzyme's states (free_counts.py), total() and gibbs() take the counts.
+finite when a product is absent and +inf when a reactant is exhausted. It is a difference of Gibbs energies of two states, so
+what stands on both sides cancels: whether a catalyst is there decides how fast a reaction goes, not its energy. Where an enzyme
+is lumped, counts are totals: a plain name is then the free count as estimated from the enzyme's states (free_counts.py),
+total() and gibbs() take the counts.
 """
 
 from __future__ import annotations
@@ -83,24 +85,25 @@ def copies_in(system: System, reference: Reference) -> list[tuple[str, int]]:
 
 
 def transition_energy(system: System, reaction: Reaction, counts: NDArray[np.int64], omega: Array) -> Array:
-    """dG of the next forward firing of `reaction`, kJ/mol; arguments as for `evaluate`.
+    """dG of the next forward firing of `reaction`, kJ/mol, from its net stoichiometry; arguments as for `evaluate`.
 
+    With nu_i > 0 copies of i made and -nu_i > 0 taken, exp((dG - dG0')/RT) = prod (n_i + nu_i)_{nu_i} / prod (n_i)_{-nu_i}, each
+    copy over c0 Omega: the factors of w-(n + nu) and w+(n) that a species on both sides adds are the same.
     Raises ValueError for a one-way reaction, whose Gibbs energy is undefined.
     """
     if reaction.dG0_kJ_per_mol is None:
         raise ValueError(f"{reaction.name} is one way: its Gibbs energy is undefined")
     column = {s.name: i for i, s in enumerate(system.free_species)}
     held = system.held_concentrations()
-    change = reaction.equation.change
     log_quotient = np.zeros(np.broadcast_shapes(counts.shape[:-1], np.shape(omega)))
     with np.errstate(divide="ignore"):
-        for sign, terms in ((-1, reaction.equation.reactants), (1, reaction.equation.products)):
-            for name, number in terms:
-                if name in held:
-                    log_quotient = log_quotient + sign * number * np.log(held[name])
-                    continue
-                left = counts[..., column[name]] + (change.get(name, 0) if sign > 0 else 0)
-                for k in range(number):
-                    log_quotient = log_quotient + sign * np.log(np.maximum(left - k, 0) / omega)
+        for name, number in reaction.equation.change.items():
+            if name in held:
+                log_quotient = log_quotient + number * np.log(held[name])
+                continue
+            sign = 1 if number > 0 else -1
+            left = counts[..., column[name]] + max(number, 0)
+            for k in range(abs(number)):
+                log_quotient = log_quotient + sign * np.log(np.maximum(left - k, 0) / omega)
     energy = reaction.dG0_kJ_per_mol + system.conditions.RT_kJ_per_mol * log_quotient
     return np.where(np.isnan(energy), np.inf, energy)

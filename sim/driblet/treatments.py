@@ -170,18 +170,24 @@ def unknown_treatment(text: str) -> str:
 
 
 def _estimates(system: System) -> list[str]:
-    """A note on readouts whose free counts are estimated."""
+    """Notes on readouts whose free counts are estimated, and on Gibbs energies, which are of totals."""
     from driblet.free_counts import estimated_names
     from driblet.system.expressions import references
 
     estimated = estimated_names(system)
+    enzymes = ", ".join(e.name for e in lumped_enzymes(system))
     notes = []
     for readout in system.readouts:
-        names = sorted(
-            {r.name for r in references(readout.expression.root) if r.kind in ("count", "conc") and r.name in estimated}
-        )
+        found = references(readout.expression.root)
+        names = sorted({r.name for r in found if r.kind in ("count", "conc") and r.name in estimated})
+        energies = sorted({r.name for r in found if r.kind == "gibbs"})
+        held = sorted({n for e in energies for n in system.reaction(e).equation.change if n in estimated})
+        if held:
+            notes.append(
+                f"readout {readout.name}: {', '.join(f'gibbs({e})' for e in energies)} takes {', '.join(held)} as counted, "
+                f"free and bound together, {enzymes} being lumped"
+            )
         if names:
-            enzymes = ", ".join(e.name for e in lumped_enzymes(system))
             notes.append(
                 f"readout {readout.name}: free {', '.join(names)} estimated from the states of {enzymes}, lumped: total "
                 "less what they hold on average"

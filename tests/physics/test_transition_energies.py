@@ -13,6 +13,7 @@ from hypothesis import strategies as st
 from scipy import constants
 
 import driblet
+from driblet import readouts
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.quantities import copies_per_molar
 from driblet_analysis.references.master_equation import MasterEquation
@@ -83,6 +84,29 @@ def test_ratio_of_propensities_is_the_energy_of_the_transition(reaction: str, vo
             assert isclose(there / back, exp(-transition_energy(one, before, after, omega)), rel_tol=1e-9)
             tested += 1
     assert tested
+
+
+@given(reaction=reactions(), volume=st.sampled_from([1e-24, 3e-19, 1e-15]))
+def test_gibbs_is_the_energy_of_the_transition_and_infinite_where_there_is_none(reaction: str, volume: float) -> None:
+    """In every state: where the net reactants are there it is finite, also where a catalyst is missing and nothing fires."""
+    one = one_reaction(reaction, f"{volume} L")
+    omega = copies_per_molar(volume)
+    network = Network.of(one)
+    rates = network.rates(np.array([omega]))[0]
+    forward, backward = network.channel_index(FORWARD)[0], network.channel_index(BACKWARD)[0]
+    states = np.array(list(np.ndindex(4, 4, 4)))
+    S = network.stoichiometry[:, 0]
+    found = readouts.transition_energy(one, one.reactions[0], states, np.array(omega)) / RT
+    for before, energy in zip(states, found, strict=True):
+        after = before + S
+        if (after < 0).any():
+            assert energy == np.inf
+            continue
+        assert isclose(energy, transition_energy(one, before, after, omega), rel_tol=1e-9, abs_tol=1e-9)
+        there = network.propensities(before.astype(float), rates)[forward]
+        back = network.propensities(after.astype(float), rates)[backward]
+        if there > 0:
+            assert isclose(there / back, exp(-energy), rel_tol=1e-9)
 
 
 def test_twin_squares_for_falling_factorials_break_it() -> None:

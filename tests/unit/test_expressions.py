@@ -211,6 +211,20 @@ def test_gibbs_of_a_homodimer_counts_pairs() -> None:
     assert energy[1] == np.inf  # one copy makes no pair
 
 
+def test_a_catalyst_cancels_in_gibbs_whether_it_is_there_or_not() -> None:
+    """w+(n)/w-(n + nu) has the catalyst's copies above and below; with none of it the transition still has its energy."""
+    system = driblet.loads(
+        changed(
+            SMALL, ('equation = "A <=> B"', 'equation = "A + C <=> B + C"'), ('forward = "1 /s"', 'forward = "1 /M/s"')
+        ).replace('B = "0 copies"', 'B = "0 copies"\nC = "1 copies"')
+    )
+    RT = GAS_CONSTANT * 298.15
+    counts = np.array([[3, 7, 2], [3, 7, 0], [0, 10, 2]])
+    energy = transition_energy(system, system.reactions[0], counts, np.array(6e7))
+    assert energy[:2] == pytest.approx([-RT * math.log(2 * 3 / 8)] * 2)
+    assert energy[2] == np.inf
+
+
 def test_gibbs_of_a_one_way_reaction_is_refused() -> None:
     with pytest.raises(driblet.InputError, match="is not a reaction"):
         driblet.loads(changed(MIXED, ('pull = "gibbs(pair)"', 'pull = "gibbs(leak)"')))

@@ -279,6 +279,7 @@ CONDITIONS = [
     "gibbs(leak) < gibbs(relay)",
     "0.5 * gibbs(leak) - gibbs(relay) / 2 < -3 kJ/mol",
     "gibbs(kinase) / 1 kJ/mol < -1",
+    "gibbs(turn) < gibbs(odd)",
     "gibbs(turn) < 2 kJ/mol",
     "gibbs(turn) > 2 kJ/mol",
     "-gibbs(turn) < -2 kJ/mol",
@@ -380,6 +381,22 @@ def test_a_decimal_threshold_is_met_by_the_count_that_equals_it() -> None:
     assert of_states(system, [[3, 5]], [0.0], 2.0).met.tolist()[0][2:] == [0, 1]  # K n_A = n_B + 1
 
 
+@pytest.mark.parametrize("when", ["throughout", "on average", "at end"])
+@pytest.mark.parametrize("copies", [0, 3])
+def test_a_compartment_without_the_catalyst_keeps_its_drive(when: str, copies: int) -> None:
+    """Nothing fires without it, and A is as far from equilibrium as ever."""
+    text = changed(
+        SMALL,
+        ('equation = "A <=> B"', 'equation = "A + C <=> B + C"'),
+        ('forward = "1 /s"', 'forward = "1e-9 /M/s"'),
+        ('B = "0 copies"', f'B = "0 copies"\nC = "{copies} copies"'),
+    )
+    requirement = f'[requirements.driven]\nmust = "gibbs(turn) < -4 kJ/mol"\nwhen = "{when}"\n'
+    run = driblet.run(driblet.loads(text + requirement))
+    assert run.outcomes.met.tolist() == [[1]] * 3
+    assert run.requirement_resolution == {"driven": "event"}
+
+
 def test_a_record_that_ends_early_leaves_undecided_what_it_did_not_see() -> None:
     tables = [
         ("throughout", "A > 0"),
@@ -406,7 +423,6 @@ def test_a_record_that_ends_early_leaves_undecided_what_it_did_not_see() -> None
         ("ATP * gibbs(leak) < -10 kJ/mol", False, "multiplied by something that changes"),
         ("ATP * ATP * ATP * ATP * ATP * ATP * ATP > 1000", False, "more than 6 counts"),
         ("gibbs(leak) / 100 - gibbs(relay) * 3 < 0 kJ/mol", False, "too large to multiply out"),
-        ("gibbs(turn) < gibbs(odd)", True, "on both sides"),
     ],
 )
 def test_what_is_no_polynomial_says_why_and_is_judged_on_the_grid(condition: str, averaged: bool, why: str) -> None:

@@ -56,6 +56,7 @@ all = "total(ATP)"
 free = "ATP"
 charge = "total(ATP) / (total(ATP) + total(ADP))"
 active = "kinase"
+drive = "gibbs(relay)"
 [requirements.some]
 must = "total(ATP) > 100"
 when = "throughout"
@@ -230,6 +231,9 @@ def test_what_is_estimated() -> None:
     made, _ = with_treatments(system, {"kinase": "lumped"})
     assert any(line.startswith("readout free: free ATP estimated from the states of kinase") for line in made.warnings)
     assert not any(line.startswith("readout all") for line in made.warnings)
+    note = "readout drive: gibbs(relay) takes ADP, ATP, sugar, sugarP as counted, free and bound together, kinase being lumped"
+    assert note in made.warnings
+    assert not any("as counted" in line for line in system.warnings)
 
 
 @pytest.mark.parametrize(
