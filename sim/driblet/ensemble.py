@@ -187,7 +187,15 @@ def run(
     judged = _requirements(system, network, settings, stop_when_decided, choice)
     histograms = settings.record != "trajectories"
     duration_s = float(sample_times(settings)[-1])
-    sums = SumsPlan.of(system, network, duration_s, settings.burn_in_s, kept=statistics, histograms=histograms)
+    sums = SumsPlan.of(
+        system,
+        network,
+        duration_s,
+        settings.burn_in_s,
+        kept=statistics,
+        histograms=histograms,
+        covariances=settings.record == "summary",
+    )
     times = sample_times(settings) if settings.record != "summary" else np.array([0.0, settings.duration_s])
     chosen = choose_method(len(network.channels), settings.replicates, settings.record == "events")
     chosen = "leaps" if choice.leaps else method or chosen

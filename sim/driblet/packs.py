@@ -230,10 +230,7 @@ class PackRunner:
                 f"{REASONS[COUNT_OVERFLOW]} in replicate {rows[r]}: the system grows without bound, or holds too much"
             )
             raise one_problem(self.system.source, f"species.{name}", text)
-        if self.sums.kept:
-            totals["stationary/covariance"] = self.sums.covariance(self.time_s, samples.counts)
-        if self.sums.kept and not self.sums.histograms:
-            totals["stationary/occupancy_time"] = self.sums.sampled_occupancy(self.time_s, samples.counts)
+        totals.update(self.sums.sampled(self.time_s, samples.counts))
         if len(self.time_s) != len(self.layout.time_s):
             samples = Samples(self.layout.time_s, samples.counts[:, [0, -1]], samples.firings[:, [0, -1]])
         series: dict[str, NDArray[Any]] = {

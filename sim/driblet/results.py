@@ -21,6 +21,7 @@ from driblet.outcomes import GRID, Outcomes
 from driblet.quantities import copies_per_molar
 from driblet.readouts import evaluate
 from driblet.run_file import SERIES, digest
+from driblet.samples import covariance
 from driblet.store import open_run, reading
 from driblet.system import System, loads
 from driblet.system.expressions import Names, read_value
@@ -36,7 +37,7 @@ class Sums:
     (replicates, windows, channels), s, integrals of each channel's falling factorials; count_time : (replicates, windows,
     species), copies times s; window_firings : int64, (replicates, windows + 1, channels), cumulative at each edge;
     occupancy_time : (replicates, species, bins), s, bin_width : (species,), copies, the last bin holds all above; span_s :
-    when occupancies and covariances were gathered; covariance : (replicates, species, species), from samples.
+    when occupancies were gathered.
     """
 
     edge_s: NDArray[np.float64]
@@ -47,7 +48,6 @@ class Sums:
     occupancy_time: NDArray[np.float64]
     bin_width: NDArray[np.int64]
     span_s: tuple[float, float]
-    covariance: NDArray[np.float64]
 
     def mean(self) -> NDArray[np.float64]:
         """Time-weighted mean counts over the span, shape=(replicates, species)."""
@@ -150,7 +150,7 @@ class Run:
             edge_s = files[0]["stationary/window_edge"][:]
             bin_width = files[0]["stationary/bin_width"][:]
             begin, end = files[0]["stationary/span"][:]
-        names = ("monomial_time", "count_time", "window_firings", "occupancy_time", "covariance")
+        names = ("monomial_time", "count_time", "window_firings", "occupancy_time")
         return Sums(
             edge_s=edge_s,
             burn_in_s=None if burn_in is None else float(burn_in),
@@ -158,6 +158,20 @@ class Run:
             span_s=(float(begin), float(end)),
             **{name: self._read(f"stationary/{name}") for name in names},
         )
+
+    @cached_property
+    def covariance(self) -> NDArray[np.float64] | None:
+        """Covariance of the counts that were sampled after the burn-in, shape=(replicates, species, species).
+
+        None for a run without statistics, NaN where there are fewer than two samples.
+        """
+        if self.sums is None:
+            return None
+        with self._opened() as files:
+            kept = "stationary/covariance" in files[0]
+        if kept:  # of a summary, which has no samples any more
+            return self._read("stationary/covariance")
+        return covariance(self.time_s, self.counts, self.sums.span_s)
 
     def event_list(self, replicate: int) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
         """Times in s and channels of the events of one replicate, as far as they were kept.

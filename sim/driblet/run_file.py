@@ -178,23 +178,41 @@ def fill(file: h5py.File, layout: Layout, blocks: Sequence[Block], packed: bool 
     replicate = np.concatenate([b.replicate for b in blocks]) if blocks else np.zeros(0, dtype=np.int64)
     _frame(file, layout, replicate, [b.unit for b in blocks])
     _create_series(file, layout, len(replicate), packed)
-    if not blocks:
-        return
+    if blocks:
+        _write_blocks(file, blocks, 0)
+
+
+def prepare(file: h5py.File, layout: Layout, packed: bool = True) -> None:
+    """A file of all replicates, their rows not written yet."""
+    _frame(file, layout, np.arange(layout.replicates, dtype=np.int64), list(range(layout.units)))
+    _create_series(file, layout, layout.replicates, packed)
+
+
+def place(file: h5py.File, layout: Layout, blocks: Sequence[Block]) -> None:
+    """Write blocks where they belong in a prepared file; blocks : by rising unit."""
+    first = 0
+    for k in range(1, len(blocks) + 1):
+        if k == len(blocks) or blocks[k].unit != blocks[k - 1].unit + 1:
+            _write_blocks(file, blocks[first:k], blocks[first].unit * layout.unit)
+            first = k
+
+
+def _write_blocks(file: h5py.File, blocks: Sequence[Block], row: int) -> None:
     for name in blocks[0].series:
-        _write_rows(file[name], [b.series[name] for b in blocks])
+        _write_rows(file[name], [b.series[name] for b in blocks], row)
     for path in blocks[0].values:
-        _write_rows(file[path], [b.values[path] for b in blocks])
+        _write_rows(file[path], [b.values[path] for b in blocks], row)
     for name, arrays in (
         ("volume", [b.volume_L for b in blocks]),
         ("end_reason", [b.reason for b in blocks]),
         ("events", [b.events for b in blocks]),
     ):
-        _write_rows(file[name], arrays)
+        _write_rows(file[name], arrays, row)
 
 
-def _write_rows(dataset: h5py.Dataset, arrays: Sequence[NDArray[Any]]) -> None:
+def _write_rows(dataset: h5py.Dataset, arrays: Sequence[NDArray[Any]], row: int) -> None:
     """Write arrays one below the other, several at a time: a write costs as much as the simulation of a short replicate."""
-    row = first = size = 0
+    first = size = 0
     for k, array in enumerate(arrays):
         size += array.nbytes
         if size > WRITE_BYTES or k == len(arrays) - 1:
@@ -206,8 +224,7 @@ def _write_rows(dataset: h5py.Dataset, arrays: Sequence[NDArray[Any]]) -> None:
 
 def merge(file: h5py.File, layout: Layout, shards: Iterable[h5py.File]) -> None:
     """A file of all replicates from its shards, by raw chunk copy."""
-    _frame(file, layout, np.arange(layout.replicates, dtype=np.int64), list(range(layout.units)))
-    _create_series(file, layout, layout.replicates)
+    prepare(file, layout)
     for part in shards:
         replicate = part["replicate"][:]
         for name in ("volume", "end_reason", "events", *(one.path for one in layout.per_replicate)):

@@ -20,7 +20,7 @@ from typing import Any
 import h5py
 
 from driblet.errors import InputError, one_problem
-from driblet.run_file import FORMAT, WRITE_BYTES, Block, Layout, fill, merge
+from driblet.run_file import FORMAT, WRITE_BYTES, Block, Layout, fill, merge, place, prepare
 
 _FLUSH_SECONDS = 2.0
 _MEMORY_RUNS = itertools.count(1)  # HDF5 keeps files in memory apart by name
@@ -46,6 +46,7 @@ class RunWriter:
     def __init__(self, path: Path | None, layout: Layout, resume: bool = False, force: bool = False) -> None:
         self.path, self.layout = path, layout
         self.waiting: list[Block] = []
+        self.memory: h5py.File | None = None
         self.done: set[int] = set()
         self.last_flush = time.monotonic()
         if path is None:
@@ -87,8 +88,20 @@ class RunWriter:
         """Take a finished block; it may be written now or with later ones."""
         self.waiting.append(block)
         large = sum(b.nbytes for b in self.waiting) > WRITE_BYTES
-        if self.path is not None and (large or time.monotonic() - self.last_flush > _FLUSH_SECONDS):
+        if self.path is None and large:
+            self._keep_in_memory()
+        elif large or time.monotonic() - self.last_flush > _FLUSH_SECONDS:
             self.flush()
+
+    def _keep_in_memory(self) -> h5py.File:
+        """Move what is waiting into the file in memory, so that it is not held twice."""
+        if self.memory is None:
+            self.memory = _memory_file(f"run in memory {next(_MEMORY_RUNS)}")
+            # packing would save nothing here, and takes longer than a short run
+            prepare(self.memory, self.layout, packed=False)
+        place(self.memory, self.layout, sorted(self.waiting, key=lambda b: b.unit))
+        self.waiting = []
+        return self.memory
 
     def flush(self) -> None:
         """Write what is waiting to a shard that survives a kill."""
@@ -111,13 +124,11 @@ class RunWriter:
 
         Returns the open file when it is kept in memory, else None.
         """
-        blocks = sorted(self.waiting, key=lambda b: b.unit)
         if self.path is None:
-            file = _memory_file(f"run in memory {next(_MEMORY_RUNS)}")
-            # packing would save nothing here, and takes longer than a short run
-            fill(file, self.layout, blocks, packed=False)
+            file = self._keep_in_memory()
             file["provenance"].attrs.update(closing)
             return file
+        blocks = sorted(self.waiting, key=lambda b: b.unit)
         parts = parts_folder(self.path)
         if _shards(parts):
             self.flush()

@@ -20,10 +20,10 @@ from driblet.engines.factors import factored_channels
 from driblet.engines.recorders import Ints, new_averages, new_occupancy, recorders_for, settle_plan
 from driblet.network import Network
 from driblet.run_file import PerReplicate
+from driblet.samples import BINS, covariance, occupancy
 from driblet.system import System
 
 WINDOWS = 10
-BINS = 64
 HIDDEN_SAMPLES = 257
 
 
@@ -36,7 +36,7 @@ class SumsPlan:
     is counted at every event, which can cost more than the simulation itself, or taken from the samples; bin_width : int64,
     (N,), counts per bin of the histograms; span_s : when histograms are gathered; paced : of contract.Averages, monomials
     that are integrated together with the factor of their channel; settle : which of them a firing changes, where only
-    those are added to.
+    those are added to; covariances : whether those of counts are kept, for a run that does not keep its samples.
     """
 
     edge_s: NDArray[np.float64]
@@ -51,6 +51,7 @@ class SumsPlan:
     species: int
     paced: NDArray[np.int64] | None = None
     settle: tuple[Ints, Ints] | None = None
+    covariances: bool = False
 
     @classmethod
     def of(
@@ -62,6 +63,7 @@ class SumsPlan:
         *,
         kept: bool = True,
         histograms: bool = True,
+        covariances: bool = False,
     ) -> SumsPlan:
         """The sums for a run of `duration_s`; a stated burn-in is an edge of its own."""
         if burn_in_s is None:
@@ -100,6 +102,7 @@ class SumsPlan:
             n,
             paced,
             settle_plan(arrays, chosen, paced) if kept else None,
+            covariances,
         )
 
     def recorders(self, state: EnsembleState, start_s: float, end_s: float) -> Recorders:
@@ -149,7 +152,7 @@ class SumsPlan:
             PerReplicate("stationary/count_time", (edges - 1, n), np.float64, "s"),
             PerReplicate("stationary/window_firings", (edges, m), np.int64, "1"),
             PerReplicate("stationary/occupancy_time", (n, BINS), np.float64, "s"),
-            PerReplicate("stationary/covariance", (n, n), np.float64, "1"),
+            *([PerReplicate("stationary/covariance", (n, n), np.float64, "1")] if self.covariances else []),
         )
 
     @property
@@ -167,22 +170,16 @@ class SumsPlan:
         """Times, s, at which a run without trajectories is sampled for its covariances; the end is the last."""
         return np.linspace(self.span_s[0], self.span_s[1], HIDDEN_SAMPLES)
 
-    def sampled_occupancy(self, time_s: NDArray[np.float64], counts: NDArray[np.int64]) -> NDArray[np.float64]:
-        """Time at each count as the samples within the span have it, s, shape=(replicates, species, bins)."""
-        part = counts[:, (time_s >= self.span_s[0]) & (time_s <= self.span_s[1])]
-        replicates, samples, species = part.shape
-        bins = np.minimum(part // self.bin_width, BINS - 1)
-        place = (np.arange(replicates)[:, None, None] * species + np.arange(species)) * BINS + bins
-        number = np.bincount(place.ravel(), minlength=replicates * species * BINS).reshape(replicates, species, BINS)
-        return np.asarray(number * ((self.span_s[1] - self.span_s[0]) / max(1, samples)))
-
-    def covariance(self, time_s: NDArray[np.float64], counts: NDArray[np.int64]) -> NDArray[np.float64]:
-        """Covariance of counts over the samples within the span, shape=(replicates, species, species)."""
-        part = counts[:, (time_s >= self.span_s[0]) & (time_s <= self.span_s[1])].astype(float)
-        if part.shape[1] < 2:
-            return np.full((len(part), self.species, self.species), np.nan)
-        away = part - part.mean(axis=1, keepdims=True)
-        return np.asarray(np.einsum("rti,rtj->rij", away, away) / part.shape[1])
+    def sampled(self, time_s: NDArray[np.float64], counts: NDArray[np.int64]) -> dict[str, NDArray[Any]]:
+        """What is taken from samples, by the names it has in a run file; counts : (replicates, times, species)."""
+        if not self.kept:
+            return {}
+        taken: dict[str, NDArray[Any]] = {}
+        if self.covariances:
+            taken["stationary/covariance"] = covariance(time_s, counts, self.span_s)
+        if not self.histograms:
+            taken["stationary/occupancy_time"] = occupancy(time_s, counts, self.span_s, self.bin_width)
+        return taken
 
 
 def _bin_widths(system: System, network: Network) -> NDArray[np.int64]:

@@ -78,7 +78,13 @@ class TurnoverTable:
 
 class _Enzyme:
     def __init__(
-        self, system: System, name: str, pairs: list[int], unit: list[int], free: Mapping[str, int], held: Mapping[str, float]
+        self,
+        system: System,
+        name: str,
+        pairs: list[int],
+        unit: list[int],
+        free: Mapping[str, int],
+        held: Mapping[str, float],
     ) -> None:
         enzyme = next(e for e in system.enzymes if e.name == name)
         noise = turnover_noise(enzyme)

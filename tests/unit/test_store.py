@@ -5,6 +5,8 @@ from __future__ import annotations
 import errno
 import json
 import os
+import subprocess
+import sys
 from pathlib import Path
 from typing import Any
 
@@ -354,6 +356,19 @@ def test_a_complete_run_is_resumed_as_it_is_and_another_is_refused(tmp_path: Pat
         assert run.provenance["seed"] == 5
 
 
+def test_a_complete_run_is_resumed_without_a_compiler(tmp_path: Path) -> None:
+    file = tmp_path / "system.toml"
+    file.write_text(MIXED)
+    driblet.run(driblet.load(file), tmp_path / "run.h5").close()
+    code = (
+        "import sys, driblet\n"
+        "driblet.run(driblet.load(sys.argv[1]), sys.argv[2], resume=True).close()\n"
+        "print([name for name in ('numba', 'pint', 'scipy.optimize', 'matplotlib') if name in sys.modules])\n"
+    )
+    command = [sys.executable, "-c", code, str(file), str(tmp_path / "run.h5")]
+    assert subprocess.run(command, capture_output=True, text=True, check=True).stdout.strip() == "[]"
+
+
 def test_shards_and_one_file_hold_the_same_bits(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     system = driblet.loads(MIXED)
     driblet.run(system, tmp_path / "one.h5").close()
@@ -366,6 +381,33 @@ def test_shards_and_one_file_hold_the_same_bits(tmp_path: Path, monkeypatch: pyt
         assert file["counts"].compression == "gzip"
         assert file["counts"].shuffle
         assert file["counts"].fletcher32
+
+
+def test_a_run_in_memory_is_the_same_in_one_piece_and_in_many(monkeypatch: pytest.MonkeyPatch) -> None:
+    system = driblet.loads(MIXED)
+    whole = driblet.run(system, replicates=70, threads=2)
+    monkeypatch.setattr(store, "WRITE_BYTES", 1)
+    many = driblet.run(system, replicates=70, threads=2)
+    np.testing.assert_array_equal(many.replicate, np.arange(70))
+    for name in ("counts", "firings_forward", "firings_backward", "volume_L", "events", "end_reason"):
+        np.testing.assert_array_equal(getattr(many, name), getattr(whole, name))
+    assert many.sums is not None
+    assert whole.sums is not None
+    np.testing.assert_array_equal(many.sums.monomial_time, whole.sums.monomial_time)
+
+
+def test_covariances_are_those_of_the_samples_after_the_burn_in() -> None:
+    system = driblet.loads(MIXED)
+    run = driblet.run(system, replicates=5, burn_in=1.0)
+    part = run.counts[:, run.time_s >= 1.0]
+    assert run.covariance is not None
+    for r in range(5):
+        np.testing.assert_allclose(run.covariance[r], np.cov(part[r].T, bias=True), rtol=1e-9, atol=1e-12)
+    kept = driblet.run(system, replicates=5, burn_in=1.0, record="summary").covariance
+    assert kept is not None
+    assert kept.shape == run.covariance.shape
+    assert np.isfinite(kept).all()
+    assert driblet.run(system, replicates=2, statistics=False).covariance is None
 
 
 def test_memory_runs_do_not_disturb_each_other() -> None:
