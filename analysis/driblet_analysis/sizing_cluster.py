@@ -11,8 +11,10 @@ import hashlib
 import io
 import json
 import tempfile
+import threading
 import time
 from collections.abc import Callable, Sequence
+from contextlib import AbstractContextManager, nullcontext
 from pathlib import Path
 
 from driblet.errors import CannotAnswerError, InterruptedRunError
@@ -25,26 +27,40 @@ from driblet_analysis.sweep.files import write_text, writing
 from driblet_analysis.sweep.keypaths import toml_text
 from driblet_analysis.sweep.plan import make_plan
 from driblet_analysis.sweep.shards import union
+from driblet_analysis.sweep.slurm import Options, queued_tasks, submit
 from driblet_analysis.sweep.status import read_status
+from driblet_analysis.sweep.work import Stop, stopping_on_signals
 
 FOLDER = "rounds"
 _POLL_SECONDS = 5.0
 _PATIENCE_SECONDS = 120.0  # with nothing in the queue, for file servers that show results late
 
 
-def simulate_on_cluster(folder: Path, dask: str | None) -> Simulate:
-    """Simulates batches as sweeps below `folder`: on the Dask cluster at an address, or else as Slurm job arrays."""
+def simulate_on_cluster(
+    folder: Path, dask: str | None, options: Options | None = None, tell: Callable[[str], None] | None = None
+) -> Simulate:
+    """Simulates batches as sweeps below `folder`: on the Dask cluster at an address, or else as Slurm job arrays.
+
+    options : of Slurm; tell : is told in words what is waited for, "" when that is over.
+    """
+    say = tell or (lambda _: None)
 
     def act(question: Question, batches: Sequence[Batch], done: Callable[[Batch, Outcome], None]) -> None:
         plan = _plan(folder, question, batches)
         if dask is not None:
             from driblet_analysis.sweep.dask_cluster import work_on_dask
-            from driblet_analysis.sweep.work import Stop
 
-            if work_on_dask(plan.directory, dask, stop=Stop()).stopped:
-                raise InterruptedRunError("interrupted")
+            with _stopping() as stop:
+                outcome = work_on_dask(
+                    plan.directory, dask, stop=stop, on_progress=lambda progress: say(progress.waiting)
+                )
+            if outcome.stopped:
+                raise InterruptedRunError("interrupted; --resume goes on")
+            if outcome.left:
+                why = "; ".join([*outcome.notes, f"{outcome.left} of {plan.points} batches are left"])
+                raise CannotAnswerError(f"{plan.directory}: {why}; --resume goes on")
         else:
-            _submit_and_wait(plan)
+            _submit_and_wait(plan, options or Options(points_per_task=1), say)
         _take_in(plan, batches, done)
 
     return act
@@ -68,15 +84,22 @@ def _plan(folder: Path, question: Question, batches: Sequence[Batch]) -> Plan:
     return read_plan(place / "sweep")
 
 
-def _submit_and_wait(plan: Plan) -> None:
-    """Raises CannotAnswerError when the jobs end and leave points undone."""
-    from driblet_analysis.sweep.slurm import Options, queued_tasks, submit
+def _stopping() -> AbstractContextManager[Stop]:
+    """A stop that answers signals, where signals can be answered."""
+    if threading.current_thread() is threading.main_thread():
+        return stopping_on_signals()
+    return nullcontext(Stop())
 
+
+def _submit_and_wait(plan: Plan, options: Options, say: Callable[[str], None]) -> None:
+    """Raises CannotAnswerError when the jobs end and leave points undone."""
     if not queued_tasks(plan.directory):
-        submit(plan.directory, Options(points_per_task=1), retry=True)
+        submit(plan.directory, options, retry=True)
     quiet = time.monotonic()
     while read_status(plan.directory).left:
-        if queued_tasks(plan.directory):
+        queue = queued_tasks(plan.directory)
+        if queue:
+            say("Slurm, " + ", ".join(f"{n} tasks {state.lower()}" for state, n in queue.items()))
             quiet = time.monotonic()
         elif time.monotonic() - quiet > _PATIENCE_SECONDS:
             text = (
@@ -84,6 +107,7 @@ def _submit_and_wait(plan: Plan) -> None:
             )
             raise CannotAnswerError(text)
         time.sleep(_POLL_SECONDS)
+    say("")
 
 
 def _take_in(plan: Plan, batches: Sequence[Batch], done: Callable[[Batch, Outcome], None]) -> None:

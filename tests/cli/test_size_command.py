@@ -155,7 +155,7 @@ def test_a_cluster_gives_the_same_answer(system: Path, tmp_path: Path, monkeypat
     from driblet_analysis.sweep import dask_cluster, work_locally
 
     monkeypatch.setattr(
-        dask_cluster, "work_on_dask", lambda directory, _, stop: work_locally(directory, workers=1, stop=stop)
+        dask_cluster, "work_on_dask", lambda directory, _, **rest: work_locally(directory, workers=1, **rest)
     )
     here = answered(system, tmp_path / "here").finding
     folder = tmp_path / "there"

@@ -39,5 +39,9 @@ def test_slurm(tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: 
     with SlurmNode(tmp_path / "node") as node:
         for name, value in node.environment.items():
             monkeypatch.setenv(name, value)
-        there = answer(tmp_path, "there", ["--slurm"], capsys)
+        options = ["--partition", "main", "--time", "10", "--memory", "300M", "--setup", "export FROM_SETUP=1"]
+        there = answer(tmp_path, "there", ["--slurm", *options], capsys)
+        script = next((tmp_path / "there" / "rounds").glob("*/sweep/slurm/sweep-001.sh")).read_text("utf-8")
+        assert "#SBATCH --partition=main" in script
+        assert "export FROM_SETUP=1" in script
     assert there == answer(tmp_path, "here", [], capsys)

@@ -71,6 +71,9 @@ def test_all_problems_at_once(system: Path, capsys: pytest.CaptureFixture[str]) 
     [
         (["--resume", "--force"], "give one of them"),
         (["--slurm", "--dask", "x"], "different ways"),
+        (["--partition", "long", "--setup", "module load python"], "--partition, --setup: goes with --slurm"),
+        (["--slurm", "--time", "1", "--memory", "2 GB"], '"1" is too short'),
+        (["--slurm", "--time", "1", "--memory", "2 GB"], '"2 GB" will not do'),
         (["--within", "2"], "--within"),
         (["--budget", "3"], "--budget"),
         (["--between", "1 copies"], "--between"),

@@ -14,6 +14,7 @@ import click
 from driblet.commands.requirement_rows import percents
 from driblet.commands.screen import console, number, print_json, table
 from driblet.errors import EXIT_CANNOT_ANSWER, EXIT_CHECK_SAYS_NO, EXIT_DONE
+from driblet_analysis.commands.cluster_options import WaitingLines, only_with_slurm, slurm_options
 
 if TYPE_CHECKING:
     from driblet_analysis.sizing import Sizing
@@ -44,6 +45,7 @@ if TYPE_CHECKING:
 @click.option("--threads", type=click.IntRange(1, 4096), help="Threads; default: one per core.")
 @click.option("--slurm", is_flag=True, help="Have the rounds done by Slurm job arrays, and wait for them.")
 @click.option("--dask", metavar="ADDRESS|FILE", help="Have the rounds done by a running Dask cluster.")
+@slurm_options
 @click.option("--resume", is_flag=True, help="Go on with an interrupted sizing, or with a larger budget.")
 @click.option("--force", is_flag=True, help="Replace a sizing in the folder.")
 @click.option("--json", "as_json", is_flag=True, help="Print the result as JSON.")
@@ -59,6 +61,12 @@ def size(
     threads: int | None,
     slurm: bool,
     dask: str | None,
+    partition: str | None,
+    account: str | None,
+    limit: str | None,
+    memory: str | None,
+    throttle: int | None,
+    setup: tuple[str, ...],
     resume: bool,
     force: bool,
     as_json: bool,
@@ -73,6 +81,11 @@ def size(
         raise click.UsageError("--force starts anew and --resume goes on: give one of them")
     if slurm and dask:
         raise click.UsageError("--slurm and --dask are different ways of working: give one of them")
+    given = {
+        "--partition": partition, "--account": account, "--time": limit, "--memory": memory, "--throttle": throttle,
+        "--setup": setup,
+    }  # fmt: skip
+    only_with_slurm(slurm, given)
     from driblet_analysis.sizing import ANSWER, FIGURE
     from driblet_analysis.sizing import size as answer
     from driblet_analysis.sizing_question import read_question
@@ -80,11 +93,14 @@ def size(
     question = read_question(file, path, *between, requirement, within, budget, seed)
     folder = output or Path(f"{file.stem}-size")
     simulate = None
-    if slurm or dask:
-        from driblet_analysis.sizing_cluster import simulate_on_cluster
+    with _bar(budget) as (update, tell):
+        if slurm or dask:
+            from driblet_analysis.sizing_cluster import simulate_on_cluster
+            from driblet_analysis.sweep.slurm import Options, check_options
 
-        simulate = simulate_on_cluster(folder, dask)
-    with _bar(budget) as update:
+            options = Options(partition, account, limit, memory, 1, throttle, 1, setup)
+            check_options(options)
+            simulate = simulate_on_cluster(folder, dask, options, tell)
         result = answer(
             question, folder, resume=resume, force=force, simulate=simulate, threads=threads, on_progress=update
         )
@@ -161,9 +177,9 @@ def _print(result: Sizing, words: Words, page: Path) -> None:
 
 @contextmanager
 def _bar(budget: int) -> Iterator[Any]:
-    """A progress line on a terminal; yields what takes the reports."""
+    """A progress line on a terminal; yields what takes the reports, and what takes words on what is waited for."""
     if not sys.stderr.isatty():
-        yield None
+        yield None, WaitingLines()
         return
     from rich.console import Console
     from rich.progress import BarColumn, Progress, TextColumn
@@ -172,9 +188,13 @@ def _bar(budget: int) -> Iterator[Any]:
         TextColumn("sizing"),
         BarColumn(complete_style="blue", finished_style="blue"),
         TextColumn("{task.completed:,} compartments of at most {task.total:,}, at {task.fields[value]}"),
+        TextColumn("{task.fields[waiting]}"),
         console=Console(file=sys.stderr),
         transient=True,
     )
     with bar:
-        task = bar.add_task("", total=budget, value="")
-        yield lambda progress: bar.update(task, completed=progress.done, value=progress.value)
+        task = bar.add_task("", total=budget, value="", waiting="")
+        yield (
+            lambda progress: bar.update(task, completed=progress.done, value=progress.value),
+            lambda text: bar.update(task, waiting=f"waiting: {text}" if text else ""),
+        )

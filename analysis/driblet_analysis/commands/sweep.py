@@ -13,6 +13,7 @@ import click
 
 from driblet.commands.screen import CAUTION, console, duration, number, print_json, table
 from driblet.errors import EXIT_CANNOT_ANSWER, EXIT_DONE, EXIT_INTERRUPTED, one_problem
+from driblet_analysis.commands.cluster_options import WaitingLines, only_with_slurm, slurm_options
 
 if TYPE_CHECKING:
     from driblet_analysis.sweep.local import Outcome
@@ -108,19 +109,9 @@ def _part(context: click.Context, parameter: click.Parameter, value: str | None)
 @click.option("--retry-failed", is_flag=True, help="Do points again that ended with an error.")
 @click.option("--slurm", is_flag=True, help="Submit a Slurm job array instead of working here.")
 @click.option("--dask", metavar="ADDRESS|FILE", help="Work on a running Dask cluster: its address or scheduler file.")
-@click.option("--partition", help="Slurm: partition.")
-@click.option("--account", help="Slurm: account.")
-@click.option("--time", "limit", metavar="LIMIT", help="Slurm: time limit of a task, such as 2:00:00.")
-@click.option("--memory", metavar="SIZE", help="Slurm: memory of a task, such as 2G.")
+@slurm_options
 @click.option("--cpus", type=click.IntRange(1, 4096), help="Slurm: cores of a task; it runs a worker on each.")
-@click.option("--throttle", type=click.IntRange(1, 100_000), help="Slurm: most tasks at a time.")
 @click.option("--points-per-task", type=click.IntRange(1), help="Slurm: how much a task takes on.")
-@click.option(
-    "--setup",
-    multiple=True,
-    metavar="LINE",
-    help="Slurm: a shell line before the work, such as a module; may be repeated.",
-)
 @click.option("--warm-up", is_flag=True, hidden=True, help="Compile what the sweep needs, and nothing else.")
 def work(
     directory: Path,
@@ -182,9 +173,7 @@ def work(
 def _check_combination(
     given: dict[str, Any], slurm: bool, dask: str | None, part: object, workers: object, retry: bool
 ) -> None:
-    extra = [name for name, value in given.items() if value]
-    if extra and not slurm:
-        raise click.UsageError(f"{', '.join(extra)}: goes with --slurm")
+    only_with_slurm(slurm, given)
     chosen = [name for name, value in (("--slurm", slurm), ("--dask", dask), ("--part", part)) if value]
     if len(chosen) > 1:
         raise click.UsageError(f"{' and '.join(chosen)} are different ways of working: give one of them")
@@ -215,15 +204,8 @@ def _show_outcome(outcome: Outcome, directory: Path) -> int:
 def _bar() -> Iterator[Any]:
     """A progress bar on a terminal, elsewhere a line for what is waited for; yields what takes the reports."""
     if not sys.stderr.isatty():
-        told: set[str] = set()
-
-        def tell(progress: Any) -> None:
-            kind = re.sub(r"\d+", "", progress.waiting)  # one line, however the number of shards falls
-            if kind and kind not in told:
-                told.add(kind)
-                print(f"waiting: {progress.waiting}", file=sys.stderr, flush=True)
-
-        yield tell
+        tell = WaitingLines()
+        yield lambda progress: tell(progress.waiting)
         return
     from rich.console import Console
     from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn

@@ -57,7 +57,7 @@ def submit(directory: str | Path, options: Options, *, retry: bool = False) -> S
     """
     plan = read_plan(directory)
     plan.check_version()
-    _check(options)
+    check_options(options)
     if shutil.which("sbatch") is None:
         text = "sbatch is not on this machine: go where jobs are submitted, or use --part K/N under another scheduler"
         raise one_problem("command line", "--slurm", text)
@@ -148,7 +148,8 @@ def _jobs(directory: Path) -> list[dict[str, Any]]:
     return jobs if isinstance(jobs, list) else []
 
 
-def _check(options: Options) -> None:
+def check_options(options: Options) -> None:
+    """Raises InputError with every option that Slurm could not read, or that would leave no time to stop cleanly."""
     problems = []
     for name in ("partition", "account", "time", "memory"):
         value = getattr(options, name)
