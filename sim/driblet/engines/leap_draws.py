@@ -13,7 +13,8 @@ from driblet.engines.leap_steps import clipped
 
 U = np.uint64
 SOME = 10.0  # firings in a leap below which a falling rate thins them
-MANY = 25.0  # variance of turnovers in a leap from which they are drawn jointly, as normal numbers
+MANY = 9.0  # variance of turnovers in a leap from which they are drawn jointly, as normal numbers
+REACH = 9.0  # times that variance: the square of what fires, so that a normal number hardly ever asks for more than there is
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
@@ -82,12 +83,14 @@ def draw_jointly(  # type: ignore[no-untyped-def]
     """Firings of all laws of an enzyme of several activities, so that turnovers have means J and covariance C times `scale`.
 
     there, back : (K,), means of pairs both ways; lower, turned, big : scratch. Activities of a variance below MANY are
-    drawn as they come, the others as rounded normal numbers. Returns whether any was drawn so.
+    drawn as they come, the others as rounded normal numbers. Returns whether all of some variance were drawn so.
     """
-    count = 0
+    count, missed = 0, 0
     for a in range(activities):
-        big[a] = 1 if C[a, a] * scale >= MANY else 0
+        variance, most = C[a, a] * scale, max(there[unit[a]], back[unit[a]])
+        big[a] = 1 if variance >= MANY and most * most >= REACH * variance else 0
         count += big[a]
+        missed += 1 if variance >= 1.0 and not big[a] else 0
     # exchanges, and the laws of activities that turn rarely
     for m in range(first_law, last_law):
         k = law_pair[m]
@@ -98,7 +101,7 @@ def draw_jointly(  # type: ignore[no-untyped-def]
         if not alone:
             draw_independent(there[k], back[k], 0.0, stream, r, k, forward_drawn, backward_drawn)
     if count == 0:
-        return False
+        return missed == 0
     # Cholesky of the covariance less what rounding adds, over the busy activities
     for a in range(activities):
         for c in range(a + 1):
@@ -141,7 +144,7 @@ def draw_jointly(  # type: ignore[no-untyped-def]
         more = max(more, 0.0, net)
         forward_drawn[k] = more
         backward_drawn[k] = more - net
-    return True
+    return missed == 0
 
 
 @njit(nogil=True, cache=CACHE, error_model="numpy")
