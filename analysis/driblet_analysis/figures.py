@@ -17,7 +17,6 @@ import matplotlib
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
-from matplotlib.text import Text
 from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
@@ -68,6 +67,7 @@ def save(figure: Figure, path: str | Path) -> Path:
         raise one_problem(str(path), "", f"is no figure name: it ends in {', '.join(FORMATS)}")
     temporary = path.with_name(f".{path.stem}.tmp{path.suffix}")
     _take_texts_as_they_stand(figure)
+    _lay_out(figure)
     try:
         figure.savefig(temporary)
         temporary.replace(path)
@@ -78,12 +78,27 @@ def save(figure: Figure, path: str | Path) -> Path:
 
 
 def _take_texts_as_they_stand(figure: Figure) -> None:
-    """Titles and labels are the user's: a "$" in them starts no formula. Numbers at ticks stay matplotlib's own."""
-    axes = [axis for ax in figure.axes for axis in (ax.xaxis, ax.yaxis)]
-    ticks = {id(text) for axis in axes for text in axis.get_ticklabels(which="both")}
-    for text in figure.findobj(Text):
-        if id(text) not in ticks:
-            text.set_parse_math(False)
+    """Titles and labels are the user's: a "$" in them starts no formula. Numbers at ticks stay matplotlib's own.
+
+    Texts are named one by one: to ask an axis for all of its texts makes its ticks, which takes as long as drawing them.
+    """
+    texts = [*figure.texts]
+    legends: list[Any] = [*figure.legends]
+    for ax in figure.axes:
+        texts += [ax.title, ax._left_title, ax._right_title, ax.xaxis.label, ax.yaxis.label, *ax.texts]  # type: ignore[attr-defined]
+        legends.append(ax.get_legend())
+    for legend in legends:
+        texts += [legend.get_title(), *legend.get_texts()] if legend else []
+    for text in texts:
+        text.set_parse_math(False)
+
+
+def _lay_out(figure: Figure) -> None:
+    """Place everything now: left to savefig, the whole figure is drawn once more for it."""
+    engine = figure.get_layout_engine()
+    if engine is not None:
+        engine.execute(figure)
+        figure.set_layout_engine("none")
 
 
 def time_axis(duration_s: float) -> tuple[float, str]:

@@ -6,6 +6,7 @@ systems have infinite classes: caps cut a box out of one, a weight cuts out wher
 
 from __future__ import annotations
 
+import math
 import sys
 from collections.abc import Sequence
 
@@ -22,6 +23,7 @@ LIMIT = 200_000
 ENABLED_BUT_OUTSIDE, NOT_ENABLED = -2, -1
 _NO_CAP = np.iinfo(np.int64).max
 _DEPTH = 36.0  # states of less than exp(-36) = 2e-16 of the largest probability are left out of a cut-out
+_LOOKED_UP = 20_000
 _SLACK = 2  # but that many steps through rarer states are taken: a rare intermediate must not part the rest
 _plain_left = [
     10_000
@@ -128,11 +130,19 @@ def is_finite(network: Network, reactions: Sequence[int]) -> bool:
 
 def poisson_log_weights(states: States, ln_mean: Array) -> Array:
     """ln prod_i mean_i^n_i / n_i!, shape=(states,); a species of mean zero weighs 1 at n = 0 and 0 above."""
-    from scipy.special import gammaln
-
     finite = np.isfinite(ln_mean)
-    out = states[:, finite] @ ln_mean[finite] - gammaln(states + 1.0).sum(axis=1)
+    out = states[:, finite] @ ln_mean[finite] - ln_factorial(states).sum(axis=1)
     return np.where((states[:, ~finite] > 0).any(axis=1), -np.inf, out)
+
+
+def ln_factorial(counts: States) -> Array:
+    """ln n! of whole numbers; looked up where they are small, since scipy.special takes longer to import."""
+    top = int(counts.max(initial=0))
+    if top > _LOOKED_UP:
+        from scipy.special import gammaln
+
+        return np.asarray(gammaln(counts + 1.0))
+    return np.array([math.lgamma(n + 1.0) for n in range(top + 1)])[counts]
 
 
 def channel_matrices(network: Network) -> tuple[States, States]:

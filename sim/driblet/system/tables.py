@@ -183,7 +183,8 @@ Loading = Annotated[Literal["nearest", "poisson"], BeforeValidator(_one_of(LOADI
 class Table(BaseModel):
     """Base of all tables: unknown keys are errors."""
 
-    model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True)
+    # most files use a few of the tables: the others are never built
+    model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True, defer_build=True)
 
 
 PH = Annotated[float, BeforeValidator(_plain(0, 14, "a pH"))]
