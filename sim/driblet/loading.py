@@ -12,7 +12,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import ndtr, ndtri, pdtr, pdtrik
 
 from driblet.quantities import copies_per_molar
 from driblet.system.model import Compartment, System
@@ -88,6 +87,8 @@ def volumes(compartment: Compartment, uniform: Array) -> Array:
     sigma = math.sqrt(math.log1p(compartment.cv**2))
     if not sigma:
         return np.full(len(uniform), compartment.volume_L)
+    from scipy.special import ndtr, ndtri  # not needed by every run, and slow to import
+
     if compartment.diameter_m is None:
         return np.asarray(compartment.volume_L * np.exp(sigma * ndtri(uniform)))
     lowest = ndtr(math.log(2.0 * compartment.wall_m / compartment.diameter_m) / sigma) if compartment.wall_m else 0.0
@@ -100,6 +101,8 @@ def poisson_quantile(p: Array, mean: Array) -> Array:
 
     Above 1e9 copies, where scipy's inverse gives up, to the nearest copy or two by Cornish and Fisher's expansion.
     """
+    from scipy.special import ndtri, pdtr, pdtrik
+
     k = np.zeros_like(p)
     many = mean > _MANY
     z = ndtri(p[many])
