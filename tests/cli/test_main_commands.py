@@ -90,6 +90,9 @@ def test_run_refuses_to_overwrite_and_force_replaces(
         assert file["counts"].shape == (3, 3, 6)
     assert main([*words, "--resume"]) == 0
     assert "complete already" in capsys.readouterr().out
+    for method in ("lanes", "scalar"):
+        assert main([*words, "--force", "--method", method]) == 0
+        assert f"(exact, {method})" in capsys.readouterr().out
 
 
 @pytest.mark.parametrize(
@@ -100,6 +103,7 @@ def test_run_refuses_to_overwrite_and_force_replaces(
         (["run", str(SYSTEM), "--duration", "5"], "has no unit"),
         (["run", str(SYSTEM), "--duration", "5 mM"], "a time is needed"),
         (["run", str(SYSTEM), "--engine", "quick", "-o", "x.h5"], '"quick" is not an engine'),
+        (["run", str(SYSTEM), "--method", "quick", "-o", "x.h5"], '"quick" is not a method: "lanes" or "scalar" is'),
         (["run", str(SYSTEM), "--force", "--resume"], "give one of them"),
         (["check", str(SYSTEM)], "is a system file, not a run file: `driblet run"),
         (["show", "missing.h5"], "missing.h5: cannot be read"),

@@ -29,6 +29,7 @@ from driblet.commands.treatment_lines import treatment_lines
     "--leap-tolerance", type=float, help="Expected change of a reaction's gross rate in one leap; 0.01 is usual."
 )
 @click.option("--stop-when-decided", is_flag=True, help="End a compartment when every requirement is decided.")
+@click.option("--method", metavar="NAME", help='Kernel of exact runs: "lanes" or "scalar"; left out, the faster one.')
 @click.option("--treatment", metavar="HOW", help='Enzymes: "elementary", "lumped", "auto", or "kinase=lumped,...".')
 @click.option("--force", is_flag=True, help="Replace an existing run file or its parts.")
 @click.option("--resume", is_flag=True, help="Go on with an interrupted run; a complete one is left as it is.")
@@ -41,6 +42,7 @@ def run(
     seed: int | None,
     threads: int | None,
     engine: str | None,
+    method: str | None,
     leap_tolerance: float | None,
     stop_when_decided: bool,
     treatment: str | None,
@@ -68,6 +70,7 @@ def run(
             sample_every=sample_every,
             seed=seed,
             engine=engine,
+            method=method,
             leap_tolerance=leap_tolerance,
             treatment=None if treatment is None else read_treatments(treatment),
             threads=threads,
