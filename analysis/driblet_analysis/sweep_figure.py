@@ -314,6 +314,8 @@ def _maps(table: Table, shown: _Shown, first: _Axis, second: _Axis, third: _Axis
     note = "one cell a point"
     if shown.share and shown.asked is not None:
         note += f"; heavy line: the share asked for, {shown.asked:.3g}"
+    if not np.isfinite(shown.values).all():
+        note += "; blank: no value"
     _heading(figure, table, note)
     return figure
 

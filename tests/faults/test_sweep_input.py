@@ -363,9 +363,17 @@ def test_no_scheduler_answers(
     from driblet_analysis.sweep import dask_cluster
 
     monkeypatch.setattr(dask_cluster, "_CONNECT_SECONDS", 2)
-    for address in ("tcp://127.0.0.1:9", "nonsense", str(planned / "plan.h5")):
+    (planned / "no.json").write_text('{"addresses": []}', "utf-8")
+    for address, complaint in (
+        ("tcp://127.0.0.1:9", "no Dask scheduler answers"),
+        ("127.0.0.1:9", "no Dask scheduler answers"),
+        ("nonsense", "no address such as tcp://"),
+        ("nothere.json", "is no scheduler file that is here"),
+        (str(planned / "plan.h5"), "it names no address"),
+        (str(planned / "no.json"), "it names no address"),
+    ):
         assert main(["sweep", "work", str(planned), "--dask", address]) == 2
-        assert "no Dask scheduler answers" in one_line(capsys)
+        assert complaint in one_line(capsys)
 
 
 def test_tables_that_cannot_be_written(planned: Path, capsys: pytest.CaptureFixture[str]) -> None:

@@ -7,8 +7,10 @@ told to are left, with a note.
 
 from __future__ import annotations
 
+import json
 import logging
 import platform
+import re
 import secrets
 import threading
 import time
@@ -65,6 +67,7 @@ def _client(address: str) -> Iterator[Any]:
         from distributed import Client
     except ImportError as error:
         raise one_problem("command line", "--dask", 'needs dask: pip install "driblet[dask]"') from error
+    _check_address(address)
     logging.getLogger("distributed.client").setLevel(logging.CRITICAL)  # what matters is told in a line of ours
     try:
         if Path(address).is_file():
@@ -83,6 +86,20 @@ def _client(address: str) -> Iterator[Any]:
         yield client
     finally:
         client.close()
+
+
+def _check_address(address: str) -> None:
+    """Raises InputError for what is no address and no scheduler file; what answers there is another question."""
+    if Path(address).is_file():
+        try:
+            known = isinstance(json.loads(Path(address).read_text("utf-8")).get("address"), str)
+        except (OSError, ValueError, AttributeError):
+            known = False
+        if not known:
+            raise one_problem("command line", "--dask", f'"{address}" is no scheduler file: it names no address')
+    elif not re.fullmatch(r"[a-z]+://\S+|[^/\s]+:\d+", address):
+        text = f'"{address}" is no scheduler file that is here, and no address such as tcp://10.0.0.5:8786'
+        raise one_problem("command line", "--dask", text)
 
 
 @contextmanager

@@ -18,6 +18,7 @@ from driblet.errors import one_problem
 
 FORMAT = 1
 _ROWS = 2048  # written at a time
+_WHOLE = 2.0**53  # every whole number below is itself
 _HEAD = re.compile(r"(.*?)(?: \((.*)\))?")
 
 
@@ -64,7 +65,9 @@ class CsvTable:
 def _cell(value: Cell) -> str:
     if isinstance(value, str):
         return value.replace("#", "")  # which begins a comment to programs that skip the lines of provenance
-    return "" if math.isnan(value) else repr(value)
+    if math.isnan(value):
+        return ""
+    return str(int(value)) if abs(value) < _WHOLE and value == int(value) else repr(value)
 
 
 class Hdf5Table:
