@@ -242,3 +242,15 @@ def test_from_python(runs: dict[str, Path]) -> None:
         assert "counts" in opened
     with xarray.open_dataset(runs["0.7"], engine="h5netcdf", group="requirements", phony_dims="sort") as opened:
         assert opened["met"].shape == (150, 3)
+
+
+def test_where_few_fail_there_is_no_table_of_times(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """Copies only leave, so whoever has more than 20 has them at the start: a Poisson number of mean 12 does in 1.2 %."""
+    file, run = tmp_path / "s.toml", tmp_path / "s.h5"
+    file.write_text(SYSTEM.replace("SHARE", "0.5").replace('must = "A > 0"', 'must = "A <= 20"'))
+    assert main(["run", str(file), "-o", str(run), "--threads", "1", "--replicates", "600"]) == 0
+    capsys.readouterr()
+    assert main(["lifetime", str(run)]) == 0
+    out = " ".join(capsys.readouterr().out.split())
+    assert "alive: fewer than 5 % of compartments failed in its span" in out
+    assert "alive: time by which" not in out

@@ -71,14 +71,13 @@ def _print(result: Lifetimes, title: str, complete: bool) -> None:
 def _print_one(out: Console, one: Lifetime) -> None:
     if one.survival is not None and len(one.survival.time):
         verb = "failed" if one.requirement.when == "throughout" else "succeeded"
-        rows = [[f"{percent(q.share)} %", *_times(q.time_s)] for q in one.quantiles]
-        out.print(
-            table(
-                f"{one.share.name}: time by which a share of compartments has {verb}",
-                ["share", "time", "from", "to"],
-                rows,
-            )
-        )
+        if any(not math.isinf(q.time_s.low) for q in one.quantiles):
+            rows = [[f"{percent(q.share)} %", *_times(q.time_s)] for q in one.quantiles]
+            title = f"{one.share.name}: time by which a share of compartments has {verb}"
+            out.print(table(title, ["share", "time", "from", "to"], rows))
+        else:
+            least = percent(min(q.share for q in one.quantiles))
+            out.print(f"{one.share.name}: fewer than {least} % of compartments {verb} in its span", markup=False)
     if one.traits:
         rows = [
             [
