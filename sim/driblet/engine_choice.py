@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driblet.errors import one_problem
+from driblet.lumping import is_lumped
 from driblet.network import Network
 from driblet.system import RunSettings, System
 
@@ -96,7 +97,7 @@ def choose_engine(system: System, network: Network, settings: RunSettings, key: 
     if not network.channels:
         return EngineChoice(asked, EXACT, "exact: nothing can react", tolerance, stiffness, {})
     facts = pilot(system, network, settings, tolerance, stiffness, key)
-    why, pays = _judged(facts, asked)
+    why, pays = _judged(facts, asked, system)
     return EngineChoice(asked, LEAP if pays else EXACT, why, tolerance, stiffness, facts)
 
 
@@ -149,7 +150,7 @@ def core_seconds(facts: dict[str, float]) -> tuple[float, float]:
     return 1e-9 * facts["firings"] * event_in_lanes, 1e-9 * leaping
 
 
-def _judged(facts: dict[str, float], asked: str) -> tuple[str, bool]:
+def _judged(facts: dict[str, float], asked: str, system: System) -> tuple[str, bool]:
     """One sentence, and whether to leap."""
     exact, leaping = core_seconds(facts)
     span = f"{facts['simulated_s']:,.4g} s of one compartment"
@@ -162,6 +163,14 @@ def _judged(facts: dict[str, float], asked: str) -> tuple[str, bool]:
         f"{span} took {facts['leaps']:,.0f} leaps and {facts['exact_events']:,.0f} single events for "
         f"{facts['firings']:,.0f} firings"
     )
-    if asked == LEAP or times >= WORTH:
+    if times >= (1.0 if asked == LEAP else WORTH):
         return f"leaps: {took}", True
-    return f"exact: {took}, which saves too little", False
+    if times >= 1.0:
+        return f"exact: {took}, which saves too little", False
+    return f"exact: {took}, which is {1.0 / times:,.2g} times the work of exact events{_remedy(system)}", False
+
+
+def _remedy(system: System) -> str:
+    """What would make leaps longer: binding of ligands, the fastest that happens, is gone from lumped enzymes."""
+    stepwise = [e.name for e in system.enzymes if e.steps and not is_lumped(system, e.name)]
+    return f"; lumped, {', '.join(stepwise)} would let leaps be longer" if stepwise else ""
