@@ -11,6 +11,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from driblet.engines import exact
 from driblet.engines.contract import (
     BUFFER_FULL,
     COUNT_OVERFLOW,
@@ -283,6 +284,21 @@ def test_networks_without_channels_or_species() -> None:
             ExactEngine(empty.arrays, n, method).advance(np.zeros((9, 0)), state, samples, 10)
             assert (state.reason == NOTHING_CAN_FIRE).all()
             assert (samples.counts == 1).all()
+
+
+@pytest.mark.parametrize("patience", [0.0, 60.0])
+def test_stragglers_keep_their_bits_where_their_kernel_is_not_compiled_yet(
+    patience: float, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    one = pack(14, seed=5, replicates=20)
+    right = one.run("scalar")
+    called = []
+    monkeypatch.setattr(exact, "needs_compiler", lambda: True)
+    monkeypatch.setattr(exact, "PATIENCE_S", patience)
+    scalar = exact.advance_scalar
+    monkeypatch.setattr(exact, "advance_scalar", lambda *a: called.append(1) or scalar(*a))
+    assert same_bits(one.run(None, 300), right)
+    assert bool(called) == (patience == 0.0)
 
 
 def test_the_choice() -> None:

@@ -8,6 +8,7 @@ scalar  one replicate after the other (scalar.py): an event costs nearly the sam
 
 from __future__ import annotations
 
+import time
 from typing import TypeVar
 
 import numpy as np
@@ -19,9 +20,10 @@ from driblet.engines.factors import factor_rows, most_nodes
 from driblet.engines.lane_memory import lane_table, new_lanes
 from driblet.engines.lanes import advance_lanes
 from driblet.engines.recorders import recorders_for
-from driblet.engines.scalar import advance_scalar
+from driblet.engines.scalar import advance_scalar, needs_compiler
 from driblet.engines.sums import Refresh, SumRows, refresh_plan, select, sum_rows
 
+PATIENCE_S = 3.0  # about what it takes to compile the scalar kernel
 Table = TypeVar("Table", NetworkArrays, SumRows, Refresh)
 
 __all__ = ["METHODS", "ExactEngine", "advance", "choose_method", "fewest_lanes", "select"]
@@ -48,6 +50,11 @@ class ExactEngine:
         self.nodes = most_nodes(network)
         # None has kernels compiled without a trace of factors
         self.factor_row = factor_rows(network) if self.nodes else None
+        self.ran_lanes, self.straggling_s = False, 0.0
+
+    def _keep_in_lanes(self) -> bool:
+        """Whether stragglers go on in lanes: in a first run their kernel would have to be compiled, which takes longer."""
+        return self.ran_lanes and self.straggling_s < PATIENCE_S and needs_compiler()
 
     def advance(
         self,
@@ -59,16 +66,34 @@ class ExactEngine:
     ) -> int:
         """See contract.py. rates : float64, (R, M + 2 T), 1/s per product of falling factorials, then coefficients."""
         recorders = recorders or recorders_for(state)
-        judging = recorders.requirements
-        plain = recorders._replace(requirements=None)
         running = int(np.count_nonzero(state.reason == RUNNING))
         logging = recorders.log.time.shape[1] > 0
         method = self.method or choose_method(state.firings.shape[1], running, logging)
+        straggling = method == "scalar" and not self.method and not logging and self._keep_in_lanes()
+        if straggling:
+            started = time.monotonic()
+            fired = self._advance("lanes", 1, rates, state, samples, budget, recorders)
+            self.straggling_s += time.monotonic() - started
+            return fired
+        fewest = 1 if self.method else fewest_lanes(state.firings.shape[1])
+        return self._advance(method, fewest, rates, state, samples, budget, recorders)
+
+    def _advance(
+        self,
+        method: str,
+        fewest: int,
+        rates: NDArray[np.float64],
+        state: EnsembleState,
+        samples: Samples,
+        budget: int,
+        recorders: Recorders,
+    ) -> int:
+        judging, plain = recorders.requirements, recorders._replace(requirements=None)
         with np.errstate(all="ignore"):  # for kernels that run as plain Python
             if method == "lanes":
-                if logging:
+                if recorders.log.time.shape[1] > 0:
                     raise ValueError("an event log is kept by the scalar method only")
-                fewest = 1 if self.method else fewest_lanes(state.firings.shape[1])
+                self.ran_lanes = True
                 lanes = new_lanes(self.network, state, self.rows, recorders, self.lanes)
                 lanes.common_rate[:] = rates[0]
                 shared = bool((rates == rates[0]).all())

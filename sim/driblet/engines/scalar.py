@@ -5,6 +5,8 @@ A firing recomputes the propensities that depend on it and rebuilds the sums tha
 
 from __future__ import annotations
 
+from pathlib import Path
+
 import numpy as np
 from numba import njit
 
@@ -320,3 +322,11 @@ def advance_scalar(  # type: ignore[no-untyped-def]
             if counts[i] > OVERFLOW_GUARD:
                 state.reason[r] = COUNT_OVERFLOW
     return budget - left
+
+
+def needs_compiler() -> bool:
+    """Whether a first call of advance_scalar is likely to wait for the compiler."""
+    signatures = getattr(advance_scalar, "signatures", ["plain Python"])
+    if signatures or not CACHE:
+        return not signatures
+    return not any(Path(advance_scalar.stats.cache_path or ".").glob("scalar.advance_scalar-*.nbi"))
