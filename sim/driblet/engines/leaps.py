@@ -9,7 +9,7 @@ for the implicit one), solved for the end by Newton's method and rounded so that
 reactant fire one at a time (Cao, Gillespie & Petzold, J. Chem. Phys. 123:054104, 2005). A leap that would leave a count below
 zero is thrown away and halved. Steps never cross a point of the grid, an edge of a window or of a requirement's average, so that
 what is recorded there is a state, and the net firings at any moment are exact; integrals take each leap's end states in equal
-parts, as do gross firings.
+parts, as do gross firings; what fires alone does so at the end.
 """
 
 from __future__ import annotations
@@ -286,14 +286,15 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                         extent[k] = more[k] - fewer[k] + rounded(fix[k], stream, r)
                     for c in range(change_start[k], change_start[k + 1]):
                         end[U(change_species[c])] += change_amount[c] * extent[k]
-                if alone >= 0:
-                    k = pair[alone]
-                    for c in range(change_start[k], change_start[k + 1]):
-                        end[U(change_species[c])] += sense[alone] * change_amount[c]
                 fits = True
                 for i in range(N):
                     if end[i] < 0.0:
                         fits = False
+                if alone >= 0:  # what fires alone does so at the end of the leap
+                    k = pair[alone]
+                    for c in range(change_start[k], change_start[k + 1]):
+                        if end[U(change_species[c])] + sense[alone] * change_amount[c] < 0.0:
+                            fits = False
                 if not fits:
                     work[r, REJECTED] += 1.0
                     tau = 0.5 * step
@@ -349,6 +350,18 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                 if judging is not None:
                     judge_all(judging, one, columns, clock + half, False)
                 clock = mark if arrives else clock + step
+                if alone >= 0:
+                    k = pair[alone]
+                    for c in range(change_start[k], change_start[k + 1]):
+                        i = U(change_species[c])
+                        if following and slot[i] >= 0:
+                            occupy(seconds, standing, span, bin_width, r, slot[i], counts[i], clock)
+                        counts[i] += sense[alone] * change_amount[c]
+                    all_propensities(
+                        reactant, offset, factor_row, start, parent, node, less, constants, counts, scratch, w, pace
+                    )
+                    if judging is not None:
+                        judge_all(judging, one, columns, clock, False)
             if clock >= mark:
                 sample = pass_marks(samples, averages, r, sample, clock, counts, firings, running)
             if judging is not None:
