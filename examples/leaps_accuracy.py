@@ -79,7 +79,7 @@ with style():
         "chance alone", (0.98, chance), xycoords=("axes fraction", "data"), ha="right", va="bottom", fontsize=8.5
     )
     cost.axvline(exact_ms, color=COLOURS[0], linewidth=1.2)
-    cost.annotate("exact events", (exact_ms, 0.97), xycoords=("data", "axes fraction"), ha="right", va="top", rotation=90,
+    cost.annotate("exact events", (exact_ms, 0.4), xycoords=("data", "axes fraction"), ha="right", va="center", rotation=90,
                   fontsize=8.5, color=COLOURS[0], xytext=(-3, 0), textcoords="offset points")  # fmt: skip
     cost.set(xscale="log", yscale="log", xlabel="CPU time a compartment (ms)", ylabel="largest error of a mean (sd)")
     cost.set_title("labels: leap tolerance")

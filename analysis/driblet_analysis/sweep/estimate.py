@@ -8,9 +8,11 @@ from typing import NamedTuple
 
 import numpy as np
 
+from driblet.engine_choice import choose_engine, core_seconds
 from driblet.ensemble import sample_times
 from driblet.network import Network
 from driblet.system import System
+from driblet.treatments import with_treatments
 from driblet_analysis.audit import EVENTS_PER_SECOND_AND_CORE
 from driblet_analysis.course import expected_course
 
@@ -49,11 +51,11 @@ def estimate_work(system: Callable[[int], System], points: int, keep: str, colum
         one = system(number)
         replicates = one.settings.replicates
         try:
-            found = _events(one) * replicates
+            found, taken = (replicates * part for part in _work(one))
         except (ArithmeticError, ValueError, np.linalg.LinAlgError):
             continue
         events.append(found)
-        seconds.append(found / EVENTS_PER_SECOND_AND_CORE + _OVERHEAD_SECONDS)
+        seconds.append(taken + _OVERHEAD_SECONDS)
         numbers = len(one.free_species) + 2 * len(one.reactions) + len(one.readouts)
         sizes.append(8.0 * _TRAJECTORY_SHARE * replicates * len(sample_times(one.settings)) * numbers)
     if keep == "trajectories" and sizes:
@@ -73,9 +75,16 @@ def _spread(points: int) -> list[int]:
     return list(dict.fromkeys(int(f * points) for f in fractions))
 
 
-def _events(system: System) -> float:
+def _work(stated: System) -> tuple[float, float]:
+    """Events and core seconds of one compartment, enzymes treated and the engine chosen as a run will have them."""
+    system, _ = with_treatments(stated)
     network = Network.of(system)
+    choice = choose_engine(system, network, system.settings)
+    if choice.leaps:
+        part = system.settings.duration_s / choice.facts["simulated_s"]
+        return choice.facts["firings"] * part, core_seconds(choice.facts)[1] * part
     omega = system.compartment.omega
     copies = np.array([s.mean_copies(omega) for s in system.free_species])
     firings, _ = expected_course(network, copies, omega, system.settings.duration_s)
-    return float(np.sum(firings))
+    events = float(np.sum(firings))
+    return events, events / EVENTS_PER_SECOND_AND_CORE

@@ -100,7 +100,9 @@ def simulate(plan: Plan, point: Point, stop: Stop) -> Result:
                 image = path.read_bytes()
         else:
             # in memory, so that even readouts can be averaged over time at no cost in disk
-            with run(system, threads=1, key=point.key, record="trajectories", on_progress=look) as ensemble:
+            with run(
+                system, threads=1, key=point.key, record="trajectories", estimate_error=False, on_progress=look
+            ) as ensemble:
                 values = summarise(ensemble, system)
     except (KeyboardInterrupt, InterruptedRunError):
         raise
