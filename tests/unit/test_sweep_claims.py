@@ -207,8 +207,8 @@ def test_work_waits_for_a_worker_elsewhere_that_may_be_dead(tmp_path: Path, monk
     from driblet_analysis.sweep import make_plan, work, work_locally
     from tests.sweep_texts import POINTS, write_sweep
 
-    monkeypatch.setattr(claims, "BEAT_SECONDS", 0.5)
-    monkeypatch.setattr(claims, "STALE_SECONDS", 3.0)
+    monkeypatch.setattr(claims, "BEAT_SECONDS", 0.2)
+    monkeypatch.setattr(claims, "STALE_SECONDS", 8.0)
     monkeypatch.setattr(work, "_WAIT_SECONDS", 0.1)
     directory = tmp_path / "sweep"
     make_plan(write_sweep(tmp_path), directory)
