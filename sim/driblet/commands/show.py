@@ -8,7 +8,11 @@ from typing import Any
 import click
 import numpy as np
 
+from driblet.commands.engine_lines import engine_lines
 from driblet.commands.screen import console, duration, number, print_json, species_rows, table
+
+# of the provenance: told in sentences
+_SAID_ABOVE = ("treatments", "engine_pilot", "engine_why", "error_estimate")
 
 
 @click.command(short_help="Print what a run file holds.")
@@ -30,6 +34,7 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
         final = run.final_counts()
         in_the_end = species_rows(run.system, final)
         stated = [reaction.name for reaction in run.system.stated]
+        lines = engine_lines(run)
         codes, times = np.unique(run.end_reason, return_counts=True)
         facts: dict[str, Any] = {
             "file": str(run_file),
@@ -53,6 +58,8 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
             "reactions": list(run.reactions),
             "readouts": run.readout_units,
             "treatments": run.treatments,
+            "engine": run.engine,
+            "leaping": {name: float(values.mean()) for name, values in run.leaping.items()},
             "provenance": {k: v for k, v in run.provenance.items() if k != "readout_units"},
         }
     if as_json:
@@ -76,10 +83,12 @@ def show(run_file: Path, as_json: bool, system_text: bool) -> None:
     if facts["readouts"]:
         out.print("readouts: " + ", ".join(f"{k} ({v})" for k, v in facts["readouts"].items()), markup=False)
     out.print("reactions: " + ", ".join(stated), markup=False)
+    for line in lines:
+        out.print(line, markup=False)
     rows = [
         [k.replace("_", " "), f"{v:.6g}" if isinstance(v, float) else str(v)]
         for k, v in facts["provenance"].items()
-        if k != "treatments"
+        if k not in _SAID_ABOVE
     ]
     if facts["treatments"]:
         rows.append(["treatments", ", ".join(f"{name} {how}" for name, how in facts["treatments"].items())])
