@@ -13,12 +13,12 @@ from driblet.drive import emergent_affinities, is_driven, ln_constants, runnable
 from driblet.energetics.cycles import conservation_laws, cycles, dependencies
 from driblet.energetics.equilibrium import NoEquilibriumError, equilibrium_composition
 from driblet.engine_choice import AUTO, EXACT, choose_engine, core_seconds
-from driblet.ensemble import sample_times
 from driblet.errors import CannotAnswerError, InputError
 from driblet.lumping import LUMPED
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.quantities import power_unit
 from driblet.requirements import CompiledRequirements
+from driblet.run_settings import sample_times
 from driblet.shares import when_text
 from driblet.system import Reaction, System
 from driblet.system.build import stoichiometric_matrix

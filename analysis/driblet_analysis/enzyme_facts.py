@@ -9,12 +9,12 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from driblet.ensemble import sample_times
 from driblet.errors import InputError
 from driblet.loading import volumes
 from driblet.lumping import ELEMENTARY
 from driblet.network import Network
 from driblet.quantities import copies_per_molar
+from driblet.run_settings import sample_times
 from driblet.system import Species, System
 from driblet.system.mechanisms import Activity, Enzyme, measured_constants, turnover_rates
 from driblet.treatments import RAPID_EQUILIBRIUM_TOLERANCE, lumping_facts

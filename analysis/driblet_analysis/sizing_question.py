@@ -10,9 +10,9 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, NamedTuple
 
-from driblet.ensemble import sample_times
 from driblet.errors import InputError, Problem
 from driblet.quantities import Quantity, QuantityError, read_quantity
+from driblet.run_settings import sample_times
 from driblet.system import System, load
 from driblet.system.build import build
 from driblet.version import __version__

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from driblet.errors import one_problem
 from driblet.lumping import is_lumped
 from driblet.network import Network
+from driblet.run_settings import sample_times
 from driblet.system import RunSettings, System
 
 if TYPE_CHECKING:
@@ -110,7 +111,6 @@ def pilot(
     """
     from driblet.engines.contract import RUNNING, new_samples, new_state
     from driblet.engines.leaps import CRITICAL_EVENTS, EVENTS, LEAPS, REJECTED, STIFFEST
-    from driblet.ensemble import sample_times
     from driblet.loading import additions_of, prepare
     from driblet.segments import begin, segments
 

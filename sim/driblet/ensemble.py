@@ -14,7 +14,6 @@ import time
 from collections.abc import Callable, Mapping
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from dataclasses import replace
-from numbers import Integral, Real
 from pathlib import Path
 from queue import SimpleQueue
 from typing import TYPE_CHECKING, Any, NamedTuple
@@ -24,7 +23,7 @@ from numpy.typing import NDArray
 
 from driblet.engine_choice import EngineChoice, choose_engine
 from driblet.engines.choice import METHODS, choose_method
-from driblet.errors import InputError, InterruptedRunError, Problem, one_problem
+from driblet.errors import InputError, InterruptedRunError, one_problem
 from driblet.events import event_arrays
 from driblet.interrupts import noted_interrupts
 from driblet.leap_record import leap_arrays
@@ -33,17 +32,9 @@ from driblet.network import Network
 from driblet.outcomes import EVENT, LEAP, Outcomes
 from driblet.results import Run
 from driblet.run_file import FORMAT, Block, Layout
+from driblet.run_settings import DEFAULT_SAMPLES, check_arguments, sample_times
 from driblet.store import RunWriter, discard_parts
 from driblet.system import RunSettings, System
-from driblet.system.tables import (
-    ENGINES,
-    LARGEST_SEED,
-    LONGEST_TIME,
-    MOST_REPLICATES,
-    SHORTEST_TIME,
-    TOLERANCES,
-    unknown_engine,
-)
 from driblet.treatments import Choice, treatment_facts, with_treatments
 
 if TYPE_CHECKING:
@@ -52,8 +43,6 @@ if TYPE_CHECKING:
 
 _UNIT_BYTES = 8 << 20
 _POLL_SECONDS = 0.1
-DEFAULT_SAMPLES = 200
-MOST_SAMPLES = 1_000_000
 
 
 class Progress(NamedTuple):
@@ -64,50 +53,6 @@ class Progress(NamedTuple):
     replicates: int
     events: int
     seconds: float
-
-
-def sample_times(settings: RunSettings) -> NDArray[np.float64]:
-    """The recording grid in s: every `sample_every` from zero, and the end.
-
-    Raises InputError when duration is missing or the grid is too fine.
-    """
-    duration = settings.duration_s
-    if not duration > 0:
-        raise one_problem("run", "duration", 'is missing: state it, such as duration = "20 min"')
-    every = settings.sample_every_s or duration / DEFAULT_SAMPLES
-    if every > duration:
-        raise one_problem("run", "sample_every", "is longer than the run")
-    if duration / every > MOST_SAMPLES:
-        raise one_problem("run", "sample_every", f"makes more than {MOST_SAMPLES} samples; choose a longer one")
-    times: NDArray[np.float64] = np.arange(int(np.floor(duration / every * (1 + 1e-12))) + 1) * np.float64(every)
-    if duration - times[-1] > 1e-9 * duration:
-        times = np.append(times, duration)
-    times[-1] = duration
-    return times
-
-
-def _check_arguments(given: Mapping[str, object], threads: int | None) -> None:
-    """Hold what a caller gave to the rules of the system file. Raises InputError with every problem."""
-    problems = []
-    for key, low, high in (("replicates", 1, MOST_REPLICATES), ("seed", 0, LARGEST_SEED)):
-        value = given.get(key, low)
-        if isinstance(value, bool) or not isinstance(value, Integral) or not low <= int(value) <= high:
-            problems.append(Problem(key, f"{value!r} will not do: a whole number from {low} to {high} is needed"))
-    for key, argument in (("duration_s", "duration"), ("sample_every_s", "sample_every")):
-        value = given.get(key, 1.0)
-        if isinstance(value, bool) or not isinstance(value, Real) or not SHORTEST_TIME <= float(value) <= LONGEST_TIME:
-            text = f"{value!r} will not do: seconds from {SHORTEST_TIME:g} to {LONGEST_TIME:g} are needed"
-            problems.append(Problem(argument, text))
-    if given.get("engine", "exact") not in ENGINES:
-        problems.append(Problem("engine", unknown_engine(given["engine"])))
-    tolerance, (least, most) = given.get("leap_tolerance", TOLERANCES[0]), TOLERANCES
-    if isinstance(tolerance, bool) or not isinstance(tolerance, Real) or not least <= float(tolerance) <= most:
-        text = f"{tolerance!r} will not do: a number from {least:g} to {most:g} is needed"
-        problems.append(Problem("leap_tolerance", text))
-    if threads is not None and (isinstance(threads, bool) or not isinstance(threads, Integral) or threads < 1):
-        problems.append(Problem("threads", f"{threads!r} will not do: a whole number from 1 is needed"))
-    if problems:
-        raise InputError("run", problems)
 
 
 def run(
@@ -157,7 +102,7 @@ def run(
         "record": record,
     }
     given = {k: v for k, v in changes.items() if v is not None}
-    _check_arguments(given, threads)
+    check_arguments(given, threads)
     real = ("duration_s", "sample_every_s", "burn_in_s", "leap_tolerance")
     plain = {k: v if isinstance(v, str) else float(v) if k in real else int(v) for k, v in given.items()}
     settings = replace(system.settings, **plain)  # type: ignore[arg-type]

@@ -9,8 +9,8 @@ from typing import NamedTuple
 import numpy as np
 
 from driblet.engine_choice import choose_engine, core_seconds
-from driblet.ensemble import sample_times
 from driblet.network import Network
+from driblet.run_settings import sample_times
 from driblet.system import System
 from driblet.treatments import with_treatments
 from driblet_analysis.audit import EVENTS_PER_SECOND_AND_CORE

@@ -10,8 +10,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from driblet.ensemble import sample_times
 from driblet.errors import InputError, Problem
+from driblet.run_settings import sample_times
 from driblet.system import System
 from driblet.system.build import build
 from driblet.treatments import with_treatments

@@ -38,30 +38,21 @@ class Written(NamedTuple):
 
 
 class Stop:
-    """Asks a worker to stop at a clean place: what is finished is written, the point under way is given up."""
+    """Asks a worker to stop at a clean place: what is finished is written, the point under way is given up.
+
+    The first signal is only noted, and the run under way looks: an exception out of nowhere can strike while a lock is
+    released, or in a callback of HDF5's, and come out as another error, which would be taken for one of the point.
+    """
 
     def __init__(self) -> None:
         self.asked = Flag()
-        self._simulating = False
 
     def __call__(self, *_: object) -> None:
         """Signal handler, in the main thread."""
         again = self.asked.is_set()
         self.asked.set()
-        if self._simulating or again:
-            self._simulating = False
+        if again:
             raise KeyboardInterrupt
-
-    @contextmanager
-    def simulating(self) -> Iterator[None]:
-        """The stretch that may be cut short."""
-        self._simulating = True
-        try:
-            if self.asked.is_set():
-                raise KeyboardInterrupt
-            yield
-        finally:
-            self._simulating = False
 
 
 @contextmanager
@@ -84,7 +75,7 @@ def simulate(plan: Plan, point: Point, stop: Stop) -> Result:
     started = time.monotonic()
 
     def look(_: Progress) -> None:
-        if stop.asked.is_set():  # outside the main thread no signal strikes
+        if stop.asked.is_set():
             raise KeyboardInterrupt
 
     try:
@@ -107,6 +98,8 @@ def simulate(plan: Plan, point: Point, stop: Stop) -> Result:
     except (KeyboardInterrupt, InterruptedRunError):
         raise
     except Exception as error:
+        if stop.asked.is_set():
+            raise KeyboardInterrupt from error  # what a second signal can do to any code; the point may be sound
         text = " ".join(str(error).split())
         if not isinstance(error, DribletError):
             text = f"{type(error).__name__}: {text}"
@@ -202,9 +195,7 @@ class Worker:
                     read = self._write(shard, results, pending, read)
                     flushed = time.monotonic()
                 claim.at(point.number)
-                with self.stop.simulating():
-                    result = simulate(self.plan, point, self.stop)
-                pending.append(result)
+                pending.append(simulate(self.plan, point, self.stop))
         except (KeyboardInterrupt, InterruptedRunError):
             self.stop.asked.set()
         if pending:
