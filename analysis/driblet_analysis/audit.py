@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -12,24 +11,19 @@ from numpy.typing import NDArray
 from driblet.drive import emergent_affinities, is_driven, ln_constants, runnable
 from driblet.energetics.cycles import conservation_laws, cycles, dependencies
 from driblet.energetics.equilibrium import NoEquilibriumError, equilibrium_composition
-from driblet.engine_choice import AUTO, EXACT, choose_engine, core_seconds
-from driblet.errors import CannotAnswerError, InputError
-from driblet.lumping import LUMPED
+from driblet.errors import CannotAnswerError
 from driblet.network import BACKWARD, FORWARD, Network
 from driblet.quantities import power_unit
 from driblet.requirements import CompiledRequirements
-from driblet.run_settings import sample_times
 from driblet.shares import when_text
 from driblet.system import Reaction, System
 from driblet.system.build import stoichiometric_matrix
 from driblet.treatments import with_treatments
-from driblet_analysis.course import expected_course
+from driblet_analysis.audit_work import course_of, engine_facts, run_facts, treated_course
 from driblet_analysis.energy_conditions import buffer_facts, condition_warnings, magnesium_facts, sensitivity_facts
 from driblet_analysis.enzyme_facts import catalysed_rates, disagreements, enzyme_facts, lumping_rows
 from driblet_analysis.references.count_equilibrium import count_law
 
-EVENTS_PER_SECOND_AND_CORE = 3e7  # of the exact engine on a current core; for the estimate alone
-WORTH_A_PILOT = 60.0  # core seconds of exact simulation from which leaps are thought of unasked
 FEW_MOLECULES = 10
 WIDE_RANGE = 1e9
 ROUNDING = 0.01
@@ -45,13 +39,13 @@ def audit_facts(system: System) -> dict[str, Any]:
     omega = system.compartment.omega
     copies = np.array([s.mean_copies(omega) for s in system.free_species])
     rates = network.rates(np.array([omega]))[0]
-    course = _course(system, network, copies)
+    course = course_of(system, network, copies)
     equilibrium = _equilibrium(system, network)
     macroscopic = equilibrium["macroscopic"] if equilibrium else None
     there = macroscopic and _totals(system, macroscopic)
     magnesium, buffer = magnesium_facts(system, there), buffer_facts(system, there)
     enzymes, catalysed = enzyme_facts(system), catalysed_rates(system)
-    run_facts = _run_facts(system, _as_treated(system) or course)
+    work = run_facts(system, treated_course(system) or course)
     warnings = list(system.warnings)
     warnings += disagreements(enzymes)
     warnings += condition_warnings(magnesium, buffer)
@@ -102,8 +96,8 @@ def audit_facts(system: System) -> dict[str, Any]:
         "magnesium": magnesium,
         "buffer": buffer,
         "requirements": _requirements(system),
-        "run": run_facts,
-        "engine": _engine_facts(system, run_facts["estimated_core_seconds"]),
+        "run": work,
+        "engine": engine_facts(system, work["estimated_core_seconds"]),
         "warnings": warnings,
     }
 
@@ -301,77 +295,6 @@ def _equilibrium(system: System, network: Network) -> dict[str, Any] | None:
     facts["finite_count_mean"] = dict(zip(names, law.mean().tolist(), strict=True))
     facts["finite_count_sd"] = dict(zip(names, np.sqrt(np.diag(law.covariance())).tolist(), strict=True))
     return facts
-
-
-def _course(system: System, network: Network, copies: Array) -> dict[str, Any] | None:
-    """Expected firings of each channel over the run by the rate equations, None without a duration."""
-    duration = system.settings.duration_s
-    if not duration > 0:
-        return None
-    omega = system.compartment.omega
-    starts = [0.0, *(a.at_s for a in system.additions if a.at_s < duration)]
-    firings, final = np.zeros(len(network.channels)), copies
-    for k, start in enumerate(starts):
-        end = starts[k + 1] if k + 1 < len(starts) else duration
-        if k:
-            addition = system.additions[k - 1]
-            final = final + np.array(
-                [addition.mean_copies(omega) * (name == addition.species) for name in network.species]
-            )
-        if end > start:
-            more, final = expected_course(network, final, omega, end - start)
-            firings = firings + more
-    return {"firings": firings, "final": final, "duration_s": duration}
-
-
-def _as_treated(system: System) -> dict[str, Any] | None:
-    """The course with enzymes treated as the file asks, None where that is step by step."""
-    made, choices = with_treatments(system)
-    if not any(choice.taken == LUMPED for choice in choices):
-        return None
-    copies = np.array([s.mean_copies(made.compartment.omega) for s in made.free_species])
-    return _course(made, Network.of(made), copies)
-
-
-def _engine_facts(system: System, exact_seconds: float | None) -> dict[str, Any] | None:
-    """Which engine a run takes and why, by a pilot compartment; None for an exact run that is quick anyway."""
-    settings = system.settings
-    if not settings.duration_s or (settings.engine == EXACT and (exact_seconds or 0.0) < WORTH_A_PILOT):
-        return None
-    made, _ = with_treatments(system)
-    asked = settings if settings.engine != EXACT else replace(settings, engine=AUTO)
-    choice = choose_engine(made, Network.of(made), asked)
-    seconds = None
-    if choice.leaps:
-        whole = settings.replicates * settings.duration_s / choice.facts["simulated_s"]
-        seconds = core_seconds(choice.facts)[1] * whole
-    return {
-        "asked": settings.engine,
-        "taken": choice.taken if settings.engine != EXACT else EXACT,
-        "auto_takes": choice.taken,
-        "why": choice.why,
-        "tolerance": choice.tolerance,
-        "longest_leap_relaxation_times": choice.stiffness,
-        "pilot": choice.facts,
-        "estimated_core_seconds": seconds,
-    }
-
-
-def _run_facts(system: System, course: dict[str, Any] | None) -> dict[str, Any]:
-    if course is None:
-        return {"duration_s": None, "events_per_simulated_second": None, "estimated_core_seconds": None}
-    events = float(np.sum(course["firings"]))
-    try:
-        samples = len(sample_times(system.settings))
-    except InputError:
-        samples = 0
-    return {
-        "duration_s": course["duration_s"],
-        "replicates": system.settings.replicates,
-        "samples": samples,
-        "events_per_simulated_second": events / course["duration_s"],
-        "estimated_core_seconds": events * system.settings.replicates / EVENTS_PER_SECOND_AND_CORE,
-    }
 
 
 def _warnings(system: System, network: Network, copies: Array, course: dict[str, Any] | None) -> list[str]:

@@ -13,7 +13,7 @@ from driblet.network import Network
 from driblet.run_settings import sample_times
 from driblet.system import System
 from driblet.treatments import with_treatments
-from driblet_analysis.audit import EVENTS_PER_SECOND_AND_CORE
+from driblet_analysis.audit_work import EVENTS_PER_SECOND_AND_CORE
 from driblet_analysis.course import expected_course
 
 _MOST_SAMPLED = 24
