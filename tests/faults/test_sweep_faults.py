@@ -12,6 +12,7 @@ import sys
 import time
 from collections.abc import Iterator
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -136,6 +137,33 @@ def test_a_signal_stops_at_a_clean_place(signal_number: signal.Signals, workers:
     assert (status.done, status.failed, status.left) == (4, 0, 4)
     assert status.workers == 0
     assert status.suspects == []
+
+
+def test_a_stop_is_never_taken_for_an_error_of_the_point(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """An impatient user's second signal strikes anywhere, such as between the two halves of giving up a lock."""
+    from driblet_analysis.sweep import work
+
+    plain = work.run
+    calls = []
+
+    def struck(*arguments: Any, **options: Any) -> Any:
+        calls.append(1)
+        if len(calls) < 3:
+            return plain(*arguments, **options)
+        try:
+            signal.raise_signal(signal.SIGINT)
+            signal.raise_signal(signal.SIGINT)
+        except KeyboardInterrupt:
+            raise RuntimeError("release unlocked lock") from None
+        raise AssertionError("the second signal strikes")
+
+    make_plan(write_sweep(tmp_path), tmp_path / "sweep")
+    monkeypatch.setattr(work, "run", struck)
+    with work.stopping_on_signals() as stop:
+        outcome = work_locally(tmp_path / "sweep", workers=1, stop=stop)
+    assert (outcome.written, outcome.failed, outcome.stopped) == (2, 0, True)
+    status = read_status(tmp_path / "sweep")
+    assert (status.done, status.failed, status.left) == (2, 0, POINTS - 2)
 
 
 def _deep_in(directory: Path) -> bool:
