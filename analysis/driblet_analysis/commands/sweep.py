@@ -268,7 +268,8 @@ def status(directory: Path, as_json: bool) -> None:
     if found.left:
         left = facts["core_seconds_left"]
         cost = f"about {duration(left)} of one core are left; " if left else ""
-        out.print(f"{cost}{found.workers} shards in work ({found.at_work} points)", markup=False)
+        now = f"{found.workers} shards in work ({found.at_work} points)" if found.workers else "no worker is on them"
+        out.print(f"{cost}{now}", markup=False)
     if found.silent:
         out.print(
             f"no sign of life for a while from the workers of {found.silent} points; they are given up soon",
