@@ -159,7 +159,7 @@ def unknown_engine(value: object) -> str:
     return f'"{value}" is not an engine: "exact", "leap" or "auto" is'
 
 
-def leap_tolerance(value: object) -> float:
+def read_tolerance(value: object) -> float:
     """A tolerance of leaps. Raises ValueError."""
     low, high = TOLERANCES
     if isinstance(value, bool) or not isinstance(value, int | float) or not low <= value <= high:
@@ -300,7 +300,7 @@ class RunTable(Table):
     loading: Loading = "nearest"
     seed: Annotated[int, BeforeValidator(_whole(0, LARGEST_SEED))] = 0
     treatment: Annotated[str, BeforeValidator(_one_of(TREATMENTS))] | None = None
-    leap_tolerance: Annotated[float, BeforeValidator(leap_tolerance)] = 0.01
+    leap_tolerance: Annotated[float, BeforeValidator(read_tolerance)] = 0.01
 
 
 SECTIONS = (
