@@ -34,19 +34,29 @@ FEWEST_FIRINGS = 10  # of each direction, for a standard error that means someth
 class Firings:
     """Firings and integrated propensities of each channel, summed over replicates.
 
-    Attributes: fired : shape=(channels,); expected : shape=(channels,), under the energies tested; replicates.
+    Attributes: fired : shape=(channels,); expected : shape=(channels,), under the energies tested; replicates; excess :
+    shape=(channels,), by how much the variance of firings less expectation is more than the expectation; 1 for events.
     """
 
     fired: Array
     expected: Array
     replicates: int
+    excess: Array
 
 
-def sum_firings(fired: NDArray[np.int64], monomial_time: Array, rates: Array) -> Firings:
-    """Sum over replicates. fired, rates, monomial_time : shape=(replicates, channels); rates as Network.rates."""
-    return Firings(
-        fired.sum(axis=0).astype(float), (rates[:, : fired.shape[1]] * monomial_time).sum(axis=0), len(fired)
-    )
+def sum_firings(fired: NDArray[np.int64], monomial_time: Array, rates: Array, leaps: bool = False) -> Firings:
+    """Sum over replicates. fired, rates, monomial_time : shape=(replicates, channels); rates as Network.rates.
+
+    leaps : the firings are those of leaps, whose variance is not their expectation (turnovers of an enzyme come in bursts,
+    integrals are those of end states): it is taken from the spread between replicates where that is more.
+    """
+    expected = rates[:, : fired.shape[1]] * monomial_time
+    mean = expected.mean(axis=0)
+    excess = np.ones(fired.shape[1])
+    if leaps and len(fired) > 1:
+        spread = (fired - expected).var(axis=0, ddof=1)
+        excess = np.maximum(1.0, spread / np.where(mean > 0, mean, np.inf))
+    return Firings(fired.sum(axis=0).astype(float), expected.sum(axis=0), len(fired), excess)
 
 
 def kinetic_tests(system: System, network: Network, firings: Firings) -> list[CheckRow]:
@@ -59,7 +69,7 @@ def kinetic_tests(system: System, network: Network, firings: Firings) -> list[Ch
             if fired > 0:
                 rows.append(CheckRow(f"{reaction.name}: firings", "it cannot fire", math.inf, 0.0, firings.replicates))
             continue
-        z = (fired - expected) / math.sqrt(expected)
+        z = (fired - expected) / math.sqrt(float((firings.expected[channels] * firings.excess[channels]).sum()))
         p = float(normal_p(np.array([z]))[0]) if expected >= FEWEST_FIRINGS else _poisson_p(fired, expected)
         hypothesis = "firings number the time integral of the propensities"
         rows.append(CheckRow(f"{reaction.name}: firings", hypothesis, z, p, firings.replicates))
@@ -98,7 +108,7 @@ def measured_energies(system: System, network: Network, firings: Firings) -> Ene
             continue
         X_plus, X_minus = firings.expected[forward[r]], firings.expected[backward[r]]
         shift[k] = -RT * math.log((F / X_plus) / (B / X_minus))
-        error[k] = RT * math.sqrt(1.0 / F + 1.0 / B)
+        error[k] = RT * math.sqrt(firings.excess[forward[r]] / F + firings.excess[backward[r]] / B)
     reactions = [system.reactions[r] for r in index]
     stoichiometry = stoichiometric_matrix([s.name for s in system.species], reactions)
     closed, closed_error = closed_estimates(cycles(stoichiometry).astype(float), shift, error)

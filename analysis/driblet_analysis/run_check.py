@@ -60,11 +60,17 @@ def check_run(run: Run, against: System | None = None) -> CheckResult:
         )
     network = Network.of(system)
     omega = run.volume_L * system.compartment.omega / system.compartment.volume_L
-    firings = sum_firings(sums.window_firings[:, -1], sums.monomial_time.sum(axis=1), network.rates(omega))
+    leaps = run.engine == "leap"
+    monomial_time = sums.monomial_time.sum(axis=1)
+    firings = sum_firings(sums.window_firings[:, -1], monomial_time, network.rates(omega), leaps)
     kinetic = kinetic_tests(system, network, firings)
     energies = measured_energies(system, network, firings)
     tests = [*kinetic, *energies.tests]
     notes = [f"{name} never fired: nothing can be said of it" for name in never_fired(system, network, firings)]
+    if leaps:
+        notes.append(
+            "the run leaped: gross firings and integrals are estimates, their variance that between compartments"
+        )
     ratios: tuple[RatioRow, ...] = ()
     window = None
     law_missing = _drive(system)
