@@ -15,7 +15,7 @@ from scipy import stats
 import driblet
 from driblet.errors import CannotAnswerError
 from driblet.network import Network
-from driblet_analysis.references.count_equilibrium import count_law, enumerate_class, log_weights
+from driblet_analysis.references.count_equilibrium import CountLaw, count_law, enumerate_class, log_weights
 from driblet_analysis.references.master_equation import MasterEquation
 from tests.physics.support import FALSE_ALARM, chi_square, counts_at, squares_for_falling_factorials, system
 
@@ -277,3 +277,14 @@ def test_long_false_alarm_rate(make: Callable[..., driblet.System]) -> None:
     rejected = sum(chi_square(end_states(one, 20.0, 500, seed), *exact(one)) < 0.05 for seed in range(300))
     low, high = stats.binom.ppf([1e-3, 1 - 1e-3], 300, 0.05)
     assert low <= rejected <= high
+
+
+def test_a_count_that_cannot_change_has_variance_zero_to_the_last_bit() -> None:
+    """A catalyst beside others: tests over compartments leave out what cannot vary, and rounding must not bring it back."""
+    rng = np.random.default_rng(2)
+    states = np.column_stack([np.arange(300), np.full(300, 7), np.arange(300)[::-1]])
+    for _ in range(20):
+        p = rng.random(300)
+        law = CountLaw(states, p / p.sum())
+        assert law.mean()[1] == 7.0
+        assert (law.covariance()[1] == 0.0).all()

@@ -55,7 +55,8 @@ class CountLaw:
 
     @cached_property
     def _mean(self) -> Array:
-        return self.expect(self.states)
+        # from one of the states, so that a count that cannot change has it for its mean to the last bit, and variance zero
+        return self.states[0] + self.expect(self.states - self.states[0])
 
     def mean(self) -> Array:
         """Mean counts, shape=(species,)."""
