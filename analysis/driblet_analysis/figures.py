@@ -178,7 +178,8 @@ def _overview(run: Run) -> Figure:
 def _trajectories(ax: Axes, time: Array, values: Array, label: str, colour: str, legend: bool) -> None:
     finite = np.where(np.isfinite(values), values, np.nan)
     with np.errstate(all="ignore"), _quiet():
-        low, middle, high = np.nanquantile(finite, (0.05, 0.5, 0.95), axis=0)
+        quantile = np.nanquantile if np.isnan(finite).any() else np.quantile  # the first is far slower
+        low, middle, high = quantile(finite, (0.05, 0.5, 0.95), axis=0)
     ax.fill_between(time, low, high, color=colour, alpha=0.22, linewidth=0, label="90 % of compartments")
     ax.plot(time, finite[0], color=colour, linewidth=0.7, alpha=0.75, label="one compartment")
     ax.plot(time, middle, color=colour, linewidth=2.0, label="median")
