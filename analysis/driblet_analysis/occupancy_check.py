@@ -32,6 +32,7 @@ DRIFT_LEVEL = 0.01  # of the test that calls a run not yet stationary
 _RELAXATION_MARGIN = 1.5  # small compartments relax at their own pace, not quite that of the rate equations
 _MOVE_BUDGET = 30_000_000  # Metropolis moves over all replicates: a few seconds
 _SAMPLES = (40, 2000)
+_SHARED_SAMPLES = 100  # for each of many replicates of one class
 Array = NDArray[np.float64]
 
 
@@ -98,22 +99,24 @@ def _sampled(system: System, initial: NDArray[np.int64], omega: Array, seed: int
 
     wanted = MOVES_A_STATE * max(1, int(active.sum())) / (1.0 - BURN_SHARE)
     moves = _MOVE_BUDGET // len(classes)
-    samples = int(np.clip(moves / wanted, *_SAMPLES))
-    moves = int(min(moves, wanted * samples))
 
     def draw(item: tuple[int, tuple[float, ...]]) -> NDArray[np.int64]:
         k, key = item
-        counts, w = np.array(key[:-1]), key[-1]
+        counts, w, replicates = np.array(key[:-1]), key[-1], len(classes[key])
         present = frozenset(name for name, n in zip(network.species, counts, strict=True) if n > 0)
         ln_c, _ = equilibrium_weights(system, present)
-        return metropolis(network, counts, ln_c + math.log(w), active, samples, seed + k, moves).states
+        most = max(_SHARED_SAMPLES, _SAMPLES[1] // replicates)
+        samples = replicates * int(np.clip(moves / wanted / replicates, _SAMPLES[0], most))
+        made = int(min(moves, wanted * samples))
+        return metropolis(network, counts, ln_c + math.log(w), active, samples, seed + k, made).states
 
     with ThreadPoolExecutor() as pool:
         drawn = list(pool.map(draw, enumerate(classes)))
     out: list[NDArray[np.int64]] = [drawn[0]] * len(initial)
     for states, rows in zip(drawn, classes.values(), strict=True):
-        for row in rows:
-            out[row] = states
+        for k, row in enumerate(rows):
+            # each its own: an error of sampling that all had in common would be taken for one of the run
+            out[row] = states[k :: len(rows)]
     return tuple(out)
 
 

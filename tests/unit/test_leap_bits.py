@@ -6,6 +6,7 @@ import hashlib
 import os
 import subprocess
 import sys
+from collections.abc import Iterator
 from pathlib import Path
 
 import numpy as np
@@ -14,10 +15,18 @@ import pytest
 import driblet
 from driblet import ensemble, packs
 from tests.texts import MIXED, changed
-from tests.unit.leap_cases import leap, lumped
+from tests.unit.leap_cases import leap, leaps_that_need_not_pay, lumped
 from tests.unit.test_lumped_kernels import TEXT
 
 TIMES = np.array([0.0, 0.4, 1.0, 2.0])
+
+
+@pytest.fixture(autouse=True)
+def _leaps() -> Iterator[None]:
+    with leaps_that_need_not_pay():
+        yield
+
+
 FEW = TEXT.replace("CV", "0.2").replace("2 aL", "0.2 aL")  # some 500 copies: leaps and exact events
 LOADED = changed(
     MIXED,
