@@ -217,7 +217,9 @@ def _write_rows(dataset: h5py.Dataset, arrays: Sequence[NDArray[Any]], row: int)
         size += array.nbytes
         if size > WRITE_BYTES or k == len(arrays) - 1:
             part = arrays[first] if first == k else np.concatenate(arrays[first : k + 1])
-            if part.size:
+            if part.size and part.dtype == object and len(part) == 1:
+                dataset[row] = part[0]  # events of one replicate, which a slice of one row would take for a matrix
+            elif part.size:
                 dataset[row : row + len(part)] = part
             row, first, size = row + len(part), k + 1, 0
 
