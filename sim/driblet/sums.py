@@ -96,7 +96,7 @@ class SumsPlan:
             row,
             kept,
             histograms,
-            _bin_widths(system, network),
+            _bin_widths(system, network) if kept else np.ones(n, dtype=np.int64),
             (begin, duration_s),
             len(network.channels),
             n,

@@ -78,29 +78,33 @@ def conservation_laws(stoichiometry: NDArray[np.int64]) -> Vector:
 
     stoichiometry : int64, shape=(species, reactions). Returns int64, shape=(laws, species).
     """
-    laws = [law if law.sum() >= 0 else -law for law in dependencies(stoichiometry)]
+    basis = dependencies(stoichiometry)
+    laws = np.where(basis.sum(axis=1)[:, None] >= 0, basis, -basis).reshape(len(basis), stoichiometry.shape[0])
     for _ in range(len(laws)):
-        for k, law in enumerate(laws):
-            if (law < 0).any():
-                laws[k] = _lift(law, [other for j, other in enumerate(laws) if j != k])
-    return np.vstack([np.zeros((0, stoichiometry.shape[0]), dtype=np.int64), *laws])
+        before = laws.copy()
+        for k in np.flatnonzero((laws < 0).any(axis=1)):
+            laws[k] = _lift(laws[k], np.delete(laws, k, axis=0))
+        if (laws == before).all():
+            break
+    return laws
 
 
-def _lift(law: Vector, others: list[Vector]) -> Vector:
-    """`law` plus whatever multiples of other laws rid it of negative weights, if any of them does."""
-    candidates = [law, -law]
+def _lift(law: Vector, others: Vector) -> Vector:
+    """`law` plus whatever multiple of another law, a row of `others`, rids it of negative weights, if any does."""
+    candidates = [law[None], -law[None]]
+    positive = others[(others >= 0).all(axis=1)]
     for sign in (law, -law):
-        for other in others:
-            if (other < 0).any():
-                continue
-            negative = sign < 0
-            if not (other[negative] > 0).all():
-                continue
-            times = int(np.max(-(sign[negative] // other[negative]))) if negative.any() else 0
-            candidates.append(sign + times * other)
-    best = min(candidates, key=lambda v: (int((v < 0).sum()), int(np.abs(v).sum())))
+        negative = sign < 0
+        fitting = positive[(positive[:, negative] > 0).all(axis=1)]
+        if not negative.any():
+            candidates.append(np.repeat(sign[None], len(fitting), axis=0))
+        elif len(fitting):
+            times = np.max(-(sign[negative] // fitting[:, negative]), axis=1)
+            candidates.append(sign + times[:, None] * fitting)
+    rows = np.vstack(candidates)
+    best = rows[np.lexsort((np.abs(rows).sum(axis=1), (rows < 0).sum(axis=1)))[0]]
     divisor = gcd(*(int(v) for v in best)) or 1
-    return best // divisor
+    return np.asarray(best // divisor)
 
 
 @dataclass(frozen=True)
