@@ -148,6 +148,7 @@ def compare(
             key=key,
             treatment=way.treatment if system.enzymes else None,
             engine=way.engine,
+            leap_anyway=True,
             record="trajectories",
             statistics=False,
             estimate_error=False,

@@ -82,8 +82,10 @@ def leap_rates(network: Network, table: TurnoverTable, omega: NDArray[np.float64
     return np.ascontiguousarray(np.hstack([network.rates(omega), table.coefficients(omega)]))
 
 
-def choose_engine(system: System, network: Network, settings: RunSettings, key: int = 0) -> EngineChoice:
-    """The engine for `settings`. `system` is as it is simulated, enzymes lumped or not.
+def choose_engine(
+    system: System, network: Network, settings: RunSettings, key: int = 0, anyway: bool = False
+) -> EngineChoice:
+    """The engine for `settings`. `system` is as it is simulated, enzymes lumped or not; anyway : "leap" leaps whatever it costs.
 
     Raises InputError where leaps are asked for and cannot do what else is asked.
     """
@@ -99,6 +101,8 @@ def choose_engine(system: System, network: Network, settings: RunSettings, key: 
         return EngineChoice(asked, EXACT, "exact: nothing can react", tolerance, stiffness, {})
     facts = pilot(system, network, settings, tolerance, stiffness, key)
     why, pays = _judged(facts, asked, system)
+    if anyway and asked == LEAP and not pays:
+        why, pays = f"leaps, asked for whatever they cost ({why})", True
     return EngineChoice(asked, LEAP if pays else EXACT, why, tolerance, stiffness, facts)
 
 

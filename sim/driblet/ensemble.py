@@ -65,6 +65,7 @@ def run(
     seed: int | None = None,
     engine: str | None = None,
     leap_tolerance: float | None = None,
+    leap_anyway: bool = False,
     burn_in: float | None = None,
     record: str | None = None,
     threads: int | None = None,
@@ -82,7 +83,8 @@ def run(
 
     duration, sample_every : s. What is not given is taken from the system's [run]. key : sets the random streams of the
     points of a sweep apart, 0 to 2^63 - 1. engine : "exact", "leap" or "auto"; leap_tolerance : the share by which a
-    reaction's gross rate may be expected to change in one leap. method : "lanes" or "scalar", which kernel of the exact
+    reaction's gross rate may be expected to change in one leap; leap_anyway : "leap" leaps even where exact events cost less,
+    for comparisons. method : "lanes" or "scalar", which kernel of the exact
     engine runs; left out, the faster one; the bits are the same. treatment : "elementary", "lumped" or "auto", of all enzymes
     or of some by name, before what the file says. statistics : whether the time integrals that `check` needs are gathered,
     which adds a third to the time and more. estimate_error : whether an approximate run states how far its means may be off
@@ -113,7 +115,7 @@ def run(
     stated = system
     system, choices = with_treatments(system, treatment, float(sample_times(settings)[1]), settings.engine)
     network = Network.of(system)
-    choice = choose_engine(system, network, settings, key)
+    choice = choose_engine(system, network, settings, key, leap_anyway)
     if not statistics and settings.record == "summary":
         raise one_problem("run", "statistics", 'record = "summary" keeps nothing else: leave one of the two')
     facts = _facts(settings, key, statistics, stop_when_decided, choices, choice)
