@@ -184,7 +184,10 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                 longest = stiffness if K <= MOST_SOLVED else EXPLICIT_BELOW
                 if fastest > 0.0:
                     tau = min(tau, longest / fastest)
-                leaping = min(tau, mark - clock) * total >= PAYS
+                reach = min(tau, mark - clock)
+                if a0 > 0.0:
+                    reach = min(reach, 1.0 / a0)  # a leap ends where a critical channel fires
+                leaping = reach * total >= PAYS
                 if not leaping:
                     burst = BURST
             if not leaping:
