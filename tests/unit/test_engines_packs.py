@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 import driblet
+from driblet import sums
 from driblet.engines.choice import LANES
 from driblet.packs import Pack, next_pack
 from driblet.run_file import Layout
@@ -105,3 +106,17 @@ def test_histograms_of_samples_and_of_every_event_agree() -> None:
         means.append((bins.mean(axis=0), bins.std(axis=0) / 20.0))
     (one, error), (other, _) = means
     assert (np.abs(one - other) <= 5 * error + 1e-9).all()
+
+
+def test_a_large_network_goes_without_its_conserved_sums(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Their place in the widths of bins is taken by the largest load; nothing else changes."""
+    system = driblet.loads(MIXED)
+    small = driblet.run(system, replicates=4)
+    monkeypatch.setattr(sums, "MOST_WITH_LAWS", 0)
+    monkeypatch.setattr(sums, "conservation_laws", None)
+    large = driblet.run(system, replicates=4)
+    np.testing.assert_array_equal(large.counts, small.counts)
+    assert small.sums is not None
+    assert large.sums is not None
+    np.testing.assert_array_equal(large.sums.monomial_time, small.sums.monomial_time)
+    assert len(set(large.sums.bin_width.tolist())) == 1
