@@ -206,7 +206,7 @@ CATALYSED
 engine = "leap"
 record = "RECORD"
 replicates = 60
-seed = 2
+seed = 3
 duration = "90 s"
 sample_every = "1 s"
 """

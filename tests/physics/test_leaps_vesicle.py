@@ -89,7 +89,7 @@ def test_twin_turnovers_taken_for_independent(monkeypatch: pytest.MonkeyPatch) -
 
 FEW_LIGANDS = (
     HEAD
-    + """S = "12 copies"
+    + """S = "8 copies"
 P = "0 copies"
 X = "50000 copies"
 Y = "50000 copies"
@@ -111,9 +111,9 @@ KM = { S = "1 M" }
 
 
 def test_twin_denominators_at_the_state_of_each_channel(monkeypatch: pytest.MonkeyPatch) -> None:
-    """A dozen ligands with a K_M of one copy, beside many molecules that leap."""
+    """Eight ligands with a K_M of one copy, beside many molecules that leap."""
     system = lumped(FEW_LIGANDS)
-    right = compared(system, (EXACT, LEAPS), 2000, 4.0)
+    right = compared(system, (EXACT, LEAPS), 4000, 4.0)
     assert right.verdict == "consistent", right.reason
     made = engine_choice.leap_engine
 
@@ -124,7 +124,7 @@ def test_twin_denominators_at_the_state_of_each_channel(monkeypatch: pytest.Monk
 
     monkeypatch.setattr(engine_choice, "leap_engine", own_state)
     monkeypatch.setattr("driblet.packs.leap_engine", own_state)
-    wrong = compared(system, (EXACT, LEAPS), 2000, 4.0)
+    wrong = compared(system, (EXACT, LEAPS), 4000, 4.0)
     assert wrong.verdict == "inconsistent"
 
 

@@ -122,3 +122,20 @@ def test_a_reaction_without_a_reverse_never_runs_backwards_and_keeps_its_spread(
     mean = 1e5 * 1e-4 * -np.expm1(-4.0004) / 1.0001
     assert abs(fired.mean() - mean) < 3.3 * np.sqrt(mean / n)
     assert abs(fired.var() / mean - 1) < 3.3 * np.sqrt((2 + 1 / mean) / n)
+
+
+def test_a_rare_reaction_both_ways_keeps_its_gross_firings_and_its_spread() -> None:
+    """Beside fast decays of both its sides: Poisson both ways, 8,000 replicates, four z scores at 1e-3 / 4 each."""
+    text = HEAD + (
+        'A = "100000 copies"\nC = "100000 copies"\n[reactions]\n'
+        'fast = { equation = "A -> nothing", one_way = "of this test", forward = "1 /s" }\n'
+        'other = { equation = "C -> nothing", one_way = "of this test", forward = "1 /s" }\n'
+        'rare = { equation = "A <=> C", K = 1, forward = "1e-4 /s" }\n'
+    )
+    n = 8000
+    fired = leap(driblet.loads(text), np.array([0.0, 4.0]), n, tolerance=0.3).samples.firings[:, -1, 2:].astype(float)
+    mean = -10.0 * np.expm1(-4.0)
+    net = fired[:, 0] - fired[:, 1]
+    z = [*((fired.mean(axis=0) - mean) / np.sqrt(mean / n)), net.mean() / np.sqrt(2 * mean / n)]
+    z.append((net.var() / (2 * mean) - 1) / np.sqrt((2 + 1 / mean) / n))
+    assert np.abs(z).max() < 3.7

@@ -28,7 +28,7 @@ from driblet.engines.contract import (
 )
 from driblet.engines.draws import rounded
 from driblet.engines.judging import all_decided, judge_all
-from driblet.engines.leap_draws import draw_independent, draw_turnovers, one_way
+from driblet.engines.leap_draws import SOME, draw_independent, draw_turnovers, one_way
 from driblet.engines.leap_steps import (
     EXPLICIT_BELOW,
     FEW,
@@ -281,10 +281,26 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                 for i in range(N):
                     end[i] = counts[i]
                 for k in range(K):
+                    drawn[k] = 0  # from here on: whether both directions are what they will be
                     if backward[k] < 0:
                         extent[k] = one_way(more[k], there[k], fix[k], stream, r)
                     elif forward[k] < 0:
                         extent[k] = -one_way(fewer[k], back[k], -fix[k], stream, r)
+                    elif (
+                        there[k] < SOME and back[k] < SOME
+                    ):  # each direction for itself, so that neither ends below zero
+                        drawn[k] = 1
+                        f, b = forward[k], backward[k]
+                        up = 0.0 if critical[f] else 0.5 * (end_w[f] * step - there[k])
+                        down = 0.0 if critical[b] else 0.5 * (end_w[b] * step - back[k])
+                        left_over = fix[k] - (up - down)  # of what was solved by iteration
+                        if not critical[f]:
+                            up += left_over
+                        elif not critical[b]:
+                            down -= left_over
+                        more[k] = one_way(more[k], there[k], up, stream, r)
+                        fewer[k] = one_way(fewer[k], back[k], down, stream, r)
+                        extent[k] = more[k] - fewer[k]
                     else:
                         extent[k] = more[k] - fewer[k] + rounded(fix[k], stream, r)
                     for c in range(change_start[k], change_start[k + 1]):
@@ -319,6 +335,8 @@ def advance_leaps(  # type: ignore[no-untyped-def]
                         forth, back_k = extent[k], 0.0
                     elif f < 0:
                         forth, back_k = 0.0, -extent[k]
+                    elif drawn[k]:
+                        pass
                     elif there[k] + end_w[f] * step > back[k] + end_w[b] * step:
                         if not critical[b]:
                             back_k += rounded(0.5 * (end_w[b] * step - back[k]), stream, r)
