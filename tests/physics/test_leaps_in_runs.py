@@ -14,7 +14,7 @@ from scipy import stats
 import driblet
 from driblet.commands.main import main
 from driblet.engine_choice import LONGEST_LEAP_IN_TIME
-from driblet.outcomes import LOOKED_AT
+from driblet.outcomes import LOOKED_AT, Outcomes
 from driblet.shares import shares
 from driblet.statistics import holm
 from driblet_analysis.compare import FALSE_ALARM_RATE, differences, quantities
@@ -132,6 +132,51 @@ def test_held_species_sizes_loads_and_readouts() -> None:
     np.testing.assert_array_equal(same.volume_L, exact.volume_L[:20])
     np.testing.assert_array_equal(same.counts[:, 0], exact.counts[:20, 0])
     assert not (same.counts[:, -1] == exact.counts[:20, -1]).all()
+
+
+ASKED = """
+[requirements.steady]
+must = "A > 3.6 * B"
+when = "throughout"
+averaged_over = "0.4 s"
+during = ["0.5 s", "4 s"]
+share = 0.5
+[requirements.level]
+must = "C > 3500"
+when = "on average"
+share = 0.5
+[requirements.once]
+must = "C > 5000"
+when = "once"
+share = 0.5
+[requirements.last]
+must = "C > 5200"
+when = "at end"
+share = 0.5
+"""
+
+
+def test_shares_and_times_of_requirements_of_every_kind() -> None:
+    """400 compartments each: shares by Fisher's exact test, times by Welch's t, Holm at 5 % over all. Twin: two requirements
+    exchanged."""
+    system = driblet.loads(LOADED.replace("[run]", ASKED + "[run]"))
+    exact = driblet.run(system, replicates=400, engine="exact", seed=5).outcomes
+    other = leaped(system, 400, seed=5, key=1).outcomes
+
+    def smallest_p(first: Outcomes, second: Outcomes, columns: list[int]) -> float:
+        p = []
+        for q, c in enumerate(columns):
+            table = [[int((o.met[:, k] == v).sum()) for v in (0, 1)] for o, k in ((first, q), (second, c))]
+            p.append(float(stats.fisher_exact(table).pvalue))
+            a, b = first.time_met_s[:, q], second.time_met_s[:, c]
+            if a.std() + b.std() > 0:
+                p.append(float(stats.ttest_ind(a, b, equal_var=False).pvalue))
+        return float(holm(np.array(p)).min())
+
+    shares_met = (exact.met == 1).mean(axis=0)
+    assert ((shares_met > 0.1) & (shares_met < 0.98)).sum() >= 3
+    assert smallest_p(exact, other, [0, 1, 2, 3]) > FALSE_ALARM_RATE
+    assert smallest_p(exact, other, [3, 1, 2, 0]) < FALSE_ALARM_RATE
 
 
 ADDED = """
