@@ -129,3 +129,50 @@ def test_an_interrupted_run_resumes_to_the_same_bits(tmp_path: Path, monkeypatch
     assert resumed.complete
     np.testing.assert_array_equal(resumed.counts, wanted.counts)
     np.testing.assert_array_equal(resumed.firings_backward, wanted.firings_backward)
+
+
+WORKER = """\
+import sys
+import driblet
+from driblet import ensemble, packs, store
+from tests.unit.leap_cases import leaps_that_need_not_pay
+store._FLUSH_SECONDS, ensemble._UNIT_BYTES, packs._BUDGET = 0.0, 1, 2000
+
+def told(progress):
+    if progress.finished >= 5:
+        print("some", flush=True)
+
+with leaps_that_need_not_pay():
+    driblet.run(driblet.loads(sys.stdin.read()), sys.argv[1], resume=True, threads=1, on_progress=told)
+"""
+
+
+@pytest.mark.skipif(os.name != "posix", reason="kills a process")
+def test_a_killed_run_resumes_to_the_same_bits(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(ensemble, "_UNIT_BYTES", 1)  # as in the worker
+    top, path = Path(__file__).parents[2], tmp_path / "run.h5"
+    text = changed(LOADED, ("replicates = 30", "replicates = 40"), ('duration = "4 s"', 'duration = "30 s"'))
+    process = subprocess.Popen(
+        [sys.executable, "-c", WORKER, str(path)],
+        env={**os.environ, "PYTHONPATH": os.pathsep.join([str(top), *sys.path])},
+        stdin=subprocess.PIPE,
+        stdout=subprocess.PIPE,
+        text=True,
+    )
+    assert process.stdin is not None
+    assert process.stdout is not None
+    process.stdin.write(text)
+    process.stdin.close()
+    assert process.stdout.readline() == "some\n"
+    process.kill()
+    assert process.wait() == -9
+    assert not path.exists()
+    with driblet.Run(path) as run:
+        rows, counts = run.replicate, run.counts
+        assert 5 <= len(rows) < 40
+    resumed = driblet.run(driblet.loads(text), path, resume=True)
+    assert resumed.complete
+    np.testing.assert_array_equal(resumed.counts[rows], counts)
+    undisturbed = driblet.run(driblet.loads(text))
+    np.testing.assert_array_equal(resumed.counts, undisturbed.counts)
+    np.testing.assert_array_equal(resumed.firings_forward, undisturbed.firings_forward)
