@@ -20,11 +20,17 @@ from driblet.statistics import holm
 from driblet_analysis.compare import FALSE_ALARM_RATE, differences, quantities
 from tests.physics.support import FALSE_ALARM
 from tests.physics.test_lifetimes import DEATH, last_copy_law, text
+from tests.texts import changed
 from tests.unit.leap_cases import leaps_that_need_not_pay, lumped
 from tests.unit.test_leap_bits import LOADED
 from tests.unit.test_lumped_kernels import TEXT
 
 COPIES = 5000
+# an eighth of the volume and of the molecules
+EIGHTH = changed(
+    LOADED, ('"2 um"', '"1 um"'), ('"20000 copies"', '"2500 copies"'), ('"9000 copies"', '"1100 copies"'),
+    ('"5000 copies"', '"600 copies"'),
+)  # fmt: skip
 
 
 def leaped(system: driblet.System, replicates: int, **how: object) -> driblet.Run:
@@ -124,8 +130,8 @@ def against_exact(system: driblet.System, replicates: int, **how: object) -> tup
 
 def test_held_species_sizes_loads_and_readouts() -> None:
     """Every kind of channel, a held species, vesicles of random size and load: the loads are those of the exact engine."""
-    system = driblet.loads(LOADED)
-    p, exact, other = against_exact(system, 300, seed=3, leap_tolerance=0.03)
+    system = driblet.loads(EIGHTH)
+    p, exact, other = against_exact(system, 150, seed=3, leap_tolerance=0.03)
     assert p > FALSE_ALARM_RATE
     assert (exact.volume_L != other.volume_L).any()  # another key, other compartments
     same = leaped(system, 20, seed=3)
@@ -142,26 +148,26 @@ averaged_over = "0.4 s"
 during = ["0.5 s", "4 s"]
 share = 0.5
 [requirements.level]
-must = "C > 3500"
+must = "C > 400"
 when = "on average"
 share = 0.5
 [requirements.once]
-must = "C > 5000"
+must = "C > 620"
 when = "once"
 share = 0.5
 [requirements.last]
-must = "C > 5200"
+must = "C > 650"
 when = "at end"
 share = 0.5
 """
 
 
 def test_shares_and_times_of_requirements_of_every_kind() -> None:
-    """400 compartments each: shares by Fisher's exact test, times by Welch's t, Holm at 5 % over all. Twin: two requirements
+    """200 compartments each: shares by Fisher's exact test, times by Welch's t, Holm at 5 % over all. Twin: two requirements
     exchanged."""
-    system = driblet.loads(LOADED.replace("[run]", ASKED + "[run]"))
-    exact = driblet.run(system, replicates=400, engine="exact", seed=5).outcomes
-    other = leaped(system, 400, seed=5, key=1).outcomes
+    system = driblet.loads(EIGHTH.replace("[run]", ASKED + "[run]"))
+    exact = driblet.run(system, replicates=200, engine="exact", seed=5).outcomes
+    other = leaped(system, 200, seed=5, key=1).outcomes
 
     def smallest_p(first: Outcomes, second: Outcomes, columns: list[int]) -> float:
         p = []
