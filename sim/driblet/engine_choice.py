@@ -141,15 +141,17 @@ def pilot(
         "stiffest": float(work[0, STIFFEST]),
         "pairs": float(len(engine.pairs.forward)),
         "channels": float(len(network.channels)),
+        "channels_with_factors": float(len(network.factored)),
     }
 
 
 def core_seconds(facts: dict[str, float]) -> tuple[float, float]:
     """About what the pilot's stretch takes a core by exact events in lanes, and by leaps, s. Measured once
     (tests/benchmarks/leaps.py); only the ratio decides anything."""
-    channels = facts["channels"]
-    event_in_lanes, event_alone = min(4.0 + 0.5 * channels, 100.0), 60.0 + 4.0 * channels
-    one_leap = 1500.0 + 300.0 * channels
+    channels, factored = facts["channels"], facts["channels_with_factors"]
+    event_in_lanes = min(4.0 + 0.25 * channels + 11.0 * factored, 150.0)
+    event_alone = 220.0 + 1.3 * channels + 30.0 * factored
+    one_leap = 1500.0 + 200.0 * channels + 250.0 * factored
     leaping = (facts["leaps"] + facts["rejected"]) * one_leap + facts["exact_events"] * event_alone
     return 1e-9 * facts["firings"] * event_in_lanes, 1e-9 * leaping
 

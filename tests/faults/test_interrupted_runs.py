@@ -312,3 +312,17 @@ def test_a_full_disk_ends_in_one_line(
     assert not path.exists()
     with contextlib.suppress(FileNotFoundError):
         check_what_is_there(tiny_disk, undisturbed)
+
+
+def test_parts_of_other_units_are_refused(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A version that packs otherwise must not take rows for others."""
+    system = driblet.loads(TEXT)
+    path = tmp_path / "run.h5"
+    monkeypatch.setattr(ensemble, "_UNIT_BYTES", 1)
+    monkeypatch.setattr(store.RunWriter, "finish", lambda *_: (_ for _ in ()).throw(KeyboardInterrupt))
+    with pytest.raises(driblet.InterruptedRunError):
+        driblet.run(system, path, replicates=200, duration=1.0)
+    monkeypatch.undo()
+    with pytest.raises(driblet.InputError, match="holds parts made by another version"):
+        driblet.run(system, path, replicates=200, duration=1.0, resume=True)
+    assert driblet.run(system, path, replicates=200, duration=1.0, force=True).complete

@@ -1,7 +1,7 @@
 """The leap engine: what is laid out for it once, and one call of the contract. See contract.py and leaps.py.
 
-A replicate's bits belong to the machine's instruction set and library (draws.py) and to the recording grid, at whose points
-leaps end; they depend on nothing else.
+A replicate's bits belong to the machine's instruction set and library (draws.py) and to the times at which leaps end: the
+recording grid, the windows of statistics where they are kept, those of averaged requirements. They depend on nothing else.
 """
 
 from __future__ import annotations
