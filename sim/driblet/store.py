@@ -59,7 +59,9 @@ class RunWriter:
                 with open_file(shard) as file, reading(str(shard)):
                     if file.attrs["identity"] != layout.identity:
                         raise one_problem(str(parts), "", "holds parts of another run; --force discards them")
-                    if file["provenance"].attrs["replicates_per_unit"] != layout.unit:  # units would not be the same rows
+                    if (
+                        file["provenance"].attrs["replicates_per_unit"] != layout.unit
+                    ):  # units would not be the same rows
                         raise one_problem(str(parts), "", "holds parts made by another version; --force discards them")
                     self.done.update(int(u) for u in file["provenance/units"][:])
 
