@@ -149,7 +149,7 @@ def core_seconds(facts: dict[str, float]) -> tuple[float, float]:
     """About what the pilot's stretch takes a core by exact events in lanes, and by leaps, s. Measured once
     (tests/benchmarks/leaps.py); only the ratio decides anything."""
     channels, factored = facts["channels"], facts["channels_with_factors"]
-    event_in_lanes = min(4.0 + 0.25 * channels + 11.0 * factored, 150.0)
+    event_in_lanes = min(4.0 + 0.25 * channels + 5.5 * factored, 150.0)
     event_alone = 220.0 + 1.3 * channels + 30.0 * factored
     one_leap = 1500.0 + 200.0 * channels + 250.0 * factored
     leaping = (facts["leaps"] + facts["rejected"]) * one_leap + facts["exact_events"] * event_alone
