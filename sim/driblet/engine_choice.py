@@ -151,7 +151,7 @@ def core_seconds(facts: dict[str, float]) -> tuple[float, float]:
     channels, factored = facts["channels"], facts["channels_with_factors"]
     event_in_lanes = min(4.0 + 0.25 * channels + 5.5 * factored, 150.0)
     event_alone = 220.0 + 1.3 * channels + 30.0 * factored
-    one_leap = 1500.0 + 200.0 * channels + 250.0 * factored
+    one_leap = 900.0 + 110.0 * channels + 130.0 * factored
     leaping = (facts["leaps"] + facts["rejected"]) * one_leap + facts["exact_events"] * event_alone
     return 1e-9 * facts["firings"] * event_in_lanes, 1e-9 * leaping
 

@@ -13,7 +13,7 @@ import math
 import numpy as np
 from numba import njit
 
-from driblet.engines.compile_cache import CACHE
+from driblet.engines.compile_cache import CACHE, bare
 from driblet.engines.random_stream import next_word, selection_uniform, waiting_uniform
 
 INVERTED_BELOW = 10.0  # mean, where rejection becomes the faster
@@ -25,7 +25,7 @@ def uniform(stream, r):  # type: ignore[no-untyped-def]
     return waiting_uniform(next_word(stream, r))
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def normal(stream, r):  # type: ignore[no-untyped-def]
     """A standard normal number, two words (Box & Muller, Ann. Math. Stat. 29:610, 1958)."""
     radius = math.sqrt(-2.0 * math.log(waiting_uniform(next_word(stream, r))))
@@ -42,7 +42,7 @@ def rounded(value, stream, r):  # type: ignore[no-untyped-def]
     return whole
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def log_factorial(k):  # type: ignore[no-untyped-def]
     """ln k! for a whole k >= 0: the product for small k, else Stirling's series (error below 1e-12)."""
     if k < 10.0:
@@ -56,7 +56,7 @@ def log_factorial(k):  # type: ignore[no-untyped-def]
     return (k + 0.5) * math.log(k) - k + 0.9189385332046727 + series
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def poisson(mean, stream, r):  # type: ignore[no-untyped-def]
     """A Poisson number as a float; 0 for a mean of 0."""
     if not mean > 0.0:
@@ -89,7 +89,7 @@ def poisson(mean, stream, r):  # type: ignore[no-untyped-def]
             return k
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def binomial(n, p, stream, r):  # type: ignore[no-untyped-def]
     """A binomial number as a float; n : a whole float >= 0, 0 <= p <= 1."""
     if not n > 0.0 or not p > 0.0:
@@ -101,7 +101,7 @@ def binomial(n, p, stream, r):  # type: ignore[no-untyped-def]
     return _binomial(n, p, stream, r)
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def _binomial(n, p, stream, r):  # type: ignore[no-untyped-def]
     """p <= 1/2."""
     odds = p / (1.0 - p)
@@ -139,7 +139,7 @@ def _binomial(n, p, stream, r):  # type: ignore[no-untyped-def]
             return k
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def regular(mean, variance, stream, r):  # type: ignore[no-untyped-def]
     """A whole number >= 0 of the given mean and of a variance below it: binomial; Poisson where variance >= mean.
 
@@ -166,7 +166,7 @@ def regular(mean, variance, stream, r):  # type: ignore[no-untyped-def]
     return binomial(chosen, min(1.0, mean / chosen), stream, r)
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def fill(kind, first, second, stream, out):  # type: ignore[no-untyped-def]
     """Fill `out` from stream 0: kind 0 Poisson(first), 1 binomial(first, second), 2 regular(first, second), 3 normal."""
     for i in range(out.size):

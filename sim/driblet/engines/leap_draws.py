@@ -5,9 +5,8 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit
 
-from driblet.engines.compile_cache import CACHE
+from driblet.engines.compile_cache import bare
 from driblet.engines.draws import binomial, normal, poisson, regular, rounded
 from driblet.engines.leap_steps import clipped
 
@@ -17,7 +16,7 @@ MANY = 9.0  # variance of turnovers in a leap from which they are drawn jointly,
 REACH = 9.0  # times that variance: the square of what fires, so that a normal number hardly ever asks for more than there is
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def draw_independent(f, b, excess, stream, r, k, forward_drawn, backward_drawn):  # type: ignore[no-untyped-def]
     """Firings of pair k both ways with means f and b. excess : by how much the variance of the net is to be less than f + b;
     taken off the busier direction, or added to both where it is negative."""
@@ -39,7 +38,7 @@ def draw_independent(f, b, excess, stream, r, k, forward_drawn, backward_drawn):
     backward_drawn[k] = less
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def one_way(number, mean, fix, stream, r):  # type: ignore[no-untyped-def]
     """Firings of a channel without a reverse: the `number` drawn about `mean`, moved by `fix` on average and never below zero.
     A few are thinned where they are to be fewer, which leaves a Poisson number one of the smaller mean."""
@@ -48,7 +47,7 @@ def one_way(number, mean, fix, stream, r):  # type: ignore[no-untyped-def]
     return clipped(number + rounded(fix, stream, r))
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def enzyme_noise(  # type: ignore[no-untyped-def]
     e, monomial_start, variable_start, species, held, row_start, at, coefficients, counts, activities, J, value, C
 ):
@@ -75,7 +74,7 @@ def enzyme_noise(  # type: ignore[no-untyped-def]
             g += 1
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def draw_jointly(  # type: ignore[no-untyped-def]
     first_law, last_law, law_pair, law_turns, unit, activities, J, C, scale, there, back, stream, r, lower, turned, big,
     forward_drawn, backward_drawn,
@@ -147,7 +146,7 @@ def draw_jointly(  # type: ignore[no-untyped-def]
     return missed == 0
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def draw_turnovers(  # type: ignore[no-untyped-def]
     e, copies, step, activities, law_start, law_pair, law_turns, unit, monomial_start, variable_start, ligand, held, row_start,
     at, coefficients, counts, forward, backward, critical, there, back, stream, r, J, value, C, lower, turned, big, more, fewer,

@@ -10,7 +10,7 @@ import math
 import numpy as np
 from numba import njit
 
-from driblet.engines.compile_cache import CACHE
+from driblet.engines.compile_cache import CACHE, bare
 from driblet.engines.factors import factor_value
 
 U = np.uint64
@@ -29,7 +29,7 @@ def clipped(x):  # type: ignore[no-untyped-def]
     return x if x > 0.0 else 0.0
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def one_pace(  # type: ignore[no-untyped-def]
     j, reactant, offset, factored, first, top, end, parent, node, less, constants, below, above, counts, scratch
 ):
@@ -42,7 +42,7 @@ def one_pace(  # type: ignore[no-untyped-def]
     return own
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def all_propensities(reactant, offset, rows, start, parent, node, less, constants, counts, scratch, w, pace):  # type: ignore[no-untyped-def]
     """w : (M,), propensities; pace : (channels with a factor,), as in factors.py.
 
@@ -69,7 +69,7 @@ def all_propensities(reactant, offset, rows, start, parent, node, less, constant
         w[j] = constants[j] * own
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def all_slopes(  # type: ignore[no-untyped-def]
     reactant, offset, rows, start, parent, node, less, constants, counts, scratch, adjoint, gradient, depend_start,
     depend_species, slope
@@ -119,7 +119,7 @@ def all_slopes(  # type: ignore[no-untyped-def]
         gradient[a], gradient[b], gradient[c] = 0.0, 0.0, 0.0
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def integrate_row(factor, offset, paced, counts, running, pace, span):  # type: ignore[no-untyped-def]
     """recording.integrate for rows of one replicate."""
     for q in range(factor.shape[0]):
@@ -130,7 +130,7 @@ def integrate_row(factor, offset, paced, counts, running, pace, span):  # type: 
         running[U(paced[k, 0])] += pace[U(paced[k, 1])] * span
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def mark_critical(w, counts, taken_start, taken_species, taken_amount, critical):  # type: ignore[no-untyped-def]
     """critical : (M,), 1 where fewer than CRITICAL firings are left; returns their total propensity."""
     total = 0.0
@@ -146,7 +146,7 @@ def mark_critical(w, counts, taken_start, taken_species, taken_amount, critical)
     return total
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def jacobian(  # type: ignore[no-untyped-def]
     pair, sense, depend_start, depend_species, slope, critical, touch_start, touch_pair, touch_amount, matrix, pull
 ):
@@ -178,7 +178,7 @@ def jacobian(  # type: ignore[no-untyped-def]
     return min(trace, widest)
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def leap_length(  # type: ignore[no-untyped-def]
     w, critical, forward, backward, pair, order, change_start, change_species, change_amount, depend_start, depend_species,
     slope, pull, tolerance, bound, drift, spread,
@@ -231,7 +231,7 @@ def leap_length(  # type: ignore[no-untyped-def]
     return tau
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def factorise(matrix, half, lu, pivot):  # type: ignore[no-untyped-def]
     """LU of I - half * matrix with partial pivoting, in place of `lu`; half : tau / 2."""
     K = matrix.shape[0]
@@ -257,7 +257,7 @@ def factorise(matrix, half, lu, pivot):  # type: ignore[no-untyped-def]
                     lu[k, m] -= own * lu[c, m]
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def solve(lu, pivot, x):  # type: ignore[no-untyped-def]
     """Solve in place with the factors of `factorise`."""
     K = x.size
@@ -279,7 +279,7 @@ def solve(lu, pivot, x):  # type: ignore[no-untyped-def]
         x[k] = total / lu[k, k]
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def correct(  # type: ignore[no-untyped-def]
     newton, shrinks, step, reactant, offset, rows, start, parent, node, less, constants, counts, scratch, forward, backward,
     critical, change_start, change_species, change_amount, there, back, more, fewer, matrix, lu, pivot, end, end_w, end_pace,

@@ -15,9 +15,8 @@ parts, as do gross firings; what fires alone does so at the end.
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 
-from driblet.engines.compile_cache import CACHE
+from driblet.engines.compile_cache import bare
 from driblet.engines.contract import (
     COUNT_OVERFLOW,
     NOTHING_CAN_FIRE,
@@ -55,7 +54,7 @@ LEAPS, IMPLICIT, EVENTS, CRITICAL_EVENTS, REJECTED, UNCORRECTED, LONGEST, STIFFE
 WORK = 8
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def pass_marks(samples, averages, r, sample, clock, counts, firings, running):  # type: ignore[no-untyped-def]
     """Record the grid points and window edges up to `clock` with the present state; returns the next grid point.
 
@@ -80,7 +79,7 @@ def pass_marks(samples, averages, r, sample, clock, counts, firings, running):  
     return sample
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def hold(samples, averages, r, sample, counts, firings, running):  # type: ignore[no-untyped-def]
     """A replicate stops early: its state stands on the rest of the grid, its window ends."""
     while sample < samples.time.size:
@@ -99,7 +98,7 @@ def hold(samples, averages, r, sample, counts, firings, running):  # type: ignor
     return sample
 
 
-@njit(nogil=True, cache=CACHE, error_model="numpy")
+@bare
 def advance_leaps(  # type: ignore[no-untyped-def]
     network, pairs, turnover, touch_start, touch_pair, touch_amount, factor_row, nodes, rates, noise_at, tolerance, stiffness,
     state, samples, budget, recorders, judging, work, room,
