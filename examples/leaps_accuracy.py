@@ -16,7 +16,7 @@ from matplotlib.figure import Figure
 
 import driblet
 from driblet.error_estimate import ErrorEstimate
-from driblet_analysis.compare import at_volume
+from driblet.volume import at_volume
 from driblet_analysis.figures import COLOURS, save, style
 
 FILE = Path(__file__).parents[1] / "configs" / "lumped_vesicle.toml"

@@ -114,7 +114,7 @@ def pilot(
     simulated_s; firings, leaps, exact_events, rejected; stiffest : longest leap in relaxation times; pairs.
     """
     from driblet.engines.contract import RUNNING, new_samples, new_state
-    from driblet.engines.leaps import CRITICAL_EVENTS, EVENTS, LEAPS, REJECTED, STIFFEST
+    from driblet.engines.leap_arrays import CRITICAL_EVENTS, EVENTS, LEAPS, REJECTED, STIFFEST
     from driblet.loading import additions_of, prepare
     from driblet.segments import begin, segments
 
@@ -132,6 +132,8 @@ def pilot(
         while calls > 0 and (state.reason == RUNNING).any():
             engine.advance(rates, state, part, _PILOT_CALL, None, work)
             calls -= 1
+        if (state.reason == RUNNING).any():
+            break  # the next segment would set its clock on
     return {
         "simulated_s": float(state.clock[0]),
         "firings": float(state.firings.sum()),

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import itertools
 import json
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -25,6 +25,7 @@ from driblet.readouts import copies_in
 from driblet.segments import begin, keep, segments
 from driblet.system import RunSettings, System
 from driblet.system.expressions import Reference
+from driblet.volume import at_volume
 
 TIMES = 8
 COMPARTMENTS = 16  # for the spread between them
@@ -137,17 +138,7 @@ def _large(system: System, choice: EngineChoice, time_s: Array) -> Array:
     omega = system.compartment.omega
     most = max(s.mean_copies(omega) for s in system.free_species)
     size = min(1e6, MOST_COPIES / max(1.0, most))
-    compartment = replace(
-        system.compartment, volume_L=system.compartment.volume_L * size, cv=0.0, diameter_m=None, wall_m=0.0, sizes_L=()
-    )
-    species = tuple(
-        replace(s, copies=None if s.copies is None else float(round(s.copies * size)), loading="nearest")
-        for s in system.species
-    )
-    additions = tuple(
-        a if a.copies is None else replace(a, copies=float(round(a.copies * size))) for a in system.additions
-    )
-    large = replace(system, compartment=compartment, species=species, additions=additions)
+    large = at_volume(system, system.compartment.volume_L * size)
     counts, reached = _leap(large, Network.of(large), choice, time_s, [0], 0, 0)
     if reached < len(time_s):
         raise ArithmeticError("leaps in a large compartment take too long: their error is not estimated")

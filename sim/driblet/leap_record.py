@@ -7,18 +7,28 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from driblet.engines.leap_arrays import (
+    CRITICAL_EVENTS,
+    EVENTS,
+    IMPLICIT,
+    LEAPS,
+    LONGEST,
+    REJECTED,
+    STIFFEST,
+    UNCORRECTED,
+)
 from driblet.run_file import PerReplicate
 
-# name in the group `leaping`, its column in the kernel's `work`, dtype, unit
+# name in the group `leaping`, its column of `work`, dtype, unit
 _KEPT: tuple[tuple[str, int, Any, str], ...] = (
-    ("leaps", 0, np.int64, "1"),
-    ("implicit_leaps", 1, np.int64, "1"),
-    ("exact_events", 2, np.int64, "1"),
-    ("critical_events", 3, np.int64, "1"),
-    ("rejected_leaps", 4, np.int64, "1"),
-    ("uncorrelated_turnovers", 5, np.int64, "1"),
-    ("longest_leap", 6, np.float64, "s"),
-    ("longest_leap_in_relaxation_times", 7, np.float64, "1"),
+    ("leaps", LEAPS, np.int64, "1"),
+    ("implicit_leaps", IMPLICIT, np.int64, "1"),
+    ("exact_events", EVENTS, np.int64, "1"),
+    ("critical_events", CRITICAL_EVENTS, np.int64, "1"),
+    ("rejected_leaps", REJECTED, np.int64, "1"),
+    ("uncorrelated_turnovers", UNCORRECTED, np.int64, "1"),
+    ("longest_leap", LONGEST, np.float64, "s"),
+    ("longest_leap_in_relaxation_times", STIFFEST, np.float64, "1"),
 )
 
 
@@ -28,5 +38,5 @@ def leap_arrays() -> tuple[PerReplicate, ...]:
 
 
 def leap_values(work: NDArray[np.float64]) -> dict[str, NDArray[Any]]:
-    """Their values by path. work : (R, WORK) of engines/leaps.py."""
+    """Their values by path. work : (R, WORK) of engines/leap_arrays.py."""
     return {f"leaping/{name}": work[:, column].astype(dtype) for name, column, dtype, _ in _KEPT}

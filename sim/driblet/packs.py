@@ -27,7 +27,7 @@ from driblet.engines.contract import (
 )
 from driblet.engines.exact import ExactEngine
 from driblet.engines.leap import LeapEngine
-from driblet.engines.leaps import WORK
+from driblet.engines.leap_arrays import WORK
 from driblet.errors import InterruptedRunError, one_problem
 from driblet.events import EventRecord
 from driblet.leap_record import leap_values

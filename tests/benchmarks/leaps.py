@@ -23,7 +23,7 @@ import numpy as np
 import driblet
 from driblet.engine_choice import core_seconds, leap_engine, leap_rates
 from driblet.engines.contract import RUNNING, new_samples, new_state
-from driblet.engines.leaps import CRITICAL_EVENTS, EVENTS, LEAPS, REJECTED
+from driblet.engines.leap_arrays import CRITICAL_EVENTS, EVENTS, LEAPS, REJECTED
 from driblet.loading import prepare
 from driblet.lumping import treated
 from driblet.network import Network

@@ -25,7 +25,8 @@ from driblet.loading import prepare
 from driblet.lumping import treated
 from driblet.network import Network
 from driblet.quantities import read_quantity
-from driblet_analysis.compare import Way, at_volume, compare
+from driblet.volume import at_volume
+from driblet_analysis.compare import Way, compare
 
 FILE = Path(__file__).parents[2] / "configs" / "lumped_vesicle.toml"
 LANES = 64

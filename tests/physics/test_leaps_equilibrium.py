@@ -14,7 +14,7 @@ from scipy import stats
 
 import driblet
 from driblet.engine_choice import LONGEST_LEAP, LONGEST_LEAP_IN_TIME, stiffness_for
-from driblet.engines.leaps import EVENTS, IMPLICIT, LEAPS, STIFFEST
+from driblet.engines.leap_arrays import EVENTS, IMPLICIT, LEAPS, STIFFEST
 from driblet.network import Network
 from driblet_analysis.references.count_equilibrium import count_law
 from driblet_analysis.references.master_equation import MasterEquation, Transient

@@ -13,8 +13,8 @@ from scipy import stats
 from scipy.linalg import expm
 
 import driblet
+from driblet.engines.leap_arrays import IMPLICIT, LEAPS, REJECTED, STIFFEST
 from driblet.engines.leap_steps import EXPLICIT_BELOW, FEW, MOST_SOLVED
-from driblet.engines.leaps import IMPLICIT, LEAPS, REJECTED, STIFFEST
 from driblet.statistics import holm
 from tests.physics.support import FALSE_ALARM
 from tests.unit.leap_cases import HEAD, Leaped, leap

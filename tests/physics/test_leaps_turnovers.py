@@ -12,7 +12,7 @@ import pytest
 from scipy.stats import chi2, norm
 
 import driblet
-from driblet.engines.leaps import LEAPS, UNCORRECTED
+from driblet.engines.leap_arrays import LEAPS, UNCORRECTED
 from driblet.lumping import treated
 from driblet.system.mechanisms.turnover_noise import turnover_noise
 from tests.physics.support import FALSE_ALARM

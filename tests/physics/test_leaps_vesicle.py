@@ -20,7 +20,8 @@ from driblet.engines.leap_arrays import no_turnover
 from driblet.engines.leap_steps import all_propensities, clipped
 from driblet.network import Network
 from driblet.turnover_arrays import TurnoverTable
-from driblet_analysis.compare import Comparison, Way, at_volume, compare
+from driblet.volume import at_volume
+from driblet_analysis.compare import Comparison, Way, compare
 from tests.physics.leap_problems import stiff_dimerising
 from tests.physics.test_leaps_turnovers import equal
 from tests.unit.leap_cases import HEAD, leaps_that_need_not_pay, lumped

@@ -9,7 +9,8 @@ import pytest
 from scipy.stats import chi2
 
 import driblet
-from driblet_analysis.compare import Comparison, Way, at_volume, compare
+from driblet.volume import at_volume
+from driblet_analysis.compare import Comparison, Way, compare
 
 FILE = Path(__file__).parents[2] / "configs" / "lumped_vesicle.toml"
 VOLUME = 0.02e-15

@@ -10,7 +10,8 @@ from scipy.stats import ks_2samp
 
 import driblet
 from driblet.commands.main import main
-from driblet_analysis.compare import Way, at_volume, compare, differences, kolmogorov_distance
+from driblet.volume import at_volume
+from driblet_analysis.compare import Way, compare, differences, kolmogorov_distance
 
 TEXT = """
 title = "Buffer"

@@ -124,3 +124,17 @@ def test_screens_tell_of_leaps(tmp_path: Path, capsys: pytest.CaptureFixture[str
     assert engine["estimated_core_seconds"] < 60
     assert main(["run", str(VESICLE), "--replicates", "4", "--duration", "10 min", "-o", str(path), "--resume"]) == 0
     assert "complete already" in capsys.readouterr().out
+
+
+def test_a_pilot_out_of_work_before_an_addition_says_how_far_it_came(monkeypatch: pytest.MonkeyPatch) -> None:
+    from driblet import engine_choice
+    from driblet.network import Network
+    from driblet.treatments import with_treatments
+
+    late = '\n[additions.more]\nat = "50 min"\nspecies = "ATP"\namount = "1 mM"\n'
+    system, _ = with_treatments(driblet.loads(driblet.load(VESICLE).text + late))
+    monkeypatch.setattr(engine_choice, "_PILOT_BUDGET", 1 << 10)
+    monkeypatch.setattr(engine_choice, "_PILOT_CALL", 1 << 10)
+    choice = engine_choice.choose_engine(system, Network.of(system), system.settings)
+    assert choice.facts["leaps"] > 0
+    assert 0.0 < choice.facts["simulated_s"] < 3000.0

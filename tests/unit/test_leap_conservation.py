@@ -15,8 +15,7 @@ import driblet
 from driblet.engine_choice import leap_engine, leap_rates
 from driblet.engines.contract import RUNNING, EnsembleState, Samples, new_samples, new_state
 from driblet.engines.leap import LeapEngine
-from driblet.engines.leap_arrays import pairs_of
-from driblet.engines.leaps import LEAPS
+from driblet.engines.leap_arrays import LEAPS, pairs_of
 from driblet.loading import prepare
 from driblet.network import Network
 from tests.unit.engine_cases import random_network

@@ -64,12 +64,13 @@ def compare(
     that agree are told apart in at most 5 % of cases.
     """
     from driblet.system import load
+    from driblet.volume import at_volume
     from driblet_analysis import compare as comparing
 
     ways = _ways(treatments, engines)
     system = load(file)
     if volume is not None:
-        system = comparing.at_volume(system, volume)
+        system = at_volume(system, volume)
     span = duration or system.settings.duration_s
     if not span > 0:
         raise one_problem(str(file), "run.duration", "is missing: state it there or with --duration")

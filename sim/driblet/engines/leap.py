@@ -11,8 +11,8 @@ from numpy.typing import NDArray
 
 from driblet.engines.contract import EnsembleState, NetworkArrays, Recorders, Samples
 from driblet.engines.factors import factor_rows, most_nodes
-from driblet.engines.leap_arrays import Pairs, Turnover, new_room, no_turnover
-from driblet.engines.leaps import WORK, advance_leaps
+from driblet.engines.leap_arrays import WORK, Pairs, Turnover, new_room, no_turnover
+from driblet.engines.leaps import advance_leaps
 from driblet.engines.recorders import recorders_for
 
 

@@ -12,6 +12,10 @@ from driblet.engines.contract import NetworkArrays
 Ints = NDArray[np.int64]
 Floats = NDArray[np.float64]
 
+# columns of `work`, what was done in each replicate
+LEAPS, IMPLICIT, EVENTS, CRITICAL_EVENTS, REJECTED, UNCORRECTED, LONGEST, STIFFEST = range(8)
+WORK = 8
+
 
 class Pairs(NamedTuple):
     """The K reversible pairs of a network of M channels; a leap moves along net extents of pairs.

@@ -27,6 +27,16 @@ from driblet.engines.contract import (
 )
 from driblet.engines.draws import rounded
 from driblet.engines.judging import all_decided, judge_all
+from driblet.engines.leap_arrays import (
+    CRITICAL_EVENTS,
+    EVENTS,
+    IMPLICIT,
+    LEAPS,
+    LONGEST,
+    REJECTED,
+    STIFFEST,
+    UNCORRECTED,
+)
 from driblet.engines.leap_draws import SOME, draw_independent, draw_turnovers, one_way
 from driblet.engines.leap_steps import (
     EXPLICIT_BELOW,
@@ -48,10 +58,6 @@ U = np.uint64
 BURST = 100  # exact events before leaping is thought of again
 PAYS = 10.0  # events in a leap from which it is worth its cost
 LEAP_COST = 40  # of the budget, in events
-
-# columns of `work`
-LEAPS, IMPLICIT, EVENTS, CRITICAL_EVENTS, REJECTED, UNCORRECTED, LONGEST, STIFFEST = range(8)
-WORK = 8
 
 
 @bare
